@@ -1,0 +1,1 @@
+"""Settings and control plan: models and commented examples."""

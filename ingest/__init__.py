@@ -1,0 +1,1 @@
+"""What comes in: finding, reading, checking and storing drops."""

@@ -1,0 +1,1 @@
+"""The front door: command line, schedule, the nightly pass."""

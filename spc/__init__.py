@@ -1,0 +1,1 @@
+"""Statistics, records and monitoring: the engine of yellowbay."""

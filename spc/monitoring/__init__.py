@@ -1,0 +1,1 @@
+"""From records to statistics and back: streams, points, baselines, signals, excursions."""

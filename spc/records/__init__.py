@@ -1,0 +1,1 @@
+"""The database: tables, migrations and one module per kind of question asked of it."""

@@ -1,0 +1,1 @@
+"""Pure statistics on arrays: no files, no database, no clock, no configuration."""
