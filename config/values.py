@@ -23,11 +23,11 @@ _DURATION_UNITS = {"min": "minutes", "h": "hours", "d": "days", "w": "weeks"}
 LENGTH_NM = {
     "nm": 1.0,
     "um": 1e3,
-    "µm": 1e3,  # micro sign
-    "μm": 1e3,  # Greek mu
+    "\u00b5m": 1e3,  # micro sign
+    "\u03bcm": 1e3,  # Greek mu
     "micron": 1e3,
-    "Å": 0.1,  # letter
-    "Å": 0.1,  # angstrom sign
+    "\u00c5": 0.1,  # letter A with ring
+    "\u212b": 0.1,  # angstrom sign
     "A": 0.1,
     "angstrom": 0.1,
     "pm": 1e-3,
