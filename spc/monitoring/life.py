@@ -7,6 +7,7 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 from datetime import datetime
+from typing import Any
 
 from sqlalchemy import Connection
 
@@ -139,7 +140,7 @@ def _record(
     hand: Hand,
     action: str,
     text: str,
-    detail: dict[str, object] | None = None,
+    detail: dict[str, Any] | None = None,
 ) -> None:
     subject = findings.subject(number)
     actions.append(connection, actions.Action(hand.at, hand.who, subject, action, text, detail))

@@ -51,7 +51,7 @@ def append(connection: Connection, action: Action) -> int:
         detail,
         last or START,
     )
-    result = connection.execute(
+    key = connection.execute(
         actions.insert().values(
             at_us=fields[0],
             who=action.who,
@@ -62,8 +62,9 @@ def append(connection: Connection, action: Action) -> int:
             previous_hash=fields[6],
             hash=_digest(fields),
         )
-    )
-    return int(result.inserted_primary_key[0])
+    ).inserted_primary_key
+    assert key is not None  # an insert of one row has a key
+    return int(key[0])
 
 
 def of(connection: Connection, subject: str) -> Sequence[Row[Any]]:

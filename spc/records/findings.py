@@ -70,7 +70,7 @@ def opened(
 ) -> int:
     """Open a new excursion; returns its id."""
     stamp = to_us(as_of)
-    number = connection.execute(
+    key = connection.execute(
         excursions.insert().values(
             status="open",
             tier=tier,
@@ -80,9 +80,11 @@ def opened(
             updated_us=stamp,
             payload=_dump(payload),
         )
-    ).inserted_primary_key[0]
+    ).inserted_primary_key
+    assert key is not None  # an insert of one row has a key
+    number = int(key[0])
     _remember(connection, number, stamp, "opened", tier, pattern, payload)
-    return int(number)
+    return number
 
 
 def updated(
