@@ -173,11 +173,13 @@ class Characteristic(Strict):
 class ControlPlan(Strict):
     """The whole of `control_plan.toml`."""
 
-    characteristic: tuple[Characteristic, ...] = Field(min_length=1)
+    characteristic: tuple[Characteristic, ...]
 
     @field_validator("characteristic")
     @classmethod
     def _by_name(cls, value: tuple[Characteristic, ...]) -> tuple[Characteristic, ...]:
+        if not value:
+            raise ValueError("nothing is watched; write at least one [[characteristic]]")
         names = [c.name for c in value]
         twice = sorted({n for n in names if names.count(n) > 1})
         if twice:

@@ -6,6 +6,7 @@ carries all of them at once.
 
 from __future__ import annotations
 
+import re
 from dataclasses import dataclass
 from typing import Any
 
@@ -41,5 +42,6 @@ class ConfigurationError(Exception):
 
 
 def _shorten(value: Any) -> str:
-    text = repr(value)
+    # A password in a URL must not travel on into logs and terminals.
+    text = re.sub(r"(://[^/@:\s]*:)[^/@\s]+@", r"\1***@", repr(value))
     return text if len(text) <= _VALUE_WIDTH else text[: _VALUE_WIDTH - 1] + "…"
