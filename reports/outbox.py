@@ -163,3 +163,13 @@ def states(connection: Connection) -> dict[str, int]:
     """How many messages are in each state."""
     rows = connection.execute(select(outbox.c.state, func.count()).group_by(outbox.c.state))
     return {state: int(count) for state, count in rows}
+
+
+def trouble(connection: Connection) -> str | None:
+    """Last error of the messages that were not delivered yet, None when there is none."""
+    return connection.scalar(
+        select(outbox.c.last_error)
+        .where(outbox.c.last_error.is_not(None), outbox.c.state != "sent")
+        .order_by(outbox.c.id.desc())
+        .limit(1)
+    )
