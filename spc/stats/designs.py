@@ -46,7 +46,7 @@ class EwmaDesign:
     time_varying : bool
         True: the exact sd of Z_t since the start; False: its limit for long times.
     fast_start : float, optional
-        In (0, 1): the limits start at this share of their width and open to all but 1 % by
+        In (0, 0.95]: the limits start at this share of their width and open to all but 1 % by
         point 20 (Steiner 1999, Journal of Quality Technology 31:75-86, from memory); implies
         limits that vary with time.  None for none.
     """
@@ -62,8 +62,8 @@ class EwmaDesign:
         if not (math.isfinite(self.limit) and self.limit > 0.0):
             raise ValueError(f"EWMA limit L must be above 0, not {self.limit:g}")
         if self.fast_start is not None:
-            if not 0.0 < self.fast_start < 1.0:
-                raise ValueError(f"EWMA fast start must be in (0, 1), not {self.fast_start:g}")
+            if not 0.0 < self.fast_start <= 0.95:
+                raise ValueError(f"EWMA fast start must be in (0, 0.95], not {self.fast_start:g}")
             object.__setattr__(self, "time_varying", True)
 
     @property

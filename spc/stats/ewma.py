@@ -13,7 +13,15 @@ import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
 from spc.stats.designs import EwmaDesign
-from spc.stats.segments import BoolArray, FloatArray, IntArray, Missing, as_points, find_runs, map_rows
+from spc.stats.segments import (
+    BoolArray,
+    FloatArray,
+    IntArray,
+    Missing,
+    as_points,
+    find_runs,
+    map_rows,
+)
 
 
 @dataclass(frozen=True)
@@ -145,7 +153,7 @@ def ewma_chart(
 
     def spread_out(block: FloatArray, rows: IntArray) -> tuple[FloatArray]:
         first = block[:, 0] * (0.0 if design.time_varying else lam / (2.0 - lam))
-        return (_recursion(lam**2 * block, (1.0 - lam) ** 2, first),)
+        return (first_order_recursion(lam**2 * block, (1.0 - lam) ** 2, first),)
 
     deviation, age = np.full(points.shape, np.nan), np.ones(points.shape)
     variance = np.full(points.shape, np.nan)
@@ -185,14 +193,31 @@ def _per_stream(value: ArrayLike, points: FloatArray, name: str) -> FloatArray:
 
 
 def _smooth(block: FloatArray, lam: float, start: FloatArray) -> FloatArray:
-    return _recursion(lam * block, 1.0 - lam, start)
+    return first_order_recursion(lam * block, 1.0 - lam, start)
 
 
-def _recursion(inputs: FloatArray, keep: float, start: FloatArray) -> FloatArray:
-    """``y_t = inputs_t + keep y_{t-1}`` along rows, ``y_0 = start``."""
-    from scipy.signal import lfilter
+def first_order_recursion(inputs: FloatArray, keep: float, start: FloatArray) -> FloatArray:
+    """Return ``y_t = inputs_t + keep y_{t-1}`` along rows, from ``y_0 = start``.
 
-    if keep == 0.0:
-        return inputs
-    out, _ = lfilter([1.0], [1.0, -keep], inputs, axis=-1, zi=keep * start[:, None])
-    return np.asarray(out)
+    Parameters
+    ----------
+    inputs : array, shape (streams, n)
+    keep : float
+        In (-1, 1).
+    start : array, shape (streams,)
+
+    Notes
+    -----
+    By doubling: after pass p a value holds the last ``2^p`` inputs, and the passes stop where
+    what is left weighs nothing.  As fast as a compiled filter, and no heavy import.
+    """
+    out = inputs.copy()
+    reach, weight = 1, keep
+    spare = np.empty_like(out)
+    while reach < out.shape[1] and abs(weight) > 1e-18:
+        held = np.multiply(out[:, :-reach], weight, out=spare[:, reach:])
+        out[:, reach:] += held
+        reach, weight = 2 * reach, weight * weight
+    if keep != 0.0 and start.any():
+        out += start[:, None] * keep ** np.arange(1, out.shape[1] + 1)
+    return out

@@ -23,7 +23,15 @@ from typing import Literal
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
-from spc.stats.segments import BoolArray, FloatArray, IntArray, Missing, as_points, find_runs, map_rows
+from spc.stats.segments import (
+    BoolArray,
+    FloatArray,
+    IntArray,
+    Missing,
+    as_points,
+    find_runs,
+    map_rows,
+)
 
 Kind = Literal["beyond", "one-side", "trending", "alternating", "within", "outside"]
 
@@ -66,7 +74,9 @@ class Rule:
         least = 2 if self.kind in ("one-side", "within", "outside") else 1
         least = 3 if self.kind in ("trending", "alternating") else least
         if not least <= self.m <= MAX_WINDOW:
-            raise ValueError(f"a {self.kind} rule needs {least} to {MAX_WINDOW} points, not {self.m}")
+            raise ValueError(
+                f"a {self.kind} rule needs {least} to {MAX_WINDOW} points, not {self.m}"
+            )
         if not 1 <= self.k <= self.m or (self.kind != "beyond" and self.k != self.m):
             raise ValueError(f"a {self.kind} rule cannot ask for {self.k} of {self.m} points")
         zoned = self.kind in ("beyond", "within", "outside")

@@ -15,7 +15,7 @@ from numpy.typing import ArrayLike, NDArray
 FloatArray = NDArray[np.float64]
 
 # Beyond this mean run length the plain LU solve gives way to one without subtractions.
-_LONG_RUN = 1e6
+_LONG_RUN = 1e7
 _SETTLED = 1e-13
 _MOST_STEPS = 200_000
 
@@ -72,7 +72,7 @@ class Chain:
 
 
 class Solver:
-    """Solve ``(I - T) x = b`` for the transient part T of a chain, also where it is nearly singular."""
+    """Solve ``(I - T) x = b``, T the transient part of a chain, also where nearly singular."""
 
     def __init__(self, step: FloatArray, leave: FloatArray) -> None:
         from scipy.linalg import lu_factor
@@ -166,7 +166,9 @@ def run_length_of(chain: Chain, n: ArrayLike | None, method: str) -> RunLength:
     if steps:
         first = head.sum() + chain.start @ once
         second = (2 * counts - 1) @ head
-        second += (2 * steps - 1) * (chain.start @ once) + 2.0 * (chain.start @ (chain.step @ twice))
+        second += (2 * steps - 1) * (chain.start @ once) + 2.0 * (
+            chain.start @ (chain.step @ twice)
+        )
     else:
         first = chain.start @ (chain.step @ once)
         second = 2.0 * (chain.start @ (chain.step @ twice)) - first
@@ -183,10 +185,11 @@ def run_length_of(chain: Chain, n: ArrayLike | None, method: str) -> RunLength:
     )
 
 
-def _check_counts(n: ArrayLike | None) -> NDArray[np.int64]:
+def check_counts(n: ArrayLike | None) -> NDArray[np.int64]:
+    """Return the counts asked for as whole numbers, at least 1, in one row."""
     asked = np.atleast_1d(np.asarray([] if n is None else n))
     if asked.size and (not np.all(asked == np.floor(asked)) or asked.min() < 1):
-        raise ValueError(f"the number of points must be whole and at least 1, not {n}")
+        raise ValueError(f"the number of points must be whole and at least 1, not {n!r}")
     return asked.astype(np.int64)
 
 
@@ -196,7 +199,7 @@ def _quantiles(chain: Chain, n: ArrayLike | None) -> tuple[float, FloatArray]:
     The walk stops when the distribution over states no longer changes; from there the run
     length is geometric.
     """
-    asked = _check_counts(n)
+    asked = check_counts(n)
     target = int(asked.max()) if asked.size else 0
     masses = list(chain.early)
     total = float(np.sum(chain.early))

@@ -85,7 +85,7 @@ def ewma_arl(lam: float, limit: float, shift: float) -> float:
 def node_count(design: EwmaDesign) -> int:
     """Odd number of nodes: about four to each sigma of the kernel, and some for the ends."""
     width = 2.0 * design.limit / math.sqrt(design.lam * (2.0 - design.lam))
-    return 2 * int(math.ceil(2.0 * width + 10.0)) + 1
+    return 2 * math.ceil(2.0 * width + 10.0) + 1
 
 
 def _half_width(design: EwmaDesign) -> float:

@@ -43,7 +43,9 @@ def rules_run_length(
     machine = rule_machine(design.rules, True)
     states = machine.following.shape[0]
     if states > _MOST_SOLVED:
-        raise NotAChainError(f"{design.text} has {states} states; at most {_MOST_SOLVED} are solved")
+        raise NotAChainError(
+            f"{design.text} has {states} states; at most {_MOST_SOLVED} are solved"
+        )
     step, leave = transitions(machine, shift)
     if steady_state:
         start = steady_start(*transitions(machine, 0.0))
@@ -53,7 +55,9 @@ def rules_run_length(
     return run_length_of(Chain(step, leave, start), n, "exact Markov chain")
 
 
-def transitions(machine: RuleMachine, mean: float, sd: float = 1.0) -> tuple[FloatArray, FloatArray]:
+def transitions(
+    machine: RuleMachine, mean: float, sd: float = 1.0
+) -> tuple[FloatArray, FloatArray]:
     """Chances between the states of a stopping machine, and chances of a signal from each."""
     chances = machine.zone_chances(mean, sd)
     states, zones = machine.following.shape
@@ -62,4 +66,4 @@ def transitions(machine: RuleMachine, mean: float, sd: float = 1.0) -> tuple[Flo
     cell = np.arange(states)[:, None] * states + machine.following
     step = np.bincount(cell[stay], weights=weight[stay], minlength=states * states)
     leave = np.where(stay, 0.0, weight).sum(axis=1)
-    return step.reshape(states, states), leave
+    return step.reshape(states, states).astype(np.float64), leave

@@ -119,7 +119,9 @@ def _fit_codes(segment: ArrayLike, shape: tuple[int, ...]) -> NDArray[Any]:
     try:
         return np.broadcast_to(codes, shape)
     except ValueError:
-        raise ValueError(f"segment codes of shape {codes.shape} do not fit points {shape}") from None
+        raise ValueError(
+            f"segment codes of shape {codes.shape} do not fit points {shape}"
+        ) from None
 
 
 def run_blocks(runs: Runs) -> list[tuple[IntArray, BoolArray]]:
