@@ -162,8 +162,8 @@ def nested_anova(summary: WaferSummary, *, site_df_lost: ArrayLike | None = None
     ms, variance = _moments(ss, df, total, [sum_by(lot_stream, part, size) for part in parts])
     with np.errstate(divide="ignore", invalid="ignore"):
         f_lot, f_wafer = ms[:, 2] / ms[:, 1], ms[:, 1] / ms[:, 0]
-        p_lot = special.fdtrc(df[:, 2], df[:, 1], f_lot)
-        p_wafer = special.fdtrc(df[:, 1], df[:, 0], f_wafer)
+        p_lot = np.asarray(special.fdtrc(df[:, 2], df[:, 1], f_lot), dtype=np.float64)
+        p_wafer = np.asarray(special.fdtrc(df[:, 1], df[:, 0], f_wafer), dtype=np.float64)
     balanced = _balanced(summary, lot_stream, size)
     return NestedAnova(
         df, ss, ms, variance, f_lot, p_lot, f_wafer, p_wafer, centre + grand, balanced

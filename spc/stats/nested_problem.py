@@ -217,8 +217,8 @@ def _assemble(
     offset = -0.5 * (dof * np.log(2.0 * np.pi * scale**2) + log_counts)
     return Layout(
         centre, scale, counts.tools * with_tool, counts.lots, counts.wafers, counts.sites,
-        counts.site_df, constant & (counts.wafers > 0), constant | no_site | alike | ~fit, unknown, names,
-        _words(counts, has_site, one_wafer, with_tool), offset, np.flatnonzero(fit),
+        counts.site_df, constant & (counts.wafers > 0), constant | no_site | alike | ~fit,
+        unknown, names, _words(counts, has_site, one_wafer, with_tool), offset, np.flatnonzero(fit),
         start[fit], free[fit], problem,
     )  # fmt: skip
 
