@@ -1,0 +1,201 @@
+"""Greedy forward choice with joint refits: from one explanation to all of them.
+
+The best explanation is accepted while chance would not score as high, explained away, and the next
+is looked for in what is left. After each acceptance all effects are refitted in turn on what the
+others leave (backfitting), so an early, greedy choice can still change its onset, its form and its
+level; effects that one cause explains at least as well as all of them are made one.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import replace
+
+import numpy as np
+
+from spc.stats.attribution_calibration import Calibration, calibrate
+from spc.stats.attribution_candidates import Column, conjunction_within
+from spc.stats.attribution_effects import Effect
+from spc.stats.attribution_evidence import FloatArray, statistic_class
+from spc.stats.attribution_state import Candidate, Found, State
+
+_HOPELESS = -3.0
+_PASSES = 2
+_MERGE_SLACK = 1.0
+
+
+class Search:
+    """One search over a prepared bay: holds the effects found so far."""
+
+    def __init__(self, state: State) -> None:
+        self.state = state
+        self.found: list[Found] = []
+        self._calibration: Calibration | None = None
+
+    @property
+    def calibration(self) -> Calibration:
+        """The null of this design, drawn when first asked for."""
+        if self._calibration is None:
+            s = self.state
+            self._calibration = calibrate(
+                s.evidence, s.noise, s.columns, s.offsets, s.plans, s.options
+            )
+        return self._calibration
+
+    def left(self, without: Sequence[Found] = ()) -> FloatArray:
+        """Return the residuals after all effects found, except those in `without`."""
+        out = self.state.residual.copy()
+        for found in self.found:
+            if all(found is not other for other in without):
+                out[found.fit.cells] -= found.fit.explained
+        return out
+
+    def seed(self, previous: Sequence[Effect]) -> None:
+        """Take up effects of an earlier look that the data still bear out."""
+        for i, effect in enumerate(previous):
+            candidate = self._locate(effect.level.factors, effect.level.names)
+            if candidate is None:
+                continue
+            found = self._at(candidate, self.left())
+            if found is not None and found.profile.gain > 3.0:
+                self.found.append(replace(found, previous=i))
+        self.refit()
+
+    def run(self) -> list[Found]:
+        """Find effects until chance could do as well; returns them, strongest first."""
+        alpha = self.state.options.alpha
+        for _ in range(self.state.options.max_effects):
+            best = self.state.best(self.left(), self.state.plans)
+            if best is None or best.score < _HOPELESS:
+                break
+            if self.calibration.p_value(best.score) > alpha:
+                break
+            self.found.append(best)
+            self.refit()
+        self.settle()
+        return sorted(self.found, key=lambda f: -f.profile.gain)
+
+    def refit(self) -> None:
+        """Refit all effects in turn, level kept, onset, form and sizes free."""
+        for _ in range(_PASSES if len(self.found) > 1 else 0):
+            for i, found in enumerate(self.found):
+                again = self._at(found.candidate, self.left([found]))
+                if again is not None:
+                    self.found[i] = replace(again, previous=found.previous)
+
+    def settle(self) -> None:
+        """Let each effect change its level, make one of what one cause explains, drop the rest."""
+        for i in range(len(self.found)):
+            self._relevel(i)
+        self.refit()
+        self._merge()
+        self._absorb()
+        alpha = self.state.options.alpha
+        self.found = [
+            f
+            for f in self.found
+            if f.previous is not None or self.calibration.p_value(f.score) <= alpha
+        ]
+
+    def _at(self, candidate: Candidate, residual: FloatArray) -> Found | None:
+        profile = self.state.look(candidate, self.state.whitened(residual))
+        if profile is None:
+            return None
+        fit = self.state.fit(candidate, profile, residual)
+        return Found(candidate, profile, fit) if fit is not None else None
+
+    def _relevel(self, i: int) -> None:
+        found = self.found[i]
+        best = self.state.best(self.left([found]), self.state.all_plans, self._mask([found]))
+        if best is None or best.candidate.key == found.candidate.key:
+            return
+        if best.score > found.score + 0.5 and _overlap(best, found) > 0.3:
+            self.found[i] = replace(best, previous=found.previous)
+
+    def _mask(self, effects: Sequence[Found]) -> np.ndarray:
+        mask = np.zeros(len(self.state.residual), dtype=bool)
+        for found in effects:
+            mask[found.fit.cells] = True
+        return mask
+
+    def _merge(self) -> None:
+        """Replace effects of overlapping onsets by one that explains them at least as well."""
+        for found in list(self.found):
+            if all(found is not f for f in self.found):
+                continue
+            group = [f for f in self.found if _onsets_meet(f, found)]
+            if len(group) < 2:
+                continue
+            best = self.state.best(self.left(group), self.state.all_plans, self._mask(group))
+            if best is None or best.score < sum(f.score for f in group) - _MERGE_SLACK:
+                continue
+            if any(_overlap(f, best) == 0.0 for f in group):
+                continue
+            earlier = [f.previous for f in group if f.previous is not None]
+            keep = [f for f in self.found if all(f is not g for g in group)]
+            self.found = [*keep, replace(best, previous=min(earlier, default=None))]
+            self.refit()
+
+    def _absorb(self) -> None:
+        """Count consequences into their cause: a statistic over wafers of mixed context (the
+        cause's level is unknown there) that moves on the same lots from the same time on."""
+        order = sorted(self.found, key=lambda f: -f.profile.gain)
+        kept: list[Found] = []
+        for found in order:
+            host = next((k for k in kept if self._is_consequence(found, k)), None)
+            if host is None:
+                kept.append(found)
+                continue
+            i = next(j for j, k in enumerate(kept) if k is host)
+            kept[i] = replace(host, absorbed=(*host.absorbed, found.candidate))
+        self.found = kept
+
+    def _is_consequence(self, found: Found, cause: Found) -> bool:
+        evidence = self.state.evidence
+        families = found.fit.families[found.fit.probability > 0.5]
+        names = evidence.family_statistic()
+        if any(statistic_class(names[f]) == "mean" for f in families.tolist()):
+            return False
+        cells = found.fit.cells[np.isin(evidence.cell_family[found.fit.cells], families)]
+        if not len(cells) or np.mean(cause.candidate.column.codes[cells] < 0) < 0.7:
+            return False
+        lots = np.unique(evidence.lot[cells])
+        shared = np.isin(lots, evidence.lot[cause.fit.cells]).mean()
+        return bool(shared >= 0.6 and _onsets_meet(found, cause))
+
+    def _locate(self, factors: tuple[str, ...], names: tuple[str, ...]) -> Candidate | None:
+        """Find a level by name among the columns, or build the conjunction it names."""
+        for column in self.state.columns:
+            if column.factors == factors and names in column.names:
+                return self.state.candidate(column, column.names.index(names))
+        if len(factors) != 2:
+            return None
+        parent = self._column((factors[0],))
+        other = self._column((factors[1],))
+        if parent is None or other is None:
+            return None
+        if names[:1] not in parent.names or names[1:] not in other.names:
+            return None
+        level = parent.names.index(names[:1])
+        column = conjunction_within(self.state.evidence, parent, level, other)
+        base = self.state.candidate(parent, level)
+        prior = base.log_prior - float(np.log(10.0 * len(other.names)))
+        return Candidate(column, column.names.index(names), prior, base.unknown, -np.inf)
+
+    def _column(self, factors: tuple[str, ...]) -> Column | None:
+        return next((c for c in self.state.columns if c.factors == factors), None)
+
+
+def _overlap(a: Found, b: Found) -> float:
+    """Share of the smaller effect's cells that the two have in common."""
+    common = np.intersect1d(a.fit.cells, b.fit.cells, assume_unique=True).size
+    return float(common / max(min(len(a.fit.cells), len(b.fit.cells)), 1))
+
+
+def _onsets_meet(a: Found, b: Found) -> bool:
+    """Whether the confidence sets of the two onsets, a day's grace apart, meet."""
+    grace = 43200.0
+    return (
+        a.profile.onset[1] - grace <= b.profile.onset[2] + grace
+        and b.profile.onset[1] - grace <= a.profile.onset[2] + grace
+    )

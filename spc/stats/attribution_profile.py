@@ -1,0 +1,295 @@
+"""One level looked at closely: every onset, every end, every form.
+
+The same score as the coarse scan, at the resolution of single events (distinct times) of the
+level, with the end of the fault free. The form is chosen by its marginal likelihood (sum over
+onsets and ends under their priors; BIC is the large-sample form of it). The confidence set of the
+onset holds the likeliest events whose posterior under a flat prior reaches the level.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from spc.stats.attribution_candidates import Column
+from spc.stats.attribution_evidence import (
+    DAY,
+    AttributionOptions,
+    Evidence,
+    FloatArray,
+    IntArray,
+)
+from spc.stats.attribution_noise import Noise
+from spc.stats.attribution_search import OffsetModel, inclusion, offset_model
+
+_MAX_BINS = 120
+_NEAR = 30
+
+
+@dataclass(frozen=True)
+class Shape:
+    """A form in time: `kind` step, ramp or lot; window [start, end) in seconds of the column's
+    time (end inf: not ended); `lot` of a single-lot spike, else -1."""
+
+    kind: str
+    start: float
+    end: float = np.inf
+    lot: int = -1
+
+
+@dataclass(frozen=True)
+class Profile:
+    """Result of the close look. `score` log marginal likelihood with priors (compare levels by
+    it), `gain` log Bayes factor of the best window alone, `shape` the best window, `forms` log
+    marginal likelihood of each form, `onset` (estimate, earliest, latest) in seconds: earliest is
+    the last event before the set, since the fault began after it."""
+
+    score: float
+    gain: float
+    shape: Shape
+    forms: dict[str, float]
+    onset: tuple[float, float, float]
+
+
+def profile_level(
+    evidence: Evidence,
+    noise: Noise,
+    column: Column,
+    level: int,
+    y: FloatArray,
+    unknown: FloatArray,
+    options: AttributionOptions,
+    log_prior: float,
+) -> Profile | None:
+    """Look closely at one level; `y` whitened residuals, `unknown` (F,) offset variance.
+
+    Returns None when the level has no monitored cell.
+    """
+    cells = np.flatnonzero(evidence.monitoring & column.cells(level))
+    if not len(cells):
+        return None
+    info, share = noise.information(np.where(column.cells(level), 0, -1))
+    look = _Look.of(evidence, noise, column, cells, y, info[cells], share[cells], unknown, options)
+    bins = _coarse(len(look.events))
+    found = look.forms(bins)
+    if len(bins) < len(look.events):
+        best = _best_window(found)
+        found = look.forms(_focus(len(look.events), bins, best))
+    return look.result(found, log_prior)
+
+
+@dataclass(frozen=True)
+class _Forms:
+    """Log posterior weights on the bins: step and ramp (A, A+1) over (start, end) bins, lots."""
+
+    bins: IntArray
+    step: FloatArray
+    ramp: FloatArray
+    lot: FloatArray
+    raw_step: FloatArray
+    raw_ramp: FloatArray
+    raw_lot: FloatArray
+
+
+@dataclass(frozen=True)
+class _Look:
+    events: FloatArray
+    event: IntArray
+    family: IntArray
+    y: FloatArray
+    info: FloatArray
+    share: FloatArray
+    time: FloatArray
+    model: OffsetModel
+    log_pi: FloatArray
+    tau2: FloatArray
+    lot: IntArray
+    born: bool
+    options: AttributionOptions
+    origin: float
+
+    @classmethod
+    def of(
+        cls, evidence: Evidence, noise: Noise, column: Column, cells: IntArray, y: FloatArray,
+        info: FloatArray, share: FloatArray, unknown: FloatArray, options: AttributionOptions,
+    ) -> _Look:  # fmt: skip
+        families, family = np.unique(evidence.cell_family[cells], return_inverse=True)
+        seconds = column.time[cells]
+        events, event = np.unique(seconds, return_inverse=True)
+        model = offset_model(evidence, noise, cells, family, info, share, unknown[families])
+        level = column.codes[cells[0]]
+        return cls(
+            events=events, event=event, family=family, y=y[cells], info=info, share=share,
+            time=(seconds - events[-1]) / DAY, model=model,
+            log_pi=inclusion(evidence, families, np.array([0])),
+            tau2=(options.prior_sigmas * noise.sigma[families]) ** 2,
+            lot=evidence.lot[cells], options=options, origin=float(events[-1]),
+            born=not bool(np.any(column.cells(int(level)) & ~evidence.monitoring)),
+        )  # fmt: skip
+
+    def forms(self, bins: IntArray) -> _Forms:
+        """Score all windows whose ends are on `bins` (indices of events that begin a bin)."""
+        k, n_families = len(bins), len(self.log_pi)
+        at = np.searchsorted(bins, self.event, side="right") - 1
+        key = self.family * k + at
+
+        def table(weight: FloatArray) -> FloatArray:
+            out = np.zeros((n_families, k + 1))
+            sums = np.bincount(key, weight, n_families * k).reshape(n_families, k)
+            out[:, :k] = sums[:, ::-1].cumsum(1)[:, ::-1]
+            return out
+
+        s0, s1 = table(self.y), table(self.y * self.time)
+        i0, i1, i2 = (table(self.info * self.time**p) for p in range(3))
+        points = table(self.share)
+        start = (self.events[bins] - self.origin) / DAY
+        ends = np.append(start[1:], 1.0 / 24.0)
+        total = s0[:, 0] * self.model.full / np.maximum(i0[:, 0], 1e-300)
+
+        def window(c: FloatArray) -> FloatArray:
+            out: FloatArray = c[:, :k, None] - c[:, None, 1:]
+            return out
+
+        t0 = start[None, :, None]
+        w_s0, w_i0, w_i1, w_points = window(s0), window(i0), window(i1), window(points)
+        reach = np.maximum(ends[None, :] - start[:, None], 1.0 / 24.0)
+        step = self.model.terms(
+            np.maximum(w_i0, 0.0), w_i0, np.maximum(w_points, 0.0), self.tau2[:, None, None]
+        ).log_bayes(w_s0, total[:, None, None])
+        info = np.maximum(window(i2) - 2.0 * t0 * w_i1 + t0**2 * w_i0, 0.0)
+        ramp = self.model.terms(
+            info, w_i1 - t0 * w_i0, np.maximum(w_points, 0.0),
+            self.tau2[:, None, None] / reach[None] ** 2,
+        ).log_bayes(window(s1) - t0 * w_s0, total[:, None, None])  # fmt: skip
+        upper = np.arange(k)[:, None] <= np.arange(k)[None, :]
+        raw_step = np.where(upper, self._over_families(step), -np.inf)
+        raw_ramp = np.where(upper, self._over_families(ramp), -np.inf)
+        raw_lot, prior_lot = self._lots(total)
+        log = {name: np.log(value) for name, value in self.options.shape_prior.items()}
+        open_step, open_ramp, closed = self._priors(k)
+        step_prior = closed + log["window"]
+        step_prior[:, -1] = open_step + log["step"]
+        ramp_prior = closed + log["window"] - np.log(2.0)
+        ramp_prior[:, -1] = open_ramp + log["ramp"]
+        return _Forms(
+            bins, raw_step + step_prior, raw_ramp + ramp_prior, raw_lot + prior_lot + log["lot"],
+            raw_step, raw_ramp, raw_lot,
+        )  # fmt: skip
+
+    def _over_families(self, b: FloatArray) -> FloatArray:
+        shape = (-1,) + (1,) * (b.ndim - 1)
+        pi = self.log_pi.reshape(shape)
+        out: FloatArray = np.logaddexp(np.log1p(-np.exp(pi)), pi + b).sum(0)
+        return out
+
+    def _lots(self, total: FloatArray) -> tuple[FloatArray, float]:
+        lots, entry = np.unique(self.lot, return_inverse=True)
+        n_families = len(self.log_pi)
+        key = self.family * len(lots) + entry
+
+        def table(weight: FloatArray) -> FloatArray:
+            return np.bincount(key, weight, n_families * len(lots)).reshape(n_families, -1)
+
+        info = table(self.info)
+        terms = self.model.terms(info, info, table(self.share), 4.0 * self.tau2[:, None])
+        return self._over_families(terms.log_bayes(table(self.y), total[:, None])), -float(
+            np.log(len(lots))
+        )
+
+    def _priors(self, k: int) -> tuple[FloatArray, FloatArray, FloatArray]:
+        """Log priors of open steps, open ramps (k,) and closed windows (k, k)."""
+        weight = 1.0 / (np.arange(k, 0, -1) + 0.5)
+        weight /= weight.sum()
+        step = weight.copy()
+        if self.born:
+            step *= 0.5
+            step[0] += 0.5
+        length = np.arange(k)[None, :] - np.arange(k)[:, None] + 1.0
+        inside = (length >= 1.0) & (np.arange(k)[None, :] < k - 1)
+        closed = np.where(inside, 1.0 / np.maximum(length, 1.0), 0.0)
+        closed /= np.maximum(closed.sum(), 1e-300)
+        with np.errstate(divide="ignore"):
+            return np.log(step), np.log(weight), np.log(closed)
+
+    def result(self, found: _Forms, log_prior: float) -> Profile:
+        """Choose the form and its window, and bound the onset."""
+        lots = np.unique(self.lot)
+        forms = {
+            "step": _log_sum(found.step[:, -1]),
+            "window": _log_sum(found.step[:, :-1]),
+            "ramp": _log_sum(found.ramp[:, -1]),
+            "ramp-window": _log_sum(found.ramp[:, :-1]),
+            "lot": _log_sum(found.lot),
+        }
+        score = _log_sum(np.array(list(forms.values()))) + log_prior
+        form = max(forms, key=lambda name: forms[name])
+        bins = np.append(self.events[found.bins], np.inf)
+        if form == "lot":
+            i = int(found.lot.argmax())
+            times = self.events[self.event[self.lot == lots[i]]]
+            start, stop = float(times.min()), float(np.nextafter(times.max(), np.inf))
+            before = self.events[self.events < start]
+            earliest = float(before[-1]) if len(before) else start
+            shape = Shape("lot", start, stop, int(lots[i]))
+            return Profile(score, float(found.raw_lot[i]), shape, forms, (start, earliest, start))
+        kind = "ramp" if form.startswith("ramp") else "step"
+        table = (found.ramp if kind == "ramp" else found.step).copy()
+        raw = found.raw_ramp if kind == "ramp" else found.raw_step
+        if form.endswith("window"):
+            table[:, -1] = -np.inf
+        else:
+            table[:, :-1] = -np.inf
+        onset = self._onset(raw, table, bins)
+        a, b = np.unravel_index(int(table.argmax()), table.shape)
+        shape = Shape(kind, float(bins[a]), float(bins[b + 1]))
+        return Profile(score, float(raw[a, b]), shape, forms, (float(bins[a]), *onset))
+
+    def _onset(
+        self, raw: FloatArray, table: FloatArray, bins: FloatArray
+    ) -> tuple[float, float]:
+        """Return earliest and latest of the confidence set: flat prior over onsets, ends
+        weighted as in the chosen form."""
+        flat = np.where(np.isfinite(table), raw, -np.inf)
+        weight = np.logaddexp.reduce(flat, axis=1)
+        p = np.exp(weight - weight.max())
+        p /= p.sum()
+        order = np.argsort(-p)
+        need = int(np.searchsorted(np.cumsum(p[order]), self.options.confidence)) + 1
+        chosen = order[:need]
+        first, last = int(chosen.min()), int(chosen.max())
+        return float(bins[max(first - 1, 0)]), float(bins[last])
+
+
+def _log_sum(values: FloatArray) -> float:
+    values = values[np.isfinite(values)]
+    return float(np.logaddexp.reduce(values)) if values.size else -np.inf
+
+
+def _coarse(n_events: int) -> IntArray:
+    """Return the events that begin a bin: all if few, else the latest half fine, others shared."""
+    if n_events <= _MAX_BINS:
+        return np.arange(n_events)
+    half = _MAX_BINS // 2
+    early = np.linspace(0, n_events - half, half, endpoint=False).astype(np.int64)
+    return np.unique(np.r_[early, np.arange(n_events - half, n_events)])
+
+
+def _best_window(found: _Forms) -> tuple[int, int]:
+    table = found.step if found.step.max() >= found.ramp.max() else found.ramp
+    a, b = np.unravel_index(int(table.argmax()), table.shape)
+    return int(a), int(b)
+
+
+def _focus(n_events: int, bins: IntArray, best: tuple[int, int]) -> IntArray:
+    """Return bins that are single events near the best start and end, and coarse elsewhere."""
+    edges = np.append(bins, n_events)
+    a, b = best
+    out = [np.linspace(0, n_events, _MAX_BINS // 4, endpoint=False).astype(np.int64)]
+    for i in (a, min(b + 1, len(bins) - 1)):
+        low, high = edges[max(i - 1, 0)], edges[min(i + 1, len(bins))]
+        if high - low > 2 * _NEAR:
+            out.append(np.linspace(low, high, 2 * _NEAR, endpoint=False).astype(np.int64))
+        else:
+            out.append(np.arange(low, high))
+    return np.unique(np.clip(np.concatenate(out), 0, n_events - 1))

@@ -1,0 +1,451 @@
+"""The coarse scan: every level x onset x form at once, by cumulative sums.
+
+For a level, a window and a shape x (step, ramp, one lot) the score of a family f is S = x'V^-1 r
+and its information I = x'V^-1 x; both are sums over cells, so a table (level, family) x (time bin)
+of sums and its cumulative sums give every onset. With a normal prior N(0, tau^2) of the amplitude,
+
+    log BF_f = S^2 / (2 (I + 1/tau^2)) - log(1 + I tau^2) / 2,
+
+a family takes part with probability pi, and a candidate's score is
+
+    sum_f log(1 - pi + pi BF_f) + log prior(column, level, onset, shape).
+
+All priors add up to one, so exp(score) has expectation at most 1 when nothing happened, and
+P(best score >= u) <= exp(-u) (Markov). Amplitudes are shared by all series of a level in a family:
+the level whose members all moved and whose others did not wins by itself.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from spc.stats.attribution_candidates import Column
+from spc.stats.attribution_evidence import (
+    DAY,
+    AttributionOptions,
+    BoolArray,
+    Evidence,
+    FloatArray,
+    IntArray,
+    statistic_class,
+)
+from spc.stats.attribution_noise import Noise, ar1_inflation
+
+_WIDTHS = (2, 3, 5, 8, 13)
+_TINY = 1e-300
+
+
+@dataclass(frozen=True)
+class Terms:
+    """What a window needs to turn its score sum into a log Bayes factor; arrays of one shape.
+
+    `scale` 1/AR(1) inflation, `pull` share of the level's total score that the uncertain offset
+    takes away, `gain` 1/(2 (I + 1/tau^2)), `cost` log(1 + I tau^2)/2, `info` I.
+    """
+
+    scale: FloatArray
+    pull: FloatArray
+    gain: FloatArray
+    cost: FloatArray
+    info: FloatArray
+
+    def log_bayes(self, score: FloatArray, total: FloatArray) -> FloatArray:
+        """Return log BF_f from the raw score sums and the level's (inflated) total score."""
+        return self.gain * (score * self.scale - self.pull * total) ** 2 - self.cost
+
+
+@dataclass(frozen=True)
+class OffsetModel:
+    """Per (level, family) pair: `variance` of the unknown offset, `full` AR-scaled information of
+    all its monitored cells, `phi`, `series` (how many series), all of one shape (P,)."""
+
+    variance: FloatArray
+    full: FloatArray
+    phi: FloatArray
+    series: FloatArray
+
+    def terms(
+        self, info: FloatArray, cross: FloatArray, points: FloatArray, prior: FloatArray
+    ) -> Terms:
+        """Return the terms of windows (P, ...): raw information x'V^-1 x, cross x'V^-1 1, points
+        in the window, and the prior variance of the amplitude."""
+        shape = (len(self.phi),) + (1,) * (np.ndim(info) - 1)
+        phi, series = self.phi.reshape(shape), self.series.reshape(shape)
+        scale = 1.0 / ar1_inflation(points / series, phi)
+        c = (self.variance / (1.0 + self.variance * self.full)).reshape(shape)
+        cross = cross * scale
+        net = np.maximum(info * scale - c * cross**2, 0.0)
+        return Terms(scale, c * cross, 0.5 / (net + 1.0 / prior), 0.5 * np.log1p(net * prior), net)
+
+
+@dataclass(frozen=True)
+class Windows:
+    """All windows of one kind. `kind` step, ramp, window or lot; `terms` per (pair, window);
+    `prior` log prior per (level, window), -inf where not allowed; `width` in bins."""
+
+    kind: str
+    terms: Terms
+    prior: FloatArray
+    width: int = 0
+
+
+@dataclass(frozen=True)
+class Plan:
+    """The scan of one column on one design: everything that does not depend on the residuals.
+
+    `cells` (k,) are the monitored cells with a level, sorted by (level, family); `pair` (k,) their
+    (level, family) index, `bin` (k,) time bin, `time` (k,) days before the origin (negative).
+    `active` (L,) level codes, `start` (L,) first pair of each, `family` (P,) of each pair.
+    `edges` (L, K) first time in each bin.
+    """
+
+    column: Column
+    cells: IntArray
+    pair: IntArray
+    bin: IntArray
+    time: FloatArray
+    active: IntArray
+    start: IntArray
+    family: IntArray
+    edges: FloatArray
+    log_pi: FloatArray
+    log_not: FloatArray
+    full_scale: FloatArray
+    windows: tuple[Windows, ...]
+    lot_pair: IntArray
+    lot_owner: IntArray
+    lot_start: IntArray
+    lot_code: IntArray
+    lot_level: IntArray
+
+
+@dataclass(frozen=True)
+class Best:
+    """Best candidate of each active level of a column, arrays (L,): `score` (log), `kind` index
+    into the plan's windows, `where` window start (bin, or lot entry)."""
+
+    score: FloatArray
+    kind: IntArray
+    where: IntArray
+
+
+def scan(plan: Plan, y: FloatArray) -> Best:
+    """Score every window of every level of a column; `y` (n,) whitened residuals."""
+    n_pairs, n_bins = len(plan.family), plan.edges.shape[1]
+    own = y[plan.cells]
+    key = plan.pair * n_bins + plan.bin
+    c0 = _suffix(np.bincount(key, own, n_pairs * n_bins).reshape(n_pairs, n_bins))
+    c1 = _suffix(np.bincount(key, own * plan.time, n_pairs * n_bins).reshape(n_pairs, n_bins))
+    total = c0[:, 0] * plan.full_scale
+    n_levels = len(plan.active)
+    score = np.full(n_levels, -np.inf)
+    kind = np.zeros(n_levels, dtype=np.int64)
+    where = np.zeros(n_levels, dtype=np.int64)
+    edge_of_pair = np.repeat(plan.edges, np.diff(np.append(plan.start, n_pairs)), axis=0)
+    for i, windows in enumerate(plan.windows):
+        if windows.kind == "lot":
+            best, at = _scan_lots(plan, windows, own, total)
+        else:
+            if windows.kind == "step":
+                s = c0[:, :n_bins]
+            elif windows.kind == "ramp":
+                s = c1[:, :n_bins] - edge_of_pair * c0[:, :n_bins]
+            else:
+                s = c0[:, : n_bins - windows.width] - c0[:, windows.width : n_bins]
+            b = windows.terms.log_bayes(s, total[:, None])
+            b = np.logaddexp(plan.log_not[:, None], plan.log_pi[:, None] + b)
+            table = np.add.reduceat(b, plan.start, axis=0) + windows.prior
+            at = table.argmax(1)
+            best = table[np.arange(n_levels), at]
+        better = best > score
+        score = np.where(better, best, score)
+        kind = np.where(better, i, kind)
+        where = np.where(better, at, where)
+    return Best(score, kind, where)
+
+
+def _scan_lots(
+    plan: Plan, windows: Windows, own: FloatArray, total: FloatArray
+) -> tuple[FloatArray, IntArray]:
+    """Score each (level, lot) alone; returns the best per level and its entry."""
+    n_levels = len(plan.active)
+    best = np.full(n_levels, -np.inf)
+    at = np.zeros(n_levels, dtype=np.int64)
+    if not len(plan.lot_start):
+        return best, at
+    s = np.bincount(plan.lot_pair, own, len(plan.lot_owner))
+    b = windows.terms.log_bayes(s, total[plan.lot_owner])
+    b = np.logaddexp(plan.log_not[plan.lot_owner], plan.log_pi[plan.lot_owner] + b)
+    value = np.add.reduceat(b, plan.lot_start) + windows.prior
+    order = np.lexsort((-value, plan.lot_level))
+    levels, first = np.unique(plan.lot_level[order], return_index=True)
+    at[levels] = order[first]
+    best[levels] = value[order[first]]
+    return best, at
+
+
+def make_plan(
+    evidence: Evidence,
+    noise: Noise,
+    column: Column,
+    offset_variance: FloatArray,
+    options: AttributionOptions,
+    log_prior: float,
+) -> Plan | None:
+    """Prepare the scan of a column; None if no level of it has anything new to look at.
+
+    `offset_variance` (levels, families): see `usual_offsets`. `log_prior` of the whole column.
+    """
+    n_families = evidence.n_families
+    new = new_cells(evidence, options)
+    fresh = np.zeros(len(column.names), dtype=bool)
+    fresh[column.codes[new & evidence.monitoring & (column.codes >= 0)]] = True
+    use = evidence.monitoring & (column.codes >= 0)
+    use &= fresh[np.maximum(column.codes, 0)]
+    if not use.any():
+        return None
+    info, share = noise.information(np.where(use, column.codes, -1))
+    cells = np.flatnonzero(use)
+    key = column.codes[cells] * n_families + evidence.cell_family[cells]
+    cells = cells[np.argsort(key, kind="stable")]
+    keys, pair = np.unique(
+        column.codes[cells] * n_families + evidence.cell_family[cells], return_inverse=True
+    )
+    active, start = np.unique(keys // n_families, return_index=True)
+    level = np.searchsorted(active, column.codes[cells])
+    time = (column.time[cells] - column.time[cells].max()) / DAY
+    bins, edges = graded_bins(level, time, len(active), options.bins)
+    model = offset_model(
+        evidence, noise, cells, pair, info[cells], share[cells],
+        offset_variance[keys // n_families, keys % n_families],
+    )  # fmt: skip
+    log_pi = inclusion(evidence, keys % n_families, start)
+    builder = _WindowBuilder(
+        evidence=evidence, noise=noise, options=options, column=column, cells=cells, pair=pair,
+        level=level, bins=bins, edges=edges, time=time, info=info[cells], share=share[cells],
+        new=new[cells], start=start, family=keys % n_families, model=model,
+        log_prior=log_prior - np.log(len(active)),
+    )  # fmt: skip
+    windows, lots = builder.build()
+    return Plan(
+        column=column, cells=cells, pair=pair, bin=bins, time=time, active=active, start=start,
+        family=keys % n_families, edges=edges, log_pi=log_pi, log_not=np.log1p(-np.exp(log_pi)),
+        full_scale=1.0 / ar1_inflation(
+            np.bincount(pair, share[cells]) / model.series, model.phi
+        ),
+        windows=windows, lot_pair=lots[0], lot_owner=lots[1], lot_start=lots[2],
+        lot_code=lots[3], lot_level=lots[4],
+    )  # fmt: skip
+
+
+def new_cells(evidence: Evidence, options: AttributionOptions) -> BoolArray:
+    """Return which cells were measured after the last look, shape (n,)."""
+    if options.since is None:
+        return np.ones(len(evidence.series), dtype=bool)
+    return evidence.t_measure > options.since
+
+
+def inclusion(evidence: Evidence, family: IntArray, start: IntArray) -> FloatArray:
+    """Return the log prior probability that a family moves when its level does, shape (P,).
+
+    About one and a half families are expected to move, means twice as often as others.
+    """
+    names = evidence.family_statistic()
+    weight = np.array([1.0 if statistic_class(n) == "mean" else 0.5 for n in names])[family]
+    total = np.add.reduceat(weight, start)
+    size = np.diff(np.append(start, len(family)))
+    return np.log(np.minimum(0.5, 1.5 * weight / np.repeat(total, size)))
+
+
+def graded_bins(
+    level: IntArray, time: FloatArray, n_levels: int, n_bins: int
+) -> tuple[IntArray, FloatArray]:
+    """Put each level's cells into at most `n_bins` time bins, the latest half of them fine.
+
+    The latest n_bins/2 distinct times of a level have a bin each, the earlier ones share the rest
+    evenly. Bins are right-aligned. Returns the bin of each cell and the first time of each bin
+    (levels, bins), +inf for an empty bin.
+    """
+    order = np.lexsort((time, level))
+    lv, tm = level[order], time[order]
+    fresh = np.r_[True, (lv[1:] != lv[:-1]) | (tm[1:] != tm[:-1])]
+    event = np.cumsum(fresh) - 1
+    last = np.zeros(n_levels, dtype=np.int64)
+    np.maximum.at(last, lv, event)
+    back = last[lv] - event
+    count = np.bincount(lv[fresh], minlength=n_levels)
+    half = n_bins // 2
+    older = np.maximum(count - half, 1)
+    rest = n_bins - half
+    coarse = half + np.where(
+        older[lv] <= rest, back - half, (back - half) * rest // np.maximum(older[lv], 1)
+    )
+    from_end = np.where(back < half, back, coarse)
+    out = np.empty(len(level), dtype=np.int64)
+    out[order] = n_bins - 1 - from_end
+    edges = np.full(n_levels * n_bins, np.inf)
+    np.minimum.at(edges, level * n_bins + out, time)
+    return out, edges.reshape(n_levels, n_bins)
+
+
+def offset_model(
+    evidence: Evidence, noise: Noise, cells: IntArray, pair: IntArray, info: FloatArray,
+    share: FloatArray, unknown: FloatArray,
+) -> OffsetModel:  # fmt: skip
+    """Return the offset model of the (level, family) pairs of some cells.
+
+    The offset of a pair is the unknown part of its level's usual offset plus the error of the
+    baseline centres of its series, which share the lots' common part.
+    """
+    n_pairs = int(pair.max(initial=-1)) + 1
+    m = len(evidence.family)
+    key, code = np.unique(pair * m + evidence.series[cells], return_inverse=True)
+    owner, series = key // m, key % m
+    a = np.bincount(code, info)
+    n_series = np.bincount(owner, minlength=n_pairs)
+    a_pair = np.maximum(np.bincount(owner, a, n_pairs), _TINY)
+    phi = np.bincount(owner, a * noise.phi[series], n_pairs) / a_pair
+    center = noise.center[series]
+    own = np.bincount(owner, a**2 * center, n_pairs) / a_pair**2
+    mean = np.bincount(owner, a * center, n_pairs) / a_pair
+    kappa = np.bincount(owner, a * noise.kappa[evidence.family[series]], n_pairs) / a_pair
+    variance = unknown + kappa * mean + (1.0 - kappa) * own
+    points = np.bincount(pair, share, n_pairs)
+    full = a_pair / ar1_inflation(points / n_series, phi)
+    return OffsetModel(variance, full, phi, n_series.astype(float))
+
+
+def _suffix(table: FloatArray) -> FloatArray:
+    """Return sums from each column to the end."""
+    return table[:, ::-1].cumsum(1)[:, ::-1]
+
+
+@dataclass(frozen=True)
+class _WindowBuilder:
+    """Builds the window sets of a plan (fields as in `Plan`, `info` and `share` per cell)."""
+
+    evidence: Evidence
+    noise: Noise
+    options: AttributionOptions
+    column: Column
+    cells: IntArray
+    pair: IntArray
+    level: IntArray
+    bins: IntArray
+    edges: FloatArray
+    time: FloatArray
+    info: FloatArray
+    share: FloatArray
+    new: BoolArray
+    start: IntArray
+    family: IntArray
+    model: OffsetModel
+    log_prior: float
+
+    def build(self) -> tuple[tuple[Windows, ...], tuple[IntArray, ...]]:
+        n_bins = self.edges.shape[1]
+        tau2 = (self.options.prior_sigmas * self.noise.sigma[self.family]) ** 2
+        i0, i1, i2, points = (
+            _suffix(self._table(w))
+            for w in (self.info, self.info * self.time, self.info * self.time**2, self.share)
+        )
+        sizes = np.diff(np.append(self.start, len(self.family)))
+        t0 = np.repeat(np.where(np.isfinite(self.edges), self.edges, 0.0), sizes, axis=0)
+        reach = self._reach()
+        ramp_prior = tau2[:, None] / np.repeat(reach, sizes, axis=0) ** 2
+        step = self.model.terms(i0, i0, points, tau2[:, None])
+        ramp = self.model.terms(
+            np.maximum(i2 - 2.0 * t0 * i1 + t0**2 * i0, 0.0), i1 - t0 * i0, points, ramp_prior
+        )
+        onset = self._onset_prior()
+        out = [
+            Windows("step", step, self._add(onset[0], "step")),
+            Windows("ramp", ramp, self._add(onset[1], "ramp")),
+        ]
+        priors = [self._window_allowed(w) for w in _WIDTHS if w < n_bins]
+        count = np.maximum(sum(p.sum(1) for p in priors), 1)
+        for width, allowed in zip(_WIDTHS, priors, strict=False):
+            i = i0[:, : n_bins - width] - i0[:, width:]
+            p = points[:, : n_bins - width] - points[:, width:]
+            prior = np.where(allowed, -np.log(count)[:, None], -np.inf)
+            terms = self.model.terms(i, i, p, tau2[:, None])
+            out.append(Windows("window", terms, self._add(prior, "window"), width))
+        lots = self._lots()
+        pair_of_lot, lot_level = lots[1], lots[4]
+        info = np.bincount(lots[0], self.info, len(pair_of_lot))
+        number = np.bincount(lots[0], self.share, len(pair_of_lot))
+        model = OffsetModel(
+            self.model.variance[pair_of_lot], self.model.full[pair_of_lot],
+            self.model.phi[pair_of_lot], self.model.series[pair_of_lot],
+        )  # fmt: skip
+        terms = model.terms(info, info, number, 4.0 * tau2[pair_of_lot])
+        out.append(Windows("lot", terms, self._add(self._lot_prior(lots), "lot")))
+        assert lot_level.ndim == 1
+        return tuple(out), lots
+
+    def _table(self, weight: FloatArray) -> FloatArray:
+        n_pairs, n_bins = len(self.family), self.edges.shape[1]
+        key = self.pair * n_bins + self.bins
+        return np.bincount(key, weight, n_pairs * n_bins).reshape(n_pairs, n_bins)
+
+    def _add(self, prior: FloatArray, kind: str) -> FloatArray:
+        return prior + self.log_prior + np.log(self.options.shape_prior[kind])
+
+    def _level_table(self, weight: FloatArray) -> FloatArray:
+        n_levels, n_bins = self.edges.shape
+        key = self.level * n_bins + self.bins
+        return np.bincount(key, weight, n_levels * n_bins).reshape(n_levels, n_bins)
+
+    def _reach(self) -> FloatArray:
+        """Days from each onset to the level's last cell, at least an hour, (L, K)."""
+        last = np.full(len(self.edges), -np.inf)
+        np.maximum.at(last, self.level, self.time)
+        reach = last[:, None] - np.where(np.isfinite(self.edges), self.edges, 0.0)
+        return np.maximum(reach, 1.0 / 24.0)
+
+    def _onset_prior(self) -> tuple[FloatArray, FloatArray]:
+        """Log priors of the onset of steps and of ramps, (L, K): recent onsets are likelier
+        (earlier ones were looked for before), and a level that was not there in the baseline has
+        half its weight on its own beginning."""
+        occupied = np.isfinite(self.edges)
+        allowed = occupied & (_suffix(self._level_table(self.new.astype(float))) > 0)
+        rank = _suffix(occupied.astype(float))
+        weight = np.where(allowed, 1.0 / (rank + 0.5), 0.0)
+        weight /= np.maximum(weight.sum(1, keepdims=True), _TINY)
+        base = ~self.evidence.monitoring & (self.column.codes >= 0)
+        born = np.ones(len(self.column.names), dtype=bool)
+        born[self.column.codes[base]] = False
+        active = np.unique(self.column.codes[self.cells])
+        first = np.zeros_like(weight)
+        first[np.arange(len(weight)), occupied.argmax(1)] = 1.0
+        half = 0.5 * born[active][:, None]
+        step = np.where(allowed, weight * (1.0 - half) + first * half, 0.0)
+        with np.errstate(divide="ignore"):
+            return np.log(step), np.log(weight)
+
+    def _window_allowed(self, width: int) -> BoolArray:
+        """Windows of `width` bins that begin in an occupied bin, hold something new and end
+        before the level's last bin, (L, K - width)."""
+        n_bins = self.edges.shape[1]
+        occupied = np.isfinite(self.edges)[:, : n_bins - width]
+        fresh = _suffix(self._level_table(self.new.astype(float)))
+        return occupied & (fresh[:, : n_bins - width] - fresh[:, width:] > 0)
+
+    def _lots(self) -> tuple[IntArray, IntArray, IntArray, IntArray, IntArray]:
+        """Index the (level, lot, family) entries: entry of each cell, pair of each entry, first
+        entry of each (level, lot), its lot and its level."""
+        lot = self.evidence.lot[self.cells]
+        n_lots, n_pairs = int(lot.max()) + 1, len(self.family)
+        key = (self.level * n_lots + lot) * n_pairs + self.pair
+        keys, entry = np.unique(key, return_inverse=True)
+        level_lot, first = np.unique(keys // n_pairs, return_index=True)
+        return entry, keys % n_pairs, first, level_lot % n_lots, level_lot // n_lots
+
+    def _lot_prior(self, lots: tuple[IntArray, ...]) -> FloatArray:
+        entry, _, first, _, level = lots
+        fresh_entry = np.bincount(entry, self.new, len(lots[1])) > 0
+        fresh = np.maximum.reduceat(fresh_entry, first)
+        count = np.bincount(level, fresh)
+        return np.where(fresh, -np.log(np.maximum(count[level], 1)), -np.inf)
