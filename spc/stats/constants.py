@@ -56,12 +56,12 @@ def _range_moments(n: int) -> tuple[float, float]:
     """Mean and sd of the range of n standard normals, by Gauss-Legendre quadrature.
 
     P(R <= r) = n integral of phi(x) [Phi(x + r) - Phi(x)]^(n-1) dx; then E R = integral of P(R > r)
-    and E R^2 = 2 integral of r P(R > r). 300 nodes a side give 12 digits.
+    and E R^2 = 2 integral of r P(R > r). 200 nodes a side give 11 digits.
     """
-    node, weight = np.polynomial.legendre.leggauss(300)
-    top = 20.0
+    node, weight = special.roots_legendre(200)
+    top = 14.0
     r, r_weight = 0.5 * top * (node + 1.0), 0.5 * top * weight
-    x, x_weight = 10.0 * node, 10.0 * weight
+    x, x_weight = 9.0 * node, 9.0 * weight
     density = np.exp(-0.5 * x**2) / np.sqrt(2.0 * np.pi)
     between = special.ndtr(x + r[:, None]) - special.ndtr(x)
     below = n * (between ** (n - 1) * density) @ x_weight
