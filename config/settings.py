@@ -169,6 +169,7 @@ class WideColumns(Strict):
 
     columns: str = Field(description="Pattern of the column names, for example 'T_*'.")
     parameter: str | None = Field(default=None, description="Parameter of these columns.")
+    unit: str | None = Field(default=None, description="Unit of these columns.")
     places: dict[str, tuple[float, ...]] = Field(
         default_factory=dict,
         description="Site -> [x_mm, y_mm] or [x_mm, y_mm, field_x_mm, field_y_mm].",

@@ -59,6 +59,8 @@ files = Table(
     Column("rejected", Integer, nullable=False, default=0),
     Column("loaded_us", BigInteger, nullable=False),  # clock of the pass that took it in
     Column("newest_us", BigInteger),  # newest stamp in it
+    # Digest of the settings it was read with: a quarantined file is tried again when they change.
+    Column("read_with", String(64), nullable=False, default=""),
 )
 
 # Every path at which a content was seen, so that an unchanged file is not even read again.
@@ -83,6 +85,14 @@ rejects = Table(
     Column("value", Text),
     Column("reason", Text, nullable=False),
     Column("text", Text),  # the line as it stood
+)
+
+# The unit that each parameter is kept in, fixed by its first reading: nm for lengths.
+parameters = Table(
+    "parameters",
+    metadata,
+    Column("parameter", Text, primary_key=True),
+    Column("unit", Text, nullable=False),
 )
 
 # A context is one combination of the context columns of readings or log rows. There are few, so

@@ -1,0 +1,216 @@
+"""The exact way through a file that is not regular: every physical line is accounted for.
+
+A record that spans several lines and does not come out with the right number of fields is taken to
+begin with a quote that was never closed: only its first line is rejected, and reading goes on with
+the next line. So a stray quote costs one row, not the rest of the file.
+"""
+
+from __future__ import annotations
+
+import csv
+import io
+from collections import deque
+from collections.abc import Iterator
+from contextlib import contextmanager
+from dataclasses import dataclass, field
+from threading import Lock
+from typing import TYPE_CHECKING, TextIO
+
+import numpy as np
+import pyarrow as pa
+from numpy.typing import NDArray
+
+from ingest.report import Reason
+
+if TYPE_CHECKING:
+    from ingest.parse import Header, TextFormat
+
+_CHUNK = 50_000
+_LONGEST_RECORD = 1000  # lines of one quoted field
+_SHOWN = 200
+_limit_lock = Lock()
+
+
+@contextmanager
+def field_limit(characters: int) -> Iterator[None]:
+    """Bound the fields of the csv module, whose limit is one for the whole process."""
+    with _limit_lock:
+        before = csv.field_size_limit(characters)
+        try:
+            yield
+        finally:
+            csv.field_size_limit(before)
+
+
+class Lines:
+    """Physical lines of a file, with their count, that can be given back."""
+
+    def __init__(self, source: TextIO) -> None:
+        self._source = source
+        self._again: deque[str] = deque()
+        self.seen: list[str] = []  # lines since the last call of `start`
+        self.number = 0  # of the last line given
+
+    def __iter__(self) -> Lines:
+        """Be an iterator."""
+        return self
+
+    def __next__(self) -> str:
+        """Next line, with its line break."""
+        line = self._again.popleft() if self._again else self._source.readline()
+        if not line:
+            raise StopIteration
+        self.seen.append(line)
+        self.number += 1
+        return line
+
+    def start(self) -> None:
+        """Begin a new record."""
+        self.seen = []
+
+    def give_back_all_but_first(self) -> None:
+        """Read the lines of this record again, without its first."""
+        rest = self.seen[1:]
+        self._again.extendleft(reversed(rest))
+        self.number -= len(rest)
+        self.seen = self.seen[:1]
+
+
+@dataclass
+class Rows:
+    """What the exact way found: columns of text, lines of the rows, and what it rejected."""
+
+    columns: list[pa.ChunkedArray]
+    lines: NDArray[np.int64]
+    reasons: list[Reason] = field(default_factory=list)
+    n_rejected: int = 0
+
+
+def rows(data: bytes, header: Header, damaged: bool, form: TextFormat) -> Rows:
+    """Read the body of a file row by row; never raises for what stands in it."""
+    lines = Lines(io.TextIOWrapper(io.BytesIO(data), encoding="utf-8", newline=""))
+    width = len(header.names)
+    collector = _Collector(width)
+    reasons: list[Reason] = []
+    n_rejected = 0
+    with field_limit(form.max_field_characters):
+        for line, row, fault in _records(lines, width, form):
+            if fault is None:
+                fault = _fault_of(row, damaged)
+            if fault is None:
+                collector.add(row, header.line + line)
+                continue
+            n_rejected += 1
+            if len(reasons) < form.max_rejects:
+                column, value, reason = fault
+                name = header.names[column] if column is not None else None
+                reasons.append(Reason(header.line + line, name, value, reason))
+    columns, found = collector.finish()
+    return Rows(columns, found, reasons, n_rejected)
+
+
+_FaultAt = tuple[int | None, str | None, str]
+
+
+def _records(
+    lines: Lines, width: int, form: TextFormat
+) -> Iterator[tuple[int, list[str], _FaultAt | None]]:
+    """Each record with its first line; or the line that begins none, with the fault."""
+    reader = csv.reader(_Bounded(lines), delimiter=form.separator)
+    while True:
+        lines.start()
+        reason = None
+        try:
+            row = next(reader)
+        except StopIteration:
+            if not lines.seen:
+                return
+            row = []  # a quote that was open at the end of the file
+            reason = "a quote is opened here and never closed"
+        except csv.Error as error:
+            row = []
+            reason = _said(error, form)
+        span = len(lines.seen)
+        first = lines.number - span + 1
+        if not row and reason is None:
+            continue  # a blank line
+        if len(row) == width and reason is None:
+            yield first, row, None
+            continue
+        if span > 1:
+            reason = "a quote is opened here and not closed where the field should end"
+        if span > 1 or reason is not None:
+            lines.give_back_all_but_first()
+            reader = csv.reader(_Bounded(lines), delimiter=form.separator)
+        shown = form.separator.join(row)[:_SHOWN] or None
+        yield first, row, (None, shown, reason or _ragged(len(row), width))
+
+
+class _Bounded:
+    """Lines for one record at a time, ending a record that grows without end."""
+
+    def __init__(self, lines: Lines) -> None:
+        self._lines = lines
+
+    def __iter__(self) -> _Bounded:
+        return self
+
+    def __next__(self) -> str:
+        if len(self._lines.seen) > _LONGEST_RECORD:
+            raise StopIteration
+        return next(self._lines)
+
+
+def _said(error: csv.Error, form: TextFormat) -> str:
+    if "field larger" in str(error):
+        return (
+            f"a field is longer than {form.max_field_characters} characters; "
+            "shorten it, or raise [drops] max_field_characters"
+        )
+    return f"the row cannot be read: {error}"
+
+
+def _ragged(found: int, width: int) -> str:
+    return f"has {found} fields where the header has {width}; quote fields that hold a separator"
+
+
+def _fault_of(row: list[str], damaged: bool) -> _FaultAt | None:
+    for number, cell in enumerate(row):
+        if "\0" in cell:
+            return number, cell[:_SHOWN].replace("\0", "\u2400"), "holds a NUL byte"
+        if damaged and "\ufffd" in cell:
+            return (
+                number,
+                cell[:_SHOWN],
+                "is not in the encoding of the file; save it as UTF-8, or give its `encoding` in "
+                "a [[feed]]",
+            )
+    return None
+
+
+class _Collector:
+    """Gathers rows into Arrow columns, a chunk at a time, so that Python texts stay few."""
+
+    def __init__(self, width: int) -> None:
+        self._width = width
+        self._rows: list[list[str]] = []
+        self._lines: list[int] = []
+        self._chunks: list[list[pa.Array]] = [[] for _ in range(width)]
+        self._line_chunks: list[NDArray[np.int64]] = []
+
+    def add(self, row: list[str], line: int) -> None:
+        self._rows.append(row)
+        self._lines.append(line)
+        if len(self._rows) >= _CHUNK:
+            self._flush()
+
+    def _flush(self) -> None:
+        for chunks, cells in zip(self._chunks, zip(*self._rows, strict=True), strict=False):
+            chunks.append(pa.array(cells, pa.string()))
+        self._line_chunks.append(np.array(self._lines, np.int64))
+        self._rows, self._lines = [], []
+
+    def finish(self) -> tuple[list[pa.ChunkedArray], NDArray[np.int64]]:
+        self._flush()
+        columns = [pa.chunked_array(chunks, pa.string()) for chunks in self._chunks]
+        return columns, np.concatenate(self._line_chunks)
