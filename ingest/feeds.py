@@ -226,8 +226,11 @@ def _kind(names: set[str]) -> Kind | None:
 def _no_kind(
     names: Sequence[str], line: int, feed: Feed, house: dict[str, Source], kind: Kind | None
 ) -> Refused:
-    kinds: list[Kind] = list(REQUIRED)
-    best: Kind = kind or max(kinds, key=lambda one: len(set(REQUIRED[one]) & set(house)))
+    best: Kind = "readings"
+    for one in REQUIRED:
+        if len(set(REQUIRED[one]) & set(house)) > len(set(REQUIRED[best]) & set(house)):
+            best = one
+    best = kind or best
     missing = [name for name in REQUIRED[best] if name not in house]
     near = {name.lower().replace(" ", "_"): name for name in names}
     shown = ",".join(names)[:200]
