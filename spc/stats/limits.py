@@ -130,12 +130,14 @@ def mean_limits(
     -----
     Widened limits are centre +- t(df) sqrt(sigma^2 + se^2), which for m equal lots is
     t(m - 1) s sqrt(1 + 1/m): the prediction interval of a normal sample (Hahn 1970, Journal of
-    Quality Technology 2). Map and overlay terms are means with one value a wafer: summarise them
-    with one site and pass `n_sites=1`. Wafers of one lot share its lot effect, so points of
+    Quality Technology 2). That is exact for points sampled like the baseline. For others the
+    simulated rate is 0.0025 to 0.0027 after 30 lots and 0.0014 to 0.0033 after 12. Map and overlay
+    terms are means with one value a wafer: summarise them with one site and pass `n_sites=1`.
+    Wafers of one lot share its lot effect, so points of
     `point="wafer"` are not independent of one another.
     """
-    weights = point_weights(n_wafers, n_sites, point=options.point)
-    place = np.broadcast_to(np.asarray(stream), weights.shape[:-1])
+    wafers, sites, place = np.broadcast_arrays(n_wafers, n_sites, stream)
+    weights = point_weights(wafers, sites, point=options.point)
     variance = components.variance_of(weights, place)
     df = components.df_of(weights, place)
     error = components.mean_se[place] ** 2

@@ -78,8 +78,9 @@ def robust_baseline(
 
     Notes
     -----
-    Rosner (1983), Technometrics 25, with studentised residuals for unequal weights. Clean baselines
-    of 30 points lose 0.06 points on average at alpha 0.05 (tests/stats/test_limits.py).
+    Rosner (1983), Technometrics 25, with studentised residuals for unequal weights. At alpha 0.05,
+    5.6 % of clean baselines of 30 points lose any point, 0.07 points a baseline; 7 to 11 % where
+    the sampling variances differ much (tests/stats/test_robust_baseline.py).
     """
     data = as_values(values)
     size = data.size
@@ -193,19 +194,22 @@ def _common_variance(x: FloatArray, d: FloatArray, use: BoolArray) -> FloatArray
 
 
 def _fitted_variance(x: FloatArray, d: FloatArray, use: BoolArray) -> FloatArray:
-    """Variance common to the marked points of a row, by the method of Paule & Mandel (1982).
+    """Variance common to the marked points of a row, by restricted maximum likelihood.
 
-    Solves sum of (x - mean)^2 / (common + d) = k - 1, with the mean weighted likewise; 0 where the
-    sampling variances alone explain the points.
+    Bisects the score, sum of w^2 (x - mean)^2 - sum of w + sum of w^2 / sum of w with
+    w = 1 / (common + d); 0 where the sampling variances alone explain the points.
     """
     off = np.abs(x - _median(x, use)[:, None]) * use
     high = (off**2).sum(axis=1) + 1e-300
     low = np.zeros_like(high)
     for _ in range(60):
         middle = 0.5 * (low + high)
-        weight = 1.0 / np.maximum(middle[:, None] + d, 1e-300)
-        _, square, _, _ = _moments(x, weight, use)
-        low, high = np.where(square > 1.0, middle, low), np.where(square > 1.0, high, middle)
+        w = np.where(use, 1.0 / np.maximum(middle[:, None] + d, 1e-300), 0.0)
+        center, _, total, _ = _moments(x, w, use)
+        square = w**2
+        score = (square * (x - center[:, None]) ** 2).sum(axis=1) - total
+        above = score + square.sum(axis=1) / total > 0.0
+        low, high = np.where(above, middle, low), np.where(above, high, middle)
     return 0.5 * (low + high)
 
 
@@ -243,13 +247,17 @@ def _rosner(
         ratio, k = _studentised(x, weight, left)
         place = np.argmax(ratio, axis=1)
         largest = ratio[rows, place]
-        t = t_quantile(alpha / np.maximum(k, 1), np.maximum(k - 2, 1))
-        bound = (k - 1) * t / np.sqrt(np.maximum(k - 2 + t**2, 1e-300) * np.maximum(k, 1))
         active = i <= most
-        last = np.where(active & (largest > bound), i, last)
+        last = np.where(active & (largest > _critical(alpha, k)), i, last)
         removed_at[rows[active], place[active]] = i
         left[rows[active], place[active]] = False
     return present & (removed_at > last[:, None])
+
+
+def _critical(alpha: float, k: IntArray) -> FloatArray:
+    """Rosner's critical value for the largest of k studentised deviates (k >= 3)."""
+    t = t_quantile(alpha / np.maximum(k, 1), np.maximum(k - 2, 1))
+    return (k - 1) * t / np.sqrt((np.maximum(k - 2, 1) + t**2) * np.maximum(k, 1))
 
 
 def _studentised(x: FloatArray, weight: FloatArray, use: BoolArray) -> tuple[FloatArray, IntArray]:
@@ -280,9 +288,11 @@ def _judge(
     count = np.where(keep, k[:, None] - 1, k[:, None])
     left_ss = np.maximum(square[:, None] * np.maximum(k - 1, 0)[:, None] - shrink, 0.0)
     spread = left_ss / np.maximum(count - 1, 1) * (1.0 / w + 1.0 / rest)
-    tiny = spread <= 0
+    # Points that differ by rounding alone are alike.
+    noise = 16.0 * np.finfo(float).eps * np.abs(x).max(axis=1, initial=0.0)[:, None]
+    tiny = spread <= noise**2
     score = own / np.sqrt(np.where(tiny, 1.0, spread))
-    score = np.where(tiny, np.where(own == 0, 0.0, np.sign(own) * np.inf), score)
+    score = np.where(tiny, np.where(np.abs(own) <= noise, 0.0, np.copysign(np.inf, own)), score)
     threshold = t_quantile(alpha / np.maximum(count + 1, 1), np.maximum(count - 1, 1))
     score, threshold = np.where(present, score, np.nan), np.where(present, threshold, np.nan)
     return score, threshold, center, np.sqrt(square)

@@ -153,9 +153,8 @@ def within_limits(
     options : LimitOptions
         With `widen`, F limits on the degrees of freedom of the site component.
     """
-    wafers, sites = np.asarray(n_wafers, np.float64), np.asarray(n_sites, np.float64)
-    df = wafers * (sites - 1.0) * (1.0 - np.asarray(signature_share, np.float64))
-    place = np.broadcast_to(np.asarray(stream), df.shape)
+    wafers, sites, share, place = np.broadcast_arrays(n_wafers, n_sites, signature_share, stream)
+    df = wafers * (sites - 1.0) * (1.0 - share)
     known = components.site_df[place] > 0
     sigma = np.where(known, np.sqrt(components.site[place]), np.nan)
     return spread_limits(sigma, df, df_sigma=components.site_df[place], options=options)
@@ -175,10 +174,8 @@ def wafer_spread_limits(
     `options.widen`, F limits on Satterthwaite's degrees of freedom. NaN for lots of one wafer
     and for streams whose wafer component is pooled into the lot.
     """
-    wafers, sites = np.broadcast_arrays(
-        np.asarray(n_wafers, np.float64), np.asarray(n_sites, np.float64)
-    )
-    place = np.broadcast_to(np.asarray(stream), wafers.shape)
+    wafers, sites, place = np.broadcast_arrays(n_wafers, n_sites, stream)
+    sites = sites.astype(np.float64)
     zero, one = np.zeros_like(sites), np.ones_like(sites)
     weights = np.stack([1.0 / sites, one, zero, zero], axis=-1)
     pooled = components.n_wafers[place] == components.n_lots[place]
