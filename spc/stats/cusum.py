@@ -13,11 +13,14 @@ from numpy.typing import ArrayLike, NDArray
 
 from spc.stats.designs import CusumDesign
 from spc.stats.segments import (
+    Blocks,
     BoolArray,
     FloatArray,
     IntArray,
     Missing,
+    Runs,
     as_points,
+    blank,
     find_runs,
     map_rows,
 )
@@ -134,31 +137,41 @@ def cusum(
     points = as_points(z, missing)
     begin = (design.head_start, design.head_start) if start is None else start
     up, down = (_starts(value, points) for value in begin)
-    upper, lower = np.full(points.shape, np.nan), np.full(points.shape, np.nan)
-    first = np.zeros(points.shape, dtype=np.int64)
     runs = find_runs(points, segment)
-
-    def kernel(block: FloatArray, rows: IntArray) -> tuple[FloatArray, FloatArray]:
-        total = np.cumsum(block, axis=1)
-        drop = design.k * np.arange(1.0, block.shape[1] + 1.0)
-        return _above(total - drop, up[rows]), _above(-total - drop, down[rows])
-
-    map_rows(points, runs, kernel, (upper, lower))
-    if not runs.whole and runs.lengths.size:
-        flat = runs.starts if runs.order is None else runs.order[runs.starts]
-        np.maximum.at(first.reshape(-1), flat, flat % points.shape[-1])
-        first = np.maximum.accumulate(first, axis=-1)
+    upper, lower = blank(points, runs), blank(points, runs)
     side = np.zeros(points.shape, dtype=np.int8)
-    side[upper > design.h] = 1
-    side[(lower > design.h) & ~(upper > lower)] = -1
-    return CusumPath(design, upper, lower, side, first)
+
+    def kernel(blocks: Blocks, rows: IntArray, results: Blocks) -> None:
+        (block,), (high, low, mark) = blocks, results
+        # In place: fresh memory costs more than the arithmetic.
+        np.cumsum(block, axis=1, out=high)
+        np.negative(high, out=low)
+        drop = design.k * np.arange(1.0, block.shape[1] + 1.0)
+        floor = np.empty(block.shape)
+        for walk, start in ((high, up[rows]), (low, down[rows])):
+            walk -= drop
+            np.minimum.accumulate(walk, axis=1, out=floor)
+            np.minimum(floor, -start[:, None], out=floor)
+            walk -= floor
+        rise, fall = high > design.h, low > design.h
+        both = rise & fall
+        if both.any():
+            rise &= ~both | (high > low)
+            fall &= ~rise
+        np.subtract(rise.view(np.int8), fall.view(np.int8), out=mark)
+
+    map_rows((points,), runs, kernel, (upper, lower, side))
+    return CusumPath(design, upper, lower, side, _run_starts(runs))
 
 
-def _above(walk: FloatArray, start: FloatArray) -> FloatArray:
-    """Height of a walk above its lowest level so far, which begins at ``-start``."""
-    floor = np.minimum.accumulate(walk, axis=1)
-    np.minimum(floor, -start[:, None], out=floor)
-    return np.asarray(np.subtract(walk, floor, out=floor))
+def _run_starts(runs: Runs) -> IntArray:
+    """Position of the first point of the run that each point is in."""
+    if runs.whole or runs.lengths.size == 0:
+        return np.broadcast_to(np.int64(0), runs.shape)
+    first = np.zeros(runs.shape, dtype=np.int64)
+    flat = runs.starts if runs.order is None else runs.order[runs.starts]
+    first.reshape(-1)[flat] = flat % runs.shape[-1]
+    return np.asarray(np.maximum.accumulate(first, axis=-1))
 
 
 def _starts(value: ArrayLike, points: FloatArray) -> FloatArray:

@@ -7,18 +7,21 @@ Journal of Quality Technology 31:75-86 (from memory).
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
 from spc.stats.designs import EwmaDesign
 from spc.stats.segments import (
+    Blocks,
     BoolArray,
     FloatArray,
     IntArray,
     Missing,
+    Runs,
     as_points,
+    blank,
     find_runs,
     map_rows,
 )
@@ -89,12 +92,13 @@ def ewma(
     EwmaDesign(lam, 1.0)
     points = as_points(z, missing)
     begin = _per_stream(start, points, "start")
-    out = np.full(points.shape, np.nan)
+    runs = find_runs(points, segment)
+    out = blank(points, runs)
 
-    def kernel(block: FloatArray, rows: IntArray) -> tuple[FloatArray]:
-        return (_smooth(block, lam, begin[rows]),)
+    def kernel(blocks: Blocks, rows: IntArray, results: Blocks) -> None:
+        first_order_recursion(lam * blocks[0], 1.0 - lam, begin[rows], out=results[0])
 
-    map_rows(points, find_runs(points, segment), kernel, (out,))
+    map_rows((points,), runs, kernel, (out,))
     return out
 
 
@@ -137,32 +141,74 @@ def ewma_chart(
     keep it, ``lam / (2 - lam) sigma_1^2``.
     """
     points = as_points(x, missing)
-    middle = np.broadcast_to(np.asarray(center, dtype=np.float64), points.shape)
-    spread = np.broadcast_to(np.asarray(sigma, dtype=np.float64), points.shape)
     there = ~np.isnan(points)
-    if not np.isfinite(middle[there]).all():
-        raise ValueError("the centre of every point must be a finite number")
-    if not (np.isfinite(spread[there]) & (spread[there] > 0.0)).all():
-        raise ValueError("the sigma of every point must be a finite number above 0")
+    middle = _beside(center, there, "centre")
+    spread = _beside(sigma, there, "sigma")
     runs = find_runs(points, segment)
-    lam = design.lam
+    if runs.whole and middle.shape[-1] == 1 and spread.shape[-1] == 1:
+        return _even_chart(points, design, middle, spread, runs)
+    value, sd, lower, upper = (blank(points, runs) for _ in range(4))
+    side = np.zeros(points.shape, dtype=np.int8)
+    lam, keep = design.lam, 1.0 - design.lam
 
-    def smooth(block: FloatArray, rows: IntArray) -> tuple[FloatArray, FloatArray]:
-        age = np.broadcast_to(np.arange(1, block.shape[1] + 1), block.shape)
-        return _smooth(block, lam, np.zeros(rows.size)), age.astype(np.float64)
+    def kernel(blocks: Blocks, rows: IntArray, results: Blocks) -> None:
+        (x, mid, s), (out, spread_now, below, above, mark) = blocks, results
+        start = np.zeros(rows.size)
+        first_order_recursion(lam * (x - mid), keep, start, out=out)
+        square = s * s
+        first = start if design.time_varying else square[:, 0] * (lam / (2.0 - lam))
+        first_order_recursion(lam**2 * square, keep**2, first, out=spread_now)
+        np.sqrt(spread_now, out=spread_now)
+        reach = design.limit * spread_now
+        if design.fast_start is not None:
+            reach *= _opening(design, np.arange(1.0, x.shape[1] + 1.0))
+        np.subtract((out > reach).view(np.int8), (out < -reach).view(np.int8), out=mark)
+        np.subtract(mid, reach, out=below)
+        np.add(mid, reach, out=above)
+        out += mid
 
-    def spread_out(block: FloatArray, rows: IntArray) -> tuple[FloatArray]:
-        first = block[:, 0] * (0.0 if design.time_varying else lam / (2.0 - lam))
-        return (first_order_recursion(lam**2 * block, (1.0 - lam) ** 2, first),)
+    whole_shape = tuple(np.broadcast_to(a, points.shape) for a in (middle, spread))
+    map_rows((points, *whole_shape), runs, kernel, (value, sd, lower, upper, side))
+    return EwmaPath(value, sd, whole_shape[0], lower, upper, side)
 
-    deviation, age = np.full(points.shape, np.nan), np.ones(points.shape)
-    variance = np.full(points.shape, np.nan)
-    map_rows(points - middle, runs, smooth, (deviation, age))
-    map_rows(np.where(there, spread**2, np.nan), runs, spread_out, (variance,))
-    sd = np.sqrt(variance)
-    reach = design.limit * sd * (1.0 if design.fast_start is None else _opening(design, age))
-    side = (deviation > reach).astype(np.int8) - (deviation < -reach).astype(np.int8)
-    return EwmaPath(middle + deviation, sd, middle, middle - reach, middle + reach, side)
+
+def _beside(value: ArrayLike, there: BoolArray, name: str) -> FloatArray:
+    """Check a centre or sigma; the last axis is kept short where it does not change in time."""
+    given = np.asarray(value, dtype=np.float64)
+    given = given.reshape((1,) * (there.ndim - given.ndim) + given.shape)
+    used = (
+        given[np.broadcast_to(there, np.broadcast_shapes(given.shape, there.shape))]
+        if (given.shape == there.shape)
+        else given
+    )
+    if not np.isfinite(used).all() or (name == "sigma" and not (used > 0.0).all()):
+        above = " above 0" if name == "sigma" else ""
+        raise ValueError(f"the {name} of every point must be a finite number{above}")
+    return given
+
+
+def _even_chart(
+    points: FloatArray, design: EwmaDesign, middle: FloatArray, spread: FloatArray, runs: Runs
+) -> EwmaPath:
+    """The chart of streams with one centre and sigma each: limits need no pass over points."""
+    settled = math.sqrt(design.lam / (2.0 - design.lam))
+    age = np.arange(1, points.shape[-1] + 1)
+    plain = replace(design, fast_start=None)
+    sd = spread * settled * limit_factors(plain, age)
+    reach = design.limit * spread * settled * limit_factors(design, age)
+    lower, upper = (np.broadcast_to(a, points.shape) for a in (middle - reach, middle + reach))
+    begin = np.broadcast_to(middle, (*points.shape[:-1], 1)).reshape(-1)
+    value = blank(points, runs)
+    side = np.zeros(points.shape, dtype=np.int8)
+
+    def kernel(blocks: Blocks, rows: IntArray, results: Blocks) -> None:
+        (x, low, high), (out, mark) = blocks, results
+        first_order_recursion(design.lam * x, 1.0 - design.lam, begin[rows], out=out)
+        np.subtract((out > high).view(np.int8), (out < low).view(np.int8), out=mark)
+
+    map_rows((points, lower, upper), runs, kernel, (value, side))
+    spreads, centers = (np.broadcast_to(a, points.shape) for a in (sd, middle))
+    return EwmaPath(value, spreads, centers, lower, upper, side)
 
 
 def limit_factors(design: EwmaDesign, t: ArrayLike) -> FloatArray:
@@ -192,11 +238,9 @@ def _per_stream(value: ArrayLike, points: FloatArray, name: str) -> FloatArray:
     return np.broadcast_to(given.reshape(-1), (streams,)).astype(np.float64)
 
 
-def _smooth(block: FloatArray, lam: float, start: FloatArray) -> FloatArray:
-    return first_order_recursion(lam * block, 1.0 - lam, start)
-
-
-def first_order_recursion(inputs: FloatArray, keep: float, start: FloatArray) -> FloatArray:
+def first_order_recursion(
+    inputs: FloatArray, keep: float, start: FloatArray, out: FloatArray | None = None
+) -> FloatArray:
     """Return ``y_t = inputs_t + keep y_{t-1}`` along rows, from ``y_0 = start``.
 
     Parameters
@@ -205,13 +249,17 @@ def first_order_recursion(inputs: FloatArray, keep: float, start: FloatArray) ->
     keep : float
         In (-1, 1).
     start : array, shape (streams,)
+    out : array, shape (streams, n), optional
+        Where to put the result.
 
     Notes
     -----
     By doubling: after pass p a value holds the last ``2^p`` inputs, and the passes stop where
     what is left weighs nothing.  As fast as a compiled filter, and no heavy import.
     """
-    out = inputs.copy()
+    if out is None:
+        out = np.empty(inputs.shape)
+    out[...] = inputs
     reach, weight = 1, keep
     spare = np.empty_like(out)
     while reach < out.shape[1] and abs(weight) > 1e-18:

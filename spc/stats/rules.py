@@ -24,6 +24,7 @@ import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
 from spc.stats.segments import (
+    Blocks,
     BoolArray,
     FloatArray,
     IntArray,
@@ -273,8 +274,7 @@ def evaluate(
     hits = np.zeros((len(chosen), *points.shape), dtype=np.bool_)
     side = np.zeros((len(chosen), *points.shape), dtype=np.int8)
     if chosen:
-        kernel = _kernel(chosen)
-        map_rows(points, runs, lambda block, rows: kernel(block), (hits, side))
+        map_rows((points,), runs, _kernel(chosen), (hits, side))
     codes = None if segment is None else np.broadcast_to(np.asarray(segment), points.shape)
     return RuleHits(chosen, hits, side, points, codes)
 
@@ -318,15 +318,12 @@ def first_of_run(
     return marks & there & ~before
 
 
-def _kernel(
-    rules: tuple[Rule, ...],
-) -> Callable[[FloatArray], tuple[BoolArray, NDArray[np.int8]]]:
-    """Make the evaluator of a rectangle of runs; zones and steps are worked out once."""
+def _kernel(rules: tuple[Rule, ...]) -> Callable[[Blocks, IntArray, Blocks], None]:
+    """Make the evaluator of a rectangle of runs."""
 
-    def run(block: FloatArray) -> tuple[BoolArray, NDArray[np.int8]]:
-        shape = (len(rules), *block.shape)
-        hits = np.empty(shape, dtype=np.bool_)
-        side = np.zeros(shape, dtype=np.int8)
+    def run(blocks: Blocks, rows: IntArray, results: Blocks) -> None:
+        (block,), (hits, side) = blocks, results
+        side[...] = 0
         steps = _steps(block) if any(r.kind in ("trending", "alternating") for r in rules) else None
         for i, rule in enumerate(rules):
             if rule.kind in ("within", "outside"):
@@ -345,7 +342,6 @@ def _kernel(
                     down = _k_of_m(block < -rule.s, rule.k, rule.m)
                 np.logical_or(up, down, out=hits[i])
                 np.subtract(up.view(np.int8), down.view(np.int8), out=side[i])
-        return hits, side
 
     return run
 

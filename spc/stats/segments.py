@@ -19,9 +19,10 @@ FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
 BoolArray = NDArray[np.bool_]
 Missing = Literal["raise", "skip"]
+Blocks = tuple[NDArray[Any], ...]
 
 # A rectangle of this many points stays in the processor's cache through all passes of a chart.
-_BLOCK_POINTS = 1 << 16
+_BLOCK_POINTS = 1 << 17
 
 
 @dataclass(frozen=True)
@@ -145,45 +146,56 @@ def run_blocks(runs: Runs) -> list[tuple[IntArray, BoolArray]]:
     return blocks
 
 
+def blank(points: FloatArray, runs: Runs) -> FloatArray:
+    """Return an array to be filled by :func:`map_rows`; NaN where there is no point."""
+    return np.empty(points.shape) if runs.order is None else np.full(points.shape, np.nan)
+
+
 def map_rows(
-    points: FloatArray,
+    inputs: tuple[FloatArray, ...],
     runs: Runs,
-    kernel: Callable[[FloatArray, IntArray], tuple[NDArray[Any], ...]],
+    kernel: Callable[[Blocks, IntArray, Blocks], None],
     out: tuple[NDArray[Any], ...],
 ) -> None:
     """Fill `out` with what `kernel` makes of the runs, rectangle by rectangle.
 
     Parameters
     ----------
-    points : array, shape (n,) or (streams, n)
+    inputs : tuple of arrays, shape (n,) or (streams, n)
+        The points, and what else goes with each of them.
     runs : Runs
-        From :func:`find_runs` of the same points.
+        From :func:`find_runs` of the points.
     kernel : callable
-        ``kernel(block, rows)`` takes a rectangle of points ``(runs, width)`` and the stream of
-        each of its runs, and returns arrays whose last two axes are ``(runs, width)``; it must
-        be causal (a value may depend on earlier points of its row alone).
+        ``kernel(blocks, rows, results)`` takes a rectangle ``(runs, width)`` of each input and
+        the stream of each of its runs, and fills rectangles of the results, whose last two axes
+        are ``(runs, width)``.  It must be causal: a value may depend on earlier points of its
+        row alone.
     out : tuple of arrays
-        One for each result, last axes like `points`; places without a point are left alone.
+        One for each result, last axes like the points; places without a point are left alone.
     """
-    width = points.shape[-1]
-    if runs.lengths.size == 0 or points.size == 0:
+    width = runs.shape[-1]
+    if runs.lengths.size == 0 or width == 0:
         return
     if runs.whole:
-        flat = points.reshape(-1, width)
+        single = len(runs.shape) == 1
+        rows_of = [a[None] if single else a for a in inputs]
+        targets = [a[..., None, :] if single else a for a in out]
+        streams = rows_of[0].shape[0]
         per_block = max(1, _BLOCK_POINTS // width)
-        targets = [a.reshape(*a.shape[: a.ndim - points.ndim], -1, width) for a in out]
-        for low in range(0, flat.shape[0], per_block):
-            rows = np.arange(low, min(low + per_block, flat.shape[0]))
-            results = kernel(flat[low : low + per_block], rows)
-            for target, result in zip(targets, results, strict=True):
-                target[..., low : low + per_block, :] = result
+        for low in range(0, streams, per_block):
+            high = min(low + per_block, streams)
+            kernel(
+                tuple(a[low:high] for a in rows_of),
+                np.arange(low, high),
+                tuple(a[..., low:high, :] for a in targets),
+            )
         return
-    flat_points = points.reshape(-1)
-    flat_out = [a.reshape(*a.shape[: a.ndim - points.ndim], -1) for a in out]
+    flat_in = [a.reshape(-1) for a in inputs]
+    flat_out = [a.reshape(*a.shape[: a.ndim - len(runs.shape)], -1) for a in out]
     for positions, real in run_blocks(runs):
+        results = tuple(np.empty((*a.shape[:-1], *positions.shape), a.dtype) for a in flat_out)
+        kernel(tuple(a[positions] for a in flat_in), positions[:, 0] // width, results)
         full = bool(real.all())
-        block = flat_points[positions]
-        results = kernel(block if full else np.where(real, block, 0.0), positions[:, 0] // width)
         for flat_target, result in zip(flat_out, results, strict=True):
             if full:
                 flat_target[..., positions] = result
