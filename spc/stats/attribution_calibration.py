@@ -107,7 +107,7 @@ class _Sampler:
         kappa = np.where(self.crowd > 1, noise.kappa[family], 1.0)
         z = np.sqrt(kappa) * common + np.sqrt(1.0 - kappa) * rng.standard_normal(len(series))
         z = self._correlate(z, noise.phi[series])[noise.point]
-        lot = noise.lot_own + noise.lot_shared
+        lot = noise.lot
         own = rng.standard_normal(len(e.series)) * np.sqrt(noise.own)
         out = np.where(self.single, np.sqrt(lot + noise.own) * z, np.sqrt(lot) * z + own)
         k = noise.kappa[e.family]

@@ -179,9 +179,11 @@ def _random_effect(
     known = a > typical
     q = np.where(known, a * mean_level**2, 0.0).sum(0)
     degrees = np.maximum(known.sum(0) - 1, 0)
-    excess = q - degrees
-    tau2 = np.maximum(excess, 0.0) / np.maximum(np.where(known, a, 0.0).sum(0), 1e-300)
-    tau2 = np.where((excess > 2.0 * np.sqrt(2.0 * degrees)) & (degrees > 0), tau2, 0.0)
+    # Two standard deviations of the chi-square are taken off: an offset has to be there, and a
+    # handful of batches must not talk the variance up.
+    excess = np.maximum(q - degrees - 2.0 * np.sqrt(2.0 * degrees), 0.0)
+    tau2 = excess / np.maximum(np.where(known, a, 0.0).sum(0), 1e-300)
+    tau2 = np.where(degrees > 0, tau2, 0.0)
     shrink = tau2 * a / (1.0 + tau2 * a)
     blup = np.where(known, mean_level * shrink, 0.0)
     return blup, tau2 / (1.0 + tau2 * a)

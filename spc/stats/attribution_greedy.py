@@ -20,6 +20,7 @@ from spc.stats.attribution_evidence import FloatArray, statistic_class
 from spc.stats.attribution_state import Candidate, Found, State
 
 _HOPELESS = -3.0
+_BORNE_OUT = 3.0
 _PASSES = 2
 _MERGE_SLACK = 1.0
 
@@ -56,21 +57,23 @@ class Search:
             candidate = self._locate(effect.level.factors, effect.level.names)
             if candidate is None:
                 continue
-            found = self._at(candidate, self.left())
-            if found is not None and found.profile.gain > 3.0:
-                self.found.append(replace(found, previous=i))
+            found = self._at(candidate, self.left(), previous=i)
+            if found is not None and found.profile.gain > _BORNE_OUT:
+                self.found.append(found)
         self.refit()
 
     def run(self) -> list[Found]:
         """Find effects until chance could do as well; returns them, strongest first."""
         alpha = self.state.options.alpha
         for _ in range(self.state.options.max_effects):
-            best = self.state.best(self.left(), self.state.plans)
-            if best is None or best.score < _HOPELESS:
+            left = self.left()
+            best = self.state.best(left, fresh=True)
+            if best is None:
                 break
-            if self.calibration.p_value(best.score) > alpha:
+            strength = self.state.strength(best.candidate, left, fresh=True)
+            if strength < _HOPELESS or self.calibration.p_value(strength) > alpha:
                 break
-            self.found.append(best)
+            self.found.append(replace(best, strength=strength))
             self.refit()
         self.settle()
         return sorted(self.found, key=lambda f: -f.profile.gain)
@@ -79,9 +82,9 @@ class Search:
         """Refit all effects in turn, level kept, onset, form and sizes free."""
         for _ in range(_PASSES if len(self.found) > 1 else 0):
             for i, found in enumerate(self.found):
-                again = self._at(found.candidate, self.left([found]))
+                again = self._at(found.candidate, self.left([found]), found.previous)
                 if again is not None:
-                    self.found[i] = replace(again, previous=found.previous)
+                    self.found[i] = again
 
     def settle(self) -> None:
         """Let each effect change its level, make one of what one cause explains, drop the rest."""
@@ -91,22 +94,29 @@ class Search:
         self._merge()
         self._absorb()
         alpha = self.state.options.alpha
+        for i, found in enumerate(self.found):
+            left = self.left([found])
+            strength = self.state.strength(found.candidate, left, found.fresh)
+            self.found[i] = replace(found, strength=strength)
         self.found = [
             f
             for f in self.found
-            if f.previous is not None or self.calibration.p_value(f.score) <= alpha
+            if not f.fresh or self.calibration.p_value(f.strength) <= alpha
         ]
 
-    def _at(self, candidate: Candidate, residual: FloatArray) -> Found | None:
-        profile = self.state.look(candidate, self.state.whitened(residual))
-        if profile is None:
+    def _at(
+        self, candidate: Candidate, residual: FloatArray, previous: int | None = None
+    ) -> Found | None:
+        y = self.state.whitened(residual)
+        profile = self.state.look(candidate, y, fresh=previous is None)
+        if profile is None or not np.isfinite(profile.score):
             return None
         fit = self.state.fit(candidate, profile, residual)
-        return Found(candidate, profile, fit) if fit is not None else None
+        return Found(candidate, profile, fit, previous=previous) if fit is not None else None
 
     def _relevel(self, i: int) -> None:
         found = self.found[i]
-        best = self.state.best(self.left([found]), self.state.all_plans, self._mask([found]))
+        best = self.state.best(self.left([found]), found.fresh, self._mask([found]))
         if best is None or best.candidate.key == found.candidate.key:
             return
         if best.score > found.score + 0.5 and _overlap(best, found) > 0.3:
@@ -126,7 +136,8 @@ class Search:
             group = [f for f in self.found if _onsets_meet(f, found)]
             if len(group) < 2:
                 continue
-            best = self.state.best(self.left(group), self.state.all_plans, self._mask(group))
+            fresh = all(f.fresh for f in group)
+            best = self.state.best(self.left(group), fresh, self._mask(group))
             if best is None or best.score < sum(f.score for f in group) - _MERGE_SLACK:
                 continue
             if any(_overlap(f, best) == 0.0 for f in group):

@@ -34,7 +34,8 @@ class Noise:
     believes, in unit. Point arrays: `point_factor`. Group arrays: `group_factor`. Family arrays:
     `sigma` (typical sigma of a plotted point, unit), `kappa` (part of the lot variance that is
     shared by the streams of a lot), `correlation` (F, F) of lots between families.
-    Series arrays: `phi`, `center` (variance of the baseline centre).
+    Series arrays: `phi`, `center` (variance of the baseline centre). `many` are the cells of
+    points with several cells, sorted by point; `many_first`, `many_size` index those points.
     """
 
     weight: FloatArray
@@ -52,6 +53,9 @@ class Noise:
     correlation: FloatArray
     phi: FloatArray
     center: FloatArray
+    many: IntArray
+    many_first: IntArray
+    many_size: IntArray
 
     def whiten(self, residual: FloatArray) -> FloatArray:
         """Return the inverse covariance times the residual, shape (n,), 1/unit.
@@ -85,8 +89,28 @@ class Noise:
         return info, share
 
     def clip(self, residual: FloatArray) -> FloatArray:
-        """Return the residual with wild values brought in to the cap of their family."""
-        return np.clip(residual, -self.cap, self.cap)
+        """Return the residual with wild values brought in, (n,).
+
+        A cell is first held within its family's cap of its own sigma around the median of its
+        point (one bad wafer), then within the cap of its whole sigma around 0.
+        """
+        many = self.many
+        if not len(many):
+            return np.clip(residual, -self.cap, self.cap)
+        out = residual.copy()
+        order = np.lexsort((residual[many], self.point[many]))
+        value = residual[many][order]
+        first, size = self.many_first, self.many_size
+        middle = 0.5 * (value[first + (size - 1) // 2] + value[first + size // 2])
+        around = np.repeat(middle, size)
+        room = (self.cap[many] * np.sqrt(self.own[many] / (self.own + self.lot)[many]))[order]
+        out[many[order]] = np.clip(value, around - room, around + room)
+        return np.clip(out, -self.cap, self.cap)
+
+    @property
+    def lot(self) -> FloatArray:
+        """Whole lot variance of each cell, shape (n,)."""
+        return self.lot_own + self.lot_shared
 
 
 def ar1_inflation(m: FloatArray, phi: FloatArray) -> FloatArray:
@@ -124,6 +148,12 @@ def estimate_noise(evidence: Evidence, residual: FloatArray) -> Noise:
     u_group = np.bincount(group, lot_shared) / np.bincount(group)
     sigma = _typical_sigma(points, np.sqrt(points.variance * scale[points.series]), n_families)
     z = residual / np.sqrt(own + lot)
+    cells_of = np.bincount(points.code)
+    by_point = np.argsort(points.code, kind="stable")
+    many = by_point[cells_of[points.code[by_point]] > 1]
+    _, many_first, many_size = np.unique(
+        points.code[many], return_index=True, return_counts=True
+    )
     return Noise(
         weight=weight,
         point=points.code,
@@ -140,6 +170,9 @@ def estimate_noise(evidence: Evidence, residual: FloatArray) -> Noise:
         correlation=_family_correlation(evidence, z),
         phi=phi,
         center=evidence.var_center * scale,
+        many=many,
+        many_first=many_first,
+        many_size=many_size,
     )
 
 

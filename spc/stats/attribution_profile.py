@@ -16,15 +16,16 @@ from spc.stats.attribution_candidates import Column
 from spc.stats.attribution_evidence import (
     DAY,
     AttributionOptions,
+    BoolArray,
     Evidence,
     FloatArray,
     IntArray,
 )
 from spc.stats.attribution_noise import Noise
-from spc.stats.attribution_search import OffsetModel, inclusion, offset_model
+from spc.stats.attribution_search import OffsetModel, inclusion, new_cells, offset_model
 
-_MAX_BINS = 120
-_NEAR = 30
+_MAX_BINS = 72
+_NEAR = 12
 
 
 @dataclass(frozen=True)
@@ -64,7 +65,7 @@ def profile_level(
 ) -> Profile | None:
     """Look closely at one level; `y` whitened residuals, `unknown` (F,) offset variance.
 
-    Returns None when the level has no monitored cell.
+    Only windows with a cell measured after `options.since` are looked at. Returns None when the level has no monitored cell.
     """
     cells = np.flatnonzero(evidence.monitoring & column.cells(level))
     if not len(cells):
@@ -105,6 +106,7 @@ class _Look:
     log_pi: FloatArray
     tau2: FloatArray
     lot: IntArray
+    new: BoolArray
     born: bool
     options: AttributionOptions
     origin: float
@@ -124,7 +126,7 @@ class _Look:
             time=(seconds - events[-1]) / DAY, model=model,
             log_pi=inclusion(evidence, families, np.array([0])),
             tau2=(options.prior_sigmas * noise.sigma[families]) ** 2,
-            lot=evidence.lot[cells], options=options, origin=float(events[-1]),
+            lot=evidence.lot[cells], new=new_cells(evidence, options)[cells], options=options, origin=float(events[-1]),
             born=not bool(np.any(column.cells(int(level)) & ~evidence.monitoring)),
         )  # fmt: skip
 
@@ -162,7 +164,8 @@ class _Look:
             info, w_i1 - t0 * w_i0, np.maximum(w_points, 0.0),
             self.tau2[:, None, None] / reach[None] ** 2,
         ).log_bayes(window(s1) - t0 * w_s0, total[:, None, None])  # fmt: skip
-        upper = np.arange(k)[:, None] <= np.arange(k)[None, :]
+        fresh = np.bincount(at, self.new, k)[::-1].cumsum()[::-1]
+        upper = fresh[:, None] - np.append(fresh, 0.0)[None, 1:] > 0
         raw_step = np.where(upper, self._over_families(step), -np.inf)
         raw_ramp = np.where(upper, self._over_families(ramp), -np.inf)
         raw_lot, prior_lot = self._lots(total)
@@ -183,7 +186,7 @@ class _Look:
         out: FloatArray = np.logaddexp(np.log1p(-np.exp(pi)), pi + b).sum(0)
         return out
 
-    def _lots(self, total: FloatArray) -> tuple[FloatArray, float]:
+    def _lots(self, total: FloatArray) -> tuple[FloatArray, FloatArray]:
         lots, entry = np.unique(self.lot, return_inverse=True)
         n_families = len(self.log_pi)
         key = self.family * len(lots) + entry
@@ -193,9 +196,9 @@ class _Look:
 
         info = table(self.info)
         terms = self.model.terms(info, info, table(self.share), 4.0 * self.tau2[:, None])
-        return self._over_families(terms.log_bayes(table(self.y), total[:, None])), -float(
-            np.log(len(lots))
-        )
+        fresh = np.bincount(entry, self.new) > 0
+        prior = np.where(fresh, -np.log(max(int(fresh.sum()), 1)), -np.inf)
+        return self._over_families(terms.log_bayes(table(self.y), total[:, None])), prior
 
     def _priors(self, k: int) -> tuple[FloatArray, FloatArray, FloatArray]:
         """Log priors of open steps, open ramps (k,) and closed windows (k, k)."""

@@ -143,7 +143,8 @@ def scan(plan: Plan, y: FloatArray) -> Best:
     score = np.full(n_levels, -np.inf)
     kind = np.zeros(n_levels, dtype=np.int64)
     where = np.zeros(n_levels, dtype=np.int64)
-    edge_of_pair = np.repeat(plan.edges, np.diff(np.append(plan.start, n_pairs)), axis=0)
+    edges = np.where(np.isfinite(plan.edges), plan.edges, 0.0)
+    edge_of_pair = np.repeat(edges, np.diff(np.append(plan.start, n_pairs)), axis=0)
     for i, windows in enumerate(plan.windows):
         if windows.kind == "lot":
             best, at = _scan_lots(plan, windows, own, total)

@@ -14,14 +14,22 @@ from spc.stats.attribution_candidates import (
     conjunction_within,
     usual_offsets,
 )
-from spc.stats.attribution_evidence import AttributionOptions, BoolArray, Evidence, FloatArray
+from spc.stats.attribution_evidence import (
+    AttributionOptions,
+    BoolArray,
+    Evidence,
+    FloatArray,
+    IntArray,
+)
 from spc.stats.attribution_fit import Fit, fit_effect
 from spc.stats.attribution_noise import Noise, estimate_noise
 from spc.stats.attribution_profile import Profile, profile_level
 from spc.stats.attribution_search import Plan, make_plan, scan
 
+ALIAS = 0.97
 _KEEP = 8
-_CLOSE = 7.0
+_CLOSE = 5.0
+_TIE = 2.0
 _REFINE = 3
 _CONJUNCTION_PRIOR = 0.1
 
@@ -45,11 +53,12 @@ class Candidate:
 
 @dataclass(frozen=True)
 class Found:
-    """A candidate with its close look and its fitted sizes."""
+    """A candidate with its close look, its fitted sizes and its coarse score (`strength`)."""
 
     candidate: Candidate
     profile: Profile
     fit: Fit
+    strength: float = -np.inf
     previous: int | None = None
     absorbed: tuple[Candidate, ...] = ()
 
@@ -57,6 +66,11 @@ class Found:
     def score(self) -> float:
         """Log score of the close look, priors included."""
         return self.profile.score
+
+    @property
+    def fresh(self) -> bool:
+        """Whether the effect is new in this look."""
+        return self.previous is None
 
 
 @dataclass(frozen=True)
@@ -93,15 +107,16 @@ class State:
         return self.noise.whiten(self.noise.clip(residual))
 
     def candidates(
-        self, residual: FloatArray, plans: tuple[Plan, ...], touching: BoolArray | None = None
+        self, residual: FloatArray, fresh: bool, touching: BoolArray | None = None
     ) -> list[Candidate]:
-        """Scan the plans and return the best levels, best first.
+        """Scan all columns and return the best levels, best first.
 
-        `touching` (n,) keeps only levels that share monitored cells with the mask.
+        `fresh`: only windows that hold something new (options.since). `touching` (n,) keeps only
+        levels that share monitored cells with the mask.
         """
         y = self.whitened(residual)
         out: list[Candidate] = []
-        for plan in plans:
+        for plan in self.plans if fresh else self.all_plans:
             best = scan(plan, y)
             allowed = np.isfinite(best.score)
             if touching is not None:
@@ -114,19 +129,37 @@ class State:
         out.sort(key=lambda c: -c.score)
         return out
 
+    def strength(self, candidate: Candidate, residual: FloatArray, fresh: bool) -> float:
+        """Return the coarse score of one level, the statistic that the null calibrates."""
+        y = self.whitened(residual)
+        plans = self.plans if fresh else self.all_plans
+        plan = next((p for p in plans if p.column is candidate.column), None)
+        if plan is None:
+            prior = candidate.log_prior
+            unknown = np.tile(candidate.unknown, (len(candidate.column.names), 1))
+            options = self.options if fresh else replace(self.options, since=None)
+            codes = np.where(candidate.column.cells(candidate.level), candidate.level, -1)
+            column = replace(candidate.column, codes=codes)
+            plan = make_plan(self.evidence, self.noise, column, unknown, options, prior)
+            if plan is None:
+                return -np.inf
+        at = np.flatnonzero(plan.active == candidate.level)
+        return float(scan(plan, y).score[at[0]]) if len(at) else -np.inf
+
     def candidate(self, column: Column, level: int, score: float = -np.inf) -> Candidate:
         """Return a level of one of the bay's columns as a candidate."""
         plan = next((p for p in self.all_plans if p.column is column), None)
         active = len(plan.active) if plan is not None else len(column.names)
         index = next(i for i, c in enumerate(self.columns) if c is column)
-        prior = column_prior(self.columns) - float(np.log(max(active, 1)))
+        prior = column_prior(self.columns, column) - float(np.log(max(active, 1)))
         return Candidate(column, level, prior, self.offsets.variance[index][level], score)
 
-    def look(self, candidate: Candidate, y: FloatArray) -> Profile | None:
+    def look(self, candidate: Candidate, y: FloatArray, fresh: bool) -> Profile | None:
         """Look closely at a candidate."""
+        options = self.options if fresh else replace(self.options, since=None)
         return profile_level(
             self.evidence, self.noise, candidate.column, candidate.level, y, candidate.unknown,
-            self.options, candidate.log_prior,
+            options, candidate.log_prior,
         )  # fmt: skip
 
     def fit(self, candidate: Candidate, profile: Profile, residual: FloatArray) -> Fit | None:
@@ -137,31 +170,77 @@ class State:
         )  # fmt: skip
 
     def best(
-        self, residual: FloatArray, plans: tuple[Plan, ...], touching: BoolArray | None = None
+        self, residual: FloatArray, fresh: bool, touching: BoolArray | None = None
     ) -> Found | None:
         """Return the best explanation of the residuals, conjunctions below the best levels
-        included; the earlier column wins a tie. None if there is nothing to look at."""
-        rough = self.candidates(residual, plans, touching)
+        included. None if there is nothing to look at."""
+        rough = self.candidates(residual, fresh, touching)
         if not rough:
             return None
         rough = [c for c in rough if c.score > rough[0].score - _CLOSE][:_KEEP]
         y = self.whitened(residual)
-        rough += self._conjunctions(rough[:_REFINE], y)
-        best: tuple[Candidate, Profile] | None = None
-        for candidate in rough:
-            profile = self.look(candidate, y)
-            if profile is None:
-                continue
-            if best is None or profile.score > best[1].score + 1e-9:
-                best = candidate, profile
-        if best is None:
+        rough += self._conjunctions(rough[:_REFINE], y, fresh)
+        looked = [(c, p) for c in rough if (p := self.look(c, y, fresh)) is not None]
+        found = [
+            Found(c, p, fit)
+            for c, p in looked
+            if p.score >= max(q.score for _, q in looked) - _TIE
+            and (fit := self.fit(c, p, residual)) is not None
+        ]
+        if not found:
             return None
-        fit = self.fit(*best, residual)
-        return Found(*best, fit) if fit is not None else None
+        best = self._preferred(found)
+        if best.candidate.column.factors == (WHOLE,):
+            return self._instead_of_whole(best, y, residual, fresh)
+        return best
 
-    def _conjunctions(self, parents: list[Candidate], y: FloatArray) -> list[Candidate]:
+    def _instead_of_whole(
+        self, found: Found, y: FloatArray, residual: FloatArray, fresh: bool
+    ) -> Found:
+        """Return the level that holds the same cells as a whole characteristic in the window, if
+        there is one: a batch that is everywhere is to blame before everything is."""
+        for column in self.columns:
+            codes = column.codes[found.fit.cells]
+            known = codes[codes >= 0]
+            if column.factors == (WHOLE,) or column.twin_of >= 0 or not len(known):
+                continue
+            candidate = self.candidate(column, int(np.bincount(known).argmax()))
+            profile = self.look(candidate, y, fresh)
+            if profile is None or profile.gain < found.profile.gain / 2.0:
+                continue
+            fit = self.fit(candidate, profile, residual)
+            if fit is not None:
+                other = Found(candidate, profile, fit)
+                if self.same_cells(found, other):
+                    return other
+        return found
+
+    def _preferred(self, found: list[Found]) -> Found:
+        """Of levels that hold the same cells the earlier column is named; a whole characteristic
+        gives way to any level that does as well."""
+        best = max(found, key=lambda f: f.score)
+        twins = [f for f in found if f is best or self.same_cells(best, f)]
+        return min(twins, key=lambda f: (self._rank(f.candidate.column), -f.score))
+
+    def _rank(self, column: Column) -> int:
+        return next((i for i, c in enumerate(self.columns) if c is column), len(self.columns))
+
+    def same_cells(self, a: Found, b: Found) -> bool:
+        """Whether two effects lie on the same cells of the families that `a` moved."""
+        moved = a.fit.families[a.fit.probability > 0.5]
+        if not len(moved):
+            moved = a.fit.families[[a.fit.main()]]
+        mine, theirs = (
+            f.fit.cells[np.isin(self.evidence.cell_family[f.fit.cells], moved)] for f in (a, b)
+        )
+        return jaccard(mine, theirs) >= ALIAS
+
+    def _conjunctions(
+        self, parents: list[Candidate], y: FloatArray, fresh: bool
+    ) -> list[Candidate]:
         """Return conjunctions that score at least as well as their single parent level."""
         out: list[Candidate] = []
+        options = self.options if fresh else replace(self.options, since=None)
         singles = [c for c in self.columns if len(c.factors) == 1 and c.twin_of < 0]
         for parent in parents:
             if len(parent.column.factors) != 1 or parent.column.factors == (WHOLE,):
@@ -173,7 +252,7 @@ class State:
                 prior = parent.log_prior + np.log(_CONJUNCTION_PRIOR / max(len(singles) - 1, 1))
                 unknown = np.tile(parent.unknown, (len(column.names), 1))
                 plan = make_plan(
-                    self.evidence, self.noise, column, unknown, self.options, float(prior)
+                    self.evidence, self.noise, column, unknown, options, float(prior)
                 )
                 if plan is None or len(plan.active) < 2:
                     continue
@@ -190,18 +269,28 @@ class State:
         return out[:_REFINE]
 
 
-def column_prior(columns: tuple[Column, ...]) -> float:
-    """Return the log prior of one searched column (twins are not searched)."""
-    return -float(np.log(max(sum(c.twin_of < 0 for c in columns), 1)))
+def column_prior(columns: tuple[Column, ...], column: Column) -> float:
+    """Return the log prior of a searched column (twins are not searched).
+
+    A whole characteristic is the last resort: a tenth of a factor's weight.
+    """
+    searched = sum(c.twin_of < 0 for c in columns)
+    weight = 0.1 if column.factors == (WHOLE,) else 1.0
+    return float(np.log(weight / max(searched, 1)))
+
+
+def jaccard(a: IntArray, b: IntArray) -> float:
+    """Return the share of the cells of either set that is in both."""
+    common = np.intersect1d(a, b, assume_unique=True).size
+    return float(common / max(len(a) + len(b) - common, 1))
 
 
 def _plans(
     evidence: Evidence, noise: Noise, columns: tuple[Column, ...], offsets: Offsets,
     options: AttributionOptions,
 ) -> tuple[Plan, ...]:  # fmt: skip
-    prior = column_prior(columns)
     plans = [
-        make_plan(evidence, noise, column, variance, options, prior)
+        make_plan(evidence, noise, column, variance, options, column_prior(columns, column))
         for column, variance in zip(columns, offsets.variance, strict=True)
         if column.twin_of < 0
     ]

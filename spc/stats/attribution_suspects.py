@@ -2,18 +2,19 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 
 from spc.stats.attribution_calibration import Calibration
 from spc.stats.attribution_candidates import WHOLE, Column
 from spc.stats.attribution_effects import Level, RuledOut, Separation, Suspect
 from spc.stats.attribution_evidence import Evidence, FloatArray, statistic_class
-from spc.stats.attribution_fit import Fit, fit_effect
+from spc.stats.attribution_fit import Fit, fit_effect, pattern_of
 from spc.stats.attribution_profile import Profile, Shape
-from spc.stats.attribution_state import Candidate, Found, State
+from spc.stats.attribution_state import ALIAS, Candidate, Found, State, jaccard
 
 _SUSPECTS = 6
-_ALIAS = 0.97
 _TOLERANCE = 1.5
 _HALF = 0.5
 
@@ -65,10 +66,10 @@ def suspects_of(
     touching[found.fit.cells] = True
     y = state.whitened(residual)
     rivals: list[tuple[Candidate, Profile]] = []
-    for candidate in state.candidates(residual, state.all_plans, touching)[: 2 * _SUSPECTS]:
+    for candidate in state.candidates(residual, found.fresh, touching)[: _SUSPECTS + 3]:
         if candidate.key == found.candidate.key:
             continue
-        profile = state.look(candidate, y)
+        profile = state.look(candidate, y, found.fresh)
         if profile is not None:
             rivals.append((candidate, profile))
     rivals.sort(key=lambda pair: -pair[1].score)
@@ -81,6 +82,7 @@ def suspects_of(
     aliases += [level for level in near if level not in aliases]
     own = level_of(found.candidate)
     suspects = [_suspect(state, found, found.candidate, found.score, residual, calibration, aliases)]
+    suspects[0] = replace(suspects[0], p_adjusted=calibration.p_value(found.strength))
     for candidate, profile in rivals:
         if level_of(candidate) in aliases or len(suspects) > _SUSPECTS:
             continue
@@ -92,7 +94,7 @@ def suspects_of(
         for candidate, profile in rivals
         if level_of(candidate) not in aliases
     ]
-    experiments = [e for alias in aliases for e in _separations(state, own, alias)]
+    experiments = [e for alias in aliases for e in _separations(state, found, own, alias)]
     experiments.sort(key=lambda e: -e.seen)
     return tuple(suspects), tuple(ruled), tuple(experiments)
 
@@ -112,27 +114,20 @@ def _exact_aliases(state: State, found: Found) -> list[Level]:
         if not len(known):
             continue
         level = int(np.bincount(known).argmax())
-        time = column.time
-        theirs = affected & column.cells(level) & (time >= shape.start) & (time < shape.end)
-        if shape.lot >= 0:
-            theirs &= evidence.lot == shape.lot
-        if _jaccard(mine, np.flatnonzero(theirs)) >= _ALIAS:
+        theirs = np.flatnonzero(affected & (pattern_of(column, level, shape, evidence) != 0.0))
+        if jaccard(mine, theirs) >= ALIAS:
             out.append(Level(column.factors, column.names[level]))
     return out
 
 
-def _jaccard(a: np.ndarray, b: np.ndarray) -> float:
-    common = np.intersect1d(a, b, assume_unique=True).size
-    return float(common / max(len(a) + len(b) - common, 1))
-
-
 def _common(state: State, found: Found, candidate: Candidate, profile: Profile) -> float:
-    shape, column = profile.shape, candidate.column
-    on = state.evidence.monitoring & column.cells(candidate.level)
-    on &= (column.time >= shape.start) & (column.time < shape.end)
-    if shape.lot >= 0:
-        on &= state.evidence.lot == shape.lot
-    return _jaccard(found.fit.cells, np.flatnonzero(on))
+    """Share of common cells of the moved families of an effect and a rival in its own window."""
+    evidence, fit = state.evidence, found.fit
+    moved = fit.families[(fit.probability > _HALF) | (np.arange(len(fit.gain)) == fit.main())]
+    relevant = np.isin(evidence.cell_family, moved)
+    on = pattern_of(candidate.column, candidate.level, profile.shape, evidence) != 0.0
+    mine = fit.cells[relevant[fit.cells]]
+    return jaccard(mine, np.flatnonzero(on & relevant))
 
 
 def _suspect(
@@ -202,7 +197,16 @@ def _ruled_out(
     return RuledOut(level, "less-likely", moved, members, odds)
 
 
-def _separations(state: State, own: Level, alias: Level) -> list[Separation]:
+def _separations(state: State, found: Found, own: Level, alias: Level) -> list[Separation]:
+    """Both ways to tell two levels apart; none if they are one thing under two names (their
+    columns split all cells of the moved families alike)."""
+    one, two = _column(state, own.factors), _column(state, alias.factors)
+    if one is not None and two is not None:
+        moved = np.append(found.fit.families[found.fit.probability > _HALF], _leading(found))
+        use = np.isin(state.evidence.cell_family, moved)
+        pairs = np.unique(np.stack([one.codes[use], two.codes[use]]), axis=1)
+        if all(len(np.unique(row)) == pairs.shape[1] for row in pairs):
+            return []
     out = []
     for keep, other in ((own, alias), (alias, own)):
         found = _separation(state, keep, other)
@@ -231,6 +235,10 @@ def _separation(state: State, keep: Level, other: Level) -> Separation | None:
         return None
     best = int(together.argmax()) if together.any() else int(anyhow.argmax())
     return Separation(keep, other, Level(varied.factors, varied.names[best]), int(together[best]))
+
+
+def _leading(found: Found) -> int:
+    return int(found.fit.families[found.fit.main()])
 
 
 def _column(state: State, factors: tuple[str, ...]) -> Column | None:
