@@ -1,0 +1,180 @@
+"""Limits of streams: set from the first points, in force, and set again when those change.
+
+What people decide by hand is in `spc.monitoring.limits_by_hand`.
+"""
+
+from __future__ import annotations
+
+import json
+from collections.abc import Iterable, Mapping, Sequence
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+import pandas as pd
+from numpy.typing import NDArray
+from sqlalchemy import Connection
+
+from config.control_plan import Characteristic
+from spc.monitoring.estimates import Baseline, estimate
+from spc.monitoring.grouping import PointGroups, group_points
+from spc.monitoring.limit_sets import APPROVED, AUTOMATIC, WITHDRAWN, LimitSet, payload_text
+from spc.monitoring.serial import add_autocorrelation
+from spc.monitoring.wafers import Wafers, subset
+from spc.monitoring.work import ENGINE
+from spc.records import limits
+from spc.records.stamps import from_us
+
+IntArray = NDArray[np.int64]
+BoolArray = NDArray[np.bool_]
+
+_ORDER = ["at_us", "lot", "layer", "wafer"]
+
+
+def limit_set(row: Any) -> LimitSet:
+    """A row of `baselines` with its payload read."""
+    fields = dict(row._mapping)
+    return LimitSet(**(fields | {"payload": json.loads(row.payload)}))
+
+
+def in_force(connection: Connection, stream_ids: Iterable[int]) -> list[LimitSet]:
+    """Automatic and approved sets of some streams."""
+    rows = limits.of_streams(connection, stream_ids, (AUTOMATIC, APPROVED))
+    return [limit_set(row) for row in rows]
+
+
+def of_points(
+    connection: Connection, points: pd.DataFrame, known: Sequence[LimitSet]
+) -> list[LimitSet]:
+    """Sets that some points name and that are not among the known ones."""
+    if points.empty:
+        return []
+    ids = set(points["baseline_id"].dropna().astype(int)) - {one.id for one in known}
+    return [limit_set(row) for row in limits.by_ids(connection, ids)]
+
+
+def surely_correlated(sets: Iterable[LimitSet]) -> dict[tuple[int, str], float]:
+    """Autocorrelation of (set, statistic) where it is surely positive."""
+    return {
+        (one.id, name): float(found["phi"])
+        for one in sets
+        for name, found in one.payload["statistics"].items()
+        if found.get("correlated")
+    }
+
+
+def to_set_again(connection: Connection, first_us: Mapping[int, int]) -> set[int]:
+    """Streams whose limits may change with points that changed from a stamp on.
+
+    They are those without automatic limits, and those whose baseline reaches up to the stamp.
+    """
+    rows = limits.spans(connection, first_us, AUTOMATIC)
+    return {stream for stream, first in first_us.items() if first <= rows.get(stream, 2**62)}
+
+
+def with_hand_made(connection: Connection, characteristic: str) -> set[int]:
+    """Streams of a characteristic whose limits people have decided on."""
+    rows = limits.decided_by_hand(connection, ENGINE)
+    return {row.stream_id for row in rows if row.characteristic == characteristic}
+
+
+@dataclass(frozen=True)
+class Maker:
+    """Sets the automatic limits of the streams of one characteristic."""
+
+    connection: Connection
+    characteristic: Characteristic
+    wafer_radius_mm: float
+    as_of_us: int
+
+    def renew(
+        self, wafers: Wafers, groups: PointGroups, ids: IntArray, streams: frozenset[int]
+    ) -> int:
+        """Set, keep or withdraw the automatic limits of streams given with all their points.
+
+        Returns the number of streams whose limits are new.
+        """
+        rows = limits.of_streams(self.connection, streams, (AUTOMATIC,))
+        old = {row.stream_id: row for row in rows}
+        drafts = self._drafts(wafers, groups, ids, streams)
+        made = 0
+        for stream in sorted(streams):
+            draft, before = drafts.get(stream), old.get(stream)
+            if before is not None and draft is not None and before.payload == draft.payload:
+                continue
+            if before is not None:
+                reason = "its first points are not what they were: readings came late or changed"
+                if draft is None:
+                    reason = "the stream has fewer points than a baseline needs"
+                limits.decide(
+                    self.connection, before.id, WITHDRAWN, from_us(self.as_of_us), ENGINE, reason
+                )
+            if draft is not None:
+                limits.add(self.connection, draft)
+                made += 1
+        return made
+
+    def _drafts(
+        self, wafers: Wafers, groups: PointGroups, ids: IntArray, streams: frozenset[int]
+    ) -> dict[int, limits.NewSet]:
+        table = groups.table
+        stream = table["stream"].to_numpy(np.int64)
+        count = np.bincount(stream, minlength=len(ids))
+        enough = (count >= self.characteristic.baseline_points) & np.isin(ids, list(streams))
+        order = table.assign(turn=np.arange(len(table))).sort_values(["stream", *_ORDER])
+        rank = order.groupby("stream").cumcount().to_numpy()
+        first = np.zeros(len(table), bool)
+        first[order["turn"].to_numpy()[rank < self.characteristic.baseline_points]] = True
+        chosen = first & enough[stream]
+        if not chosen.any():
+            return {}
+        reason = f"the first {self.characteristic.baseline_points} points of the stream"
+        payloads, spans = self.payloads(wafers, groups, chosen)
+        return {
+            int(ids[code]): limits.NewSet(
+                stream_id=int(ids[code]),
+                status=AUTOMATIC,
+                from_us=spans[code][0],
+                first_us=spans[code][0],
+                last_us=spans[code][1],
+                n_points=spans[code][2],
+                payload=payload,
+                made_us=self.as_of_us,
+                made_by=ENGINE,
+                reason=reason,
+            )
+            for code, payload in payloads.items()
+        }
+
+    def payloads(
+        self, wafers: Wafers, groups: PointGroups, chosen: BoolArray
+    ) -> tuple[dict[int, str], dict[int, tuple[int, int, int]]]:
+        """Payload (JSON) and span (first and last stamp, points) by stream code of `wafers`.
+
+        `chosen` marks the points of the baselines.
+        """
+        part = subset(wafers, chosen[groups.of_wafer])
+        codes, dense = np.unique(part.table["stream"].to_numpy(np.int64), return_inverse=True)
+        part = Wafers(
+            tuple(wafers.keys[c] for c in codes),
+            part.table.assign(stream=dense),
+            part.wafer,
+            part.place,
+            part.value,
+            part.places,
+            part.notes,
+        )
+        base = Baseline(
+            part,
+            group_points(part.table, self.characteristic.point),
+            self.characteristic,
+            self.wafer_radius_mm,
+        )
+        drafts = estimate(base)
+        add_autocorrelation(base, drafts)
+        span = base.groups.table.groupby("stream")["at_us"].agg(["min", "max", "count"])
+        spans = {
+            int(codes[s]): (int(low), int(high), int(n))
+            for s, (low, high, n) in zip(span.index, span.to_numpy(), strict=True)
+        }
+        return {int(codes[s]): payload_text(one) for s, one in enumerate(drafts)}, spans
