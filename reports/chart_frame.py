@@ -4,8 +4,10 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
+from typing import Any
 
 from reports.model import BayEvent, ChartSeries, Edition
+from reports.numbers import with_unit
 from reports.time_axis import TimeAxis, axis_over
 
 
@@ -125,3 +127,31 @@ def spread_apart(places: Sequence[float], gap: float, height: float) -> list[flo
             out[i] = min(out[i], ceiling, height)
         ceiling = out[i] - gap
     return out
+
+
+def completed(spec: dict[str, Any], frame: Frame) -> dict[str, Any]:
+    """The spec with the frame's scales and axes in every layer, where Altair left names alone."""
+    unit = with_unit("", frame.series.unit).strip()
+    x = {
+        "scale": {"type": "utc", "domain": [frame.axis.start, frame.axis.end], "nice": False},
+        "axis": frame.axis.axis(frame.size.ticks),
+    }
+    y = {
+        "scale": {"domain": [frame.low, frame.high], "nice": False, "zero": False},
+        "axis": {
+            "title": unit or None,
+            "titleX": -34,
+            "titleY": -10,
+            "tickCount": 5,
+            "format": f".{frame.digits}~f",
+            "minExtent": 30,
+            "domain": False,
+            "ticks": False,
+        },
+    }
+    for layer in spec["layer"]:
+        for channel, shared in (("x", x), ("y", y)):
+            own = layer.get("encoding", {}).get(channel)
+            if own and "field" in own:
+                own.update(shared)
+    return spec

@@ -6,27 +6,22 @@ import math
 from collections.abc import Mapping, Sequence
 from typing import Any
 
+from reports.chart_frame import number_digits
+from reports.drawing import Drawing
 from reports.model import LevelEffect, RunLength
 from reports.model_pages import CapabilityRow, MonthIndex
 from reports.numbers import half_width, index, interval, number, percent, quantity, with_unit
 from reports.sentences import factor_words
-from reports.style import figure_config, light
+from reports.style import light
 from reports.texts import text
 
 Row = dict[str, Any]
 
 
-def _chart(alt: Any, rows: Sequence[Row]) -> Any:
-    return alt.Chart(alt.Data(values=list(rows)))
-
-
-def _finish(chart: Any, width: int, height: int | None = None, font: int = 12) -> dict[str, Any]:
-    sized = chart.properties(width=width) if height is None else chart.properties(
-        width=width, height=height
-    )  # fmt: skip
-    spec: dict[str, Any] = sized.to_dict(validate=False)
-    spec["config"] = figure_config(font)
-    return spec
+def _finish(
+    alt: Drawing, layers: Sequence[Any], width: int, height: int, font: int = 12
+) -> dict[str, Any]:
+    return alt.finish(alt.layer(*layers).properties(width=width, height=height), font)
 
 
 def component_bars(
@@ -39,8 +34,6 @@ def component_bars(
 
     `components` are variances in squared units. Raises ValueError where none is known.
     """
-    import altair as alt
-
     known = {name: value for name, value in components.items() if value is not None}
     total = sum(known.values())
     if not known or total <= 0:
@@ -52,7 +45,7 @@ def component_bars(
             "w": text(
                 "component.words",
                 share=percent(value / total),
-                sd=quantity(math.sqrt(max(value, 0)), unit),
+                sd=_rounded_sd(value, unit),
             ),
         }
         for name, value in known.items()
@@ -66,15 +59,21 @@ def component_bars(
             }
         )
     names = [str(row["name"]) for row in rows]
-    with alt.utils.schemapi.debug_mode(False):
+    with Drawing() as alt:
         y = alt.Y("name:N", sort=names, title=None, axis=alt.Axis(domain=False, ticks=False))
         x = alt.X("share:Q", scale=alt.Scale(domain=[0, 1.0]), axis=None)
-        base = _chart(alt, rows)
+        base = alt.rows(rows)
         bars = base.mark_bar(color=light("data"), height=11, aria=False).encode(x=x, y=y)
         words = base.mark_text(align="left", dx=5, color=light("ink"), aria=False).encode(
-            x=x, y=y, text="w:N"
+            x=x, y=y, text=alt.Text("w:N")
         )
-        return _finish(alt.layer(bars, words), width, 24 * len(rows))
+        return _finish(alt, [bars, words], width, 24 * len(rows))
+
+
+def _rounded_sd(variance: float, unit: str) -> str:
+    """An sd at about two digits: months of data do not give more."""
+    sd = math.sqrt(max(variance, 0.0))
+    return quantity(sd, unit, half_width=0.05 * sd)
 
 
 def distribution(row: CapabilityRow, width: int = 330, height: int = 150) -> dict[str, Any]:
@@ -82,8 +81,6 @@ def distribution(row: CapabilityRow, width: int = 330, height: int = 150) -> dic
 
     Raises ValueError without bars.
     """
-    import altair as alt
-
     if not row.histogram:
         raise ValueError(f"no distribution of {row.characteristic} to draw")
     bars = [{"a": b.low, "b": b.high, "n": b.count} for b in row.histogram]
@@ -93,20 +90,22 @@ def distribution(row: CapabilityRow, width: int = 330, height: int = 150) -> dic
     low, high = min(held), max(held)
     room = (high - low) * 0.04
     top = max([float(b.count) for b in row.histogram] + [c.count for c in row.curve]) * 1.08
-    with alt.utils.schemapi.debug_mode(False):
+    with Drawing() as alt:
         scale = alt.Scale(domain=[low - room, high + room], nice=False, zero=False)
-        axis = alt.Axis(title=None, tickCount=5, grid=False, format="~g")
+        axis = alt.Axis(
+            title=None, tickCount=5, grid=False, format=f".{number_digits(high - low)}~f"
+        )
         x = alt.X("a:Q", scale=scale, axis=axis)
         y = alt.Y("n:Q", scale=alt.Scale(domain=[0, top], nice=False), axis=None)
         layers = [
-            _chart(alt, bars)
+            alt.rows(bars)
             .mark_rect(color=light("band"), stroke=light("edge"), strokeWidth=0.6, aria=False)
-            .encode(x=x, x2="b:Q", y=y, y2=alt.datum(0))
+            .encode(x=x, x2=alt.X2("b:Q"), y=y, y2=alt.datum(0))
         ]
         if row.curve:
             curve = [{"a": c.x, "n": c.count} for c in row.curve]
             layers.append(
-                _chart(alt, curve)
+                alt.rows(curve)
                 .mark_line(color=light("data"), strokeWidth=2, aria=False, clip=True)
                 .encode(x=x, y=y)
             )
@@ -114,7 +113,7 @@ def distribution(row: CapabilityRow, width: int = 330, height: int = 150) -> dic
             if value is None:
                 continue
             word = text(f"distribution.{role}", value=number(value))
-            base = _chart(alt, [{"a": value, "w": word}])
+            base = alt.rows([{"a": value, "w": word}])
             dash = [7, 4] if role == "spec" else [1, 3]
             layers += [
                 base.mark_rule(
@@ -125,9 +124,9 @@ def distribution(row: CapabilityRow, width: int = 330, height: int = 150) -> dic
                     color=light(role),
                     aria=False,
                     align=_toward_middle(value, low, high),
-                ).encode(x=x, text="w:N"),
+                ).encode(x=x, text=alt.Text("w:N")),
             ]
-        return _finish(alt.layer(*layers), width, height)
+        return _finish(alt, layers, width, height)
 
 
 def _toward_middle(value: float, low: float, high: float) -> str:
@@ -140,8 +139,6 @@ def run_length(rows: Sequence[RunLength], width: int = 420, height: int = 230) -
 
     Raises ValueError without rows.
     """
-    import altair as alt
-
     if not rows:
         raise ValueError("no run lengths to draw")
     designs = list(dict.fromkeys(row.design for row in rows))
@@ -149,7 +146,7 @@ def run_length(rows: Sequence[RunLength], width: int = 420, height: int = 230) -
     colors = [light(role) for role in ("data", "alert", "edge", "began")]
     shapes = ("circle", "diamond", "square", "triangle-up")
     layers = []
-    with alt.utils.schemapi.debug_mode(False):
+    with Drawing() as alt:
         x = alt.X("s:Q", title=text("runlength.shift"), axis=alt.Axis(grid=False, tickCount=6))
         y = alt.Y(
             "a:Q",
@@ -170,17 +167,17 @@ def run_length(rows: Sequence[RunLength], width: int = 420, height: int = 230) -
                 if row.design == design
             ]
             look = {"color": colors[i % 4]}
-            base = _chart(alt, own)
+            base = alt.rows(own)
             layers += [
                 base.mark_line(strokeDash=dashes[i % 4], strokeWidth=1.8, aria=False, **look)
                 .encode(x=x, y=y),
                 base.mark_point(filled=True, opacity=1, size=36, shape=shapes[i % 4], **look)
-                .encode(x=x, y=y, description="d:N"),
-                _chart(alt, [{**own[-1], "w": design}])
+                .encode(x=x, y=y, description=alt.Description("d:N")),
+                alt.rows([{**own[-1], "w": design}])
                 .mark_text(align="left", dx=9, dy=13 * (i - len(designs) // 2), aria=False, **look)
-                .encode(x=x, y=y, text="w:N"),
+                .encode(x=x, y=y, text=alt.Text("w:N")),
             ]  # fmt: skip
-        return _finish(alt.layer(*layers), width, height)
+        return _finish(alt, layers, width, height)
 
 
 _VERDICT_LOOK = {
@@ -198,8 +195,6 @@ def effect_by_level(
 
     Raises ValueError without effects.
     """
-    import altair as alt
-
     if not effects:
         raise ValueError("no effects to draw")
     rank = {"suspect": 0, "aliased": 1, "moved": 2, "quiet": 3}
@@ -228,7 +223,7 @@ def effect_by_level(
                 ),
             }
         )
-    with alt.utils.schemapi.debug_mode(False):
+    with Drawing() as alt:
         names = [str(row["name"]) for row in rows]
         y = alt.Y(
             "name:N",
@@ -238,11 +233,11 @@ def effect_by_level(
         )
         title = text("effect.axis", unit=with_unit("", unit).strip())
         x = alt.X("e:Q", title=title, axis=alt.Axis(grid=False, tickCount=5))
-        base = _chart(alt, rows)
+        base = alt.rows(rows)
         layers = [
-            _chart(alt, [{"z": 0}]).mark_rule(color=light("ink"), aria=False).encode(x="z:Q"),
+            alt.rows([{"z": 0}]).mark_rule(color=light("ink"), aria=False).encode(x=alt.X("z:Q")),
             base.mark_rule(color=light("base"), strokeWidth=1.6, aria=False).encode(
-                x=alt.X("a:Q"), x2="b:Q", y=y
+                x=alt.X("a:Q"), x2=alt.X2("b:Q"), y=y
             ),
         ]
         for verdict, (shape, role, filled) in _VERDICT_LOOK.items():
@@ -250,20 +245,20 @@ def effect_by_level(
             if own:
                 fill = light(role) if filled else light("sheet")
                 layers.append(
-                    _chart(alt, own)
+                    alt.rows(own)
                     .mark_point(
                         filled=True, opacity=1, size=70, shape=shape, fill=fill,
                         stroke=light(role), strokeWidth=1.5,
                     )
-                    .encode(x=x, y=y, description="d:N")
+                    .encode(x=x, y=y, description=alt.Description("d:N"))
                 )  # fmt: skip
         layers.append(
             base.mark_text(
                 align="left", x={"expr": "width + 6"}, fontSize=font, color=light("soft"),
                 aria=False,
-            ).encode(y=y, text="w:N")
+            ).encode(y=y, text=alt.Text("w:N"))
         )  # fmt: skip
-        return _finish(alt.layer(*layers), width, 24 * len(rows), font)
+        return _finish(alt, layers, width, 24 * len(rows), font)
 
 
 def month_by_month(
@@ -273,8 +268,6 @@ def month_by_month(
 
     Raises ValueError where no month has an index.
     """
-    import altair as alt
-
     rows = [
         {
             "m": text(f"month.short.{int(month.month[5:])}"),
@@ -301,7 +294,7 @@ def month_by_month(
         raise ValueError("no month with an index to draw")
     names = {i: text(f"month.short.{int(m.month[5:])}") for i, m in enumerate(months)}
     labels = "[" + ",".join(f"'{name}'" for name in names.values()) + "][datum.value]"
-    with alt.utils.schemapi.debug_mode(False):
+    with Drawing() as alt:
         axis = alt.Axis(
             values=list(names), labelExpr=labels, title=None, grid=False, labelOverlap=True
         )
@@ -309,11 +302,11 @@ def month_by_month(
         x = alt.X("i:Q", axis=axis, scale=scale)
         y_axis = alt.Axis(title=None, tickCount=4, domain=False, ticks=False, minExtent=30)
         y = alt.Y("v:Q", scale=alt.Scale(zero=False), axis=y_axis)
-        base = _chart(alt, rows)
+        base = alt.rows(rows)
         layers = [
             base.mark_line(color=light("trace"), strokeWidth=1, aria=False).encode(x=x, y=y),
             base.mark_rule(color=light("base"), strokeWidth=1.4, aria=False).encode(
-                x=x, y=alt.Y("a:Q"), y2="b:Q"
+                x=x, y=alt.Y("a:Q"), y2=alt.Y2("b:Q")
             ),
         ]
         for stable in (True, False):
@@ -321,20 +314,20 @@ def month_by_month(
             fill = light("data") if stable else light("sheet")
             if own:
                 layers.append(
-                    _chart(alt, own)
+                    alt.rows(own)
                     .mark_point(
                         filled=True, opacity=1, size=44, fill=fill, stroke=light("data"),
                         strokeWidth=1.4,
                     )
-                    .encode(x=x, y=y, description="d:N")
+                    .encode(x=x, y=y, description=alt.Description("d:N"))
                 )  # fmt: skip
         if goal is not None:
-            mark = _chart(alt, [{"v": goal, "w": text("months.goal", value=index(goal))}])
+            mark = alt.rows([{"v": goal, "w": text("months.goal", value=index(goal))}])
             layers += [
                 mark.mark_rule(color=light("aim"), strokeDash=[1, 3], strokeWidth=1.4, aria=False)
                 .encode(y=y),
                 mark.mark_text(
                     align="left", x={"expr": "width + 5"}, color=light("aim"), aria=False
-                ).encode(y=y, text="w:N"),
+                ).encode(y=y, text=alt.Text("w:N")),
             ]  # fmt: skip
-        return _finish(alt.layer(*layers), width, height)
+        return _finish(alt, layers, width, height)

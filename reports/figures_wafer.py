@@ -11,9 +11,10 @@ import math
 from collections.abc import Sequence
 from typing import Any
 
+from reports.drawing import Drawing
 from reports.model import OverlayPanel, OverlayVectors, WaferMapPicture
 from reports.numbers import half_width, number, quantity, with_unit
-from reports.style import DIVERGING, SEQUENTIAL, figure_config, light
+from reports.style import DIVERGING, SEQUENTIAL, light
 from reports.texts import text
 
 Row = dict[str, Any]
@@ -29,17 +30,17 @@ def _disc(radius: float) -> list[Row]:
     return [{"x": round(x, 1), "y": round(y, 1), "i": i} for i, (x, y) in enumerate(points)]
 
 
-def _plane(alt: Any, radius: float) -> tuple[Any, Any]:
+def _plane(alt: Any, radius: float, x: str = "x", y: str = "y") -> tuple[Any, Any]:
     scale = alt.Scale(domain=[-radius * 1.04, radius * 1.04], nice=False, zero=False)
-    return alt.X("x:Q", scale=scale, axis=None), alt.Y("y:Q", scale=scale, axis=None)
+    return alt.X(f"{x}:Q", scale=scale, axis=None), alt.Y(f"{y}:Q", scale=scale, axis=None)
 
 
 def _wafer(alt: Any, radius: float) -> Any:
     x, y = _plane(alt, radius)
     return (
-        alt.Chart(alt.Data(values=_disc(radius)))
+        alt.rows(_disc(radius))
         .mark_line(color=light("soft"), strokeWidth=1.2, fill=light("calm"), aria=False)
-        .encode(x=x, y=y, order="i:Q")
+        .encode(x=x, y=y, order=alt.Order("i:Q"))
     )
 
 
@@ -50,8 +51,6 @@ def wafer_map(
 
     `upright` stacks the three for narrow screens. Raises ValueError without sites.
     """
-    import altair as alt
-
     if not picture.sites:
         raise ValueError(f"no sites of {picture.characteristic} to draw")
     both = [v for s in picture.sites for v in (s.before, s.after) if v is not None]
@@ -59,7 +58,7 @@ def wafer_map(
     reach = max((abs(s.difference) for s in picture.sites if s.difference is not None), default=1)
     decimals = _decimals(reach)
     panels = []
-    with alt.utils.schemapi.debug_mode(False):
+    with Drawing() as alt:
         for name, n in (("before", picture.n_wafers_before), ("after", picture.n_wafers_after)):
             title = text(f"map.{name}", n=n)
             panels.append(_values(alt, picture, name, span, decimals, side).properties(title=title))
@@ -70,9 +69,7 @@ def wafer_map(
         )
         chart = alt.vconcat(*panels) if upright else alt.hconcat(*panels, spacing=14)
         chart = chart.resolve_scale(color="independent", size="independent")
-        spec: dict[str, Any] = chart.to_dict(validate=False)
-    spec["config"] = figure_config()
-    return spec
+        return alt.finish(chart)
 
 
 def _decimals(reach: float) -> int:
@@ -89,6 +86,7 @@ def _values(
 ) -> Any:
     x, y = _plane(alt, picture.radius_mm)
     rows = []
+    size = _site_area(side, len(picture.sites))
     for site in picture.sites:
         value = getattr(site, field)
         if value is None:
@@ -98,6 +96,7 @@ def _values(
             {
                 "x": round(site.x_mm, 2),
                 "y": round(site.y_mm, 2),
+                "yw": _beside(site.y_mm, size, picture.radius_mm, side),
                 "v": value,
                 "w": number(value, decimals),
                 "d": text("map.say", site=site.site, value=written),
@@ -105,20 +104,24 @@ def _values(
         )
     scale = alt.Scale(domain=list(span), range=list(SEQUENTIAL), interpolate="lab")
     numbered = len(rows) <= _NUMBERED_SITES
-    base = alt.Chart(alt.Data(values=rows))
-    size = _site_area(side, len(rows))
+    base = alt.rows(rows)
     legend = alt.Legend(
         title=None, orient="bottom", gradientLength=side - 40, gradientThickness=8, tickCount=3,
         format=f".{decimals}f",
     ) if not numbered else None  # fmt: skip
     dots = base.mark_point(
         filled=True, opacity=1, size=size, stroke=light("sheet"), strokeWidth=0.6
-    ).encode(x=x, y=y, color=alt.Color("v:Q", scale=scale, legend=legend), description="d:N")
+    ).encode(
+        x=x,
+        y=y,
+        color=alt.Color("v:Q", scale=scale, legend=legend),
+        description=alt.Description("d:N"),
+    )
     layers = [_wafer(alt, picture.radius_mm), dots]
     if numbered:
         layers.append(
-            base.mark_text(dy=_site_radius(size) + 8, fontSize=10, color=light("ink"), aria=False)
-            .encode(x=x, y=y, text="w:N")
+            base.mark_text(fontSize=10, color=light("ink"), aria=False)
+            .encode(x=x, y=_plane(alt, picture.radius_mm, "x", "yw")[1], text=alt.Text("w:N"))
         )  # fmt: skip
     return alt.layer(*layers).properties(width=side, height=side)
 
@@ -135,8 +138,9 @@ def _differences(alt: Any, picture: WaferMapPicture, reach: float, decimals: int
             {
                 "x": round(site.x_mm, 2),
                 "y": round(site.y_mm, 2),
+                "yw": _beside(site.y_mm, full, picture.radius_mm, side),
                 "v": site.difference,
-                "n": round(full * max(abs(site.difference) / reach, 0.08), 1),
+                "n": round(1.5 * full * max(abs(site.difference) / reach, 0.12), 1),
                 "s": "triangle-up" if site.difference >= 0 else "triangle-down",
                 "w": number(site.difference, decimals, sign=True),
                 "d": text("map.say", site=site.site, value=written),
@@ -147,18 +151,18 @@ def _differences(alt: Any, picture: WaferMapPicture, reach: float, decimals: int
         scale=alt.Scale(domain=[-reach, reach], range=list(DIVERGING), interpolate="lab"),
         legend=None,
     )
-    base = alt.Chart(alt.Data(values=rows))
+    base = alt.rows(rows)
     marks = base.mark_point(
         filled=True, opacity=1, stroke=light("ink"), strokeWidth=0.5
     ).encode(
         x=x, y=y, color=color, size=alt.Size("n:Q", scale=None),
-        shape=alt.Shape("s:N", scale=None), description="d:N",
+        shape=alt.Shape("s:N", scale=None), description=alt.Description("d:N"),
     )  # fmt: skip
     layers = [_wafer(alt, picture.radius_mm), marks]
     if len(rows) <= _NUMBERED_SITES:
         layers.append(
-            base.mark_text(dy=_site_radius(full) + 8, fontSize=10, color=light("ink"), aria=False)
-            .encode(x=x, y=y, text="w:N")
+            base.mark_text(fontSize=10, color=light("ink"), aria=False)
+            .encode(x=x, y=_plane(alt, picture.radius_mm, "x", "yw")[1], text=alt.Text("w:N"))
         )  # fmt: skip
     return alt.layer(*layers).properties(width=side, height=side)
 
@@ -167,8 +171,10 @@ def _site_area(side: int, n: int) -> float:
     return round(max(min(side * side * 0.16 / max(n, 1), 260.0), 14.0), 1)
 
 
-def _site_radius(area: float) -> float:
-    return math.sqrt(area / math.pi)
+def _beside(y_mm: float, area: float, radius: float, side: int) -> float:
+    """Where a site's number stands: below it, near the lower edge above it (in mm)."""
+    away = (math.sqrt(area / math.pi) + 8) * 2.08 * radius / side
+    return round(y_mm + (away if y_mm < -0.55 * radius else -away), 2)
 
 
 def overlay_vectors(
@@ -178,8 +184,6 @@ def overlay_vectors(
 
     Raises ValueError without vectors.
     """
-    import altair as alt
-
     longest = max(
         (math.hypot(v.dx, v.dy) for panel in picture.panels for v in panel.vectors), default=0.0
     )
@@ -187,7 +191,7 @@ def overlay_vectors(
         raise ValueError(f"no vectors of {picture.characteristic} to draw")
     # the longest arrow spans about a ninth of the wafer
     stretch = picture.radius_mm * 0.22 / longest
-    with alt.utils.schemapi.debug_mode(False):
+    with Drawing() as alt:
         panels = [
             _arrows(alt, picture, panel, stretch, side).properties(
                 title=text(f"overlay.{panel.name}")
@@ -195,9 +199,7 @@ def overlay_vectors(
             for panel in picture.panels
         ]
         chart = alt.vconcat(*panels) if upright else alt.hconcat(*panels, spacing=18)
-        spec: dict[str, Any] = chart.to_dict(validate=False)
-    spec["config"] = figure_config()
-    return spec
+        return alt.finish(chart)
 
 
 def _arrows(
@@ -218,29 +220,30 @@ def _arrows(
             }
         )
     x, y = _plane(alt, picture.radius_mm)
+    tip_x, tip_y = _plane(alt, picture.radius_mm, "x2", "y2")
     known = _known_length(0.22 * picture.radius_mm / stretch)
     start = -picture.radius_mm
     legend = [
         {"x": start, "x2": start + known * stretch, "y": -picture.radius_mm * 0.99, "turn": 90.0,
          "w": with_unit(number(known), picture.unit)}
     ]  # fmt: skip
-    base, key = alt.Chart(alt.Data(values=rows)), alt.Chart(alt.Data(values=legend))
+    base, key = alt.rows(rows), alt.rows(legend)
     head = {"shape": "triangle-up", "filled": True, "size": 26, "opacity": 1}
     turn = alt.Angle("turn:Q", scale=None)
     return alt.layer(
         _wafer(alt, picture.radius_mm),
         base.mark_rule(color=light("data"), strokeWidth=1.3, aria=False).encode(
-            x=x, y=y, x2="x2:Q", y2="y2:Q"
+            x=x, y=y, x2=alt.X2("x2:Q"), y2=alt.Y2("y2:Q")
         ),
         base.mark_point(color=light("data"), **head).encode(
-            x=alt.X("x2:Q"), y=alt.Y("y2:Q"), angle=turn, description="d:N"
+            x=tip_x, y=tip_y, angle=turn, description=alt.Description("d:N")
         ),
-        key.mark_rule(color=light("ink"), strokeWidth=1.3, aria=False).encode(x=x, y=y, x2="x2:Q"),
-        key.mark_point(color=light("ink"), aria=False, **head).encode(
-            x=alt.X("x2:Q"), y=alt.Y("y:Q"), angle=turn
+        key.mark_rule(color=light("ink"), strokeWidth=1.3, aria=False).encode(
+            x=x, y=y, x2=alt.X2("x2:Q")
         ),
+        key.mark_point(color=light("ink"), aria=False, **head).encode(x=tip_x, y=y, angle=turn),
         key.mark_text(align="left", dx=7, color=light("ink"), aria=False).encode(
-            x=alt.X("x2:Q"), y=alt.Y("y:Q"), text="w:N"
+            x=tip_x, y=y, text=alt.Text("w:N")
         ),
     ).properties(width=side, height=side, title=text(f"overlay.{panel.name}"))
 

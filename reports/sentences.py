@@ -9,12 +9,13 @@ from reports.numbers import (
     LocalClock,
     count,
     half_width,
+    index,
     interval,
     number,
     probability,
     quantity,
 )
-from reports.texts import has, join, plural, text
+from reports.texts import has, join, plural, shown, text
 
 _RULES = (
     (re.compile(r"beyond-(?P<s>[\d.]+)s"), "rule.beyond"),
@@ -58,21 +59,21 @@ def series_name(characteristic: str, statistic: str) -> str:
 
 def factor_words(factor: str) -> str:
     """`resist_batch` is `resist batch`, `coat.module` is `coat module`."""
-    return re.sub(r"[._]+", " ", factor).replace("+", " + ")
+    return shown(re.sub(r"[._]+", " ", factor).replace("+", " + "))
 
 
 def level_words(level: Level | Suspect) -> str:
     """`resist batch R-12`, or `tool TRK2, module CUP1` for joined factors."""
     factors, levels = level.factor.split("+"), level.level.split("+")
     if len(factors) != len(levels):
-        return f"{factor_words(level.factor)} {level.level}"
+        return f"{factor_words(level.factor)} {shown(level.level)}"
     pairs = zip(factors, levels, strict=True)
-    return text("join.comma").join(f"{factor_words(f)} {value}" for f, value in pairs)
+    return text("join.comma").join(f"{factor_words(f)} {shown(value)}" for f, value in pairs)
 
 
 def context_words(context: Context) -> str:
     """The values of a context in the order given: `TRK2 CUP1`; words for the empty one."""
-    return " ".join(context.values()) if context else text("context.whole")
+    return " ".join(map(shown, context.values())) if context else text("context.whole")
 
 
 def where(excursion: Excursion) -> str:
@@ -93,7 +94,8 @@ def what(excursion: Excursion) -> str:
     first = _first(excursion)
     # a spread and a map say themselves which statistic they are
     own = excursion.pattern in ("spread", "map", "silence")
-    name = first.characteristic if own else series_name(first.characteristic, first.statistic)
+    name = shown(first.characteristic)
+    name = name if own else series_name(name, first.statistic)
     others = len({stream.characteristic for stream in excursion.streams}) - 1
     return plural("what.more", others, name=name) if others > 0 else name
 
@@ -188,6 +190,27 @@ def headline(excursion: Excursion, clock: LocalClock) -> str:
         size=size(excursion),
         since=clock.moment(excursion.onset.estimate),
     ).replace("  ", " ")
+
+
+def forecast_sentence(excursion: Excursion, clock: LocalClock) -> str:
+    """When a drift reaches a spec limit, and what Cpk is until then; empty without a forecast."""
+    found = excursion.forecast
+    if found is None:
+        return ""
+    span = ""
+    if found.earliest and found.latest:
+        ends = (clock.moment(found.earliest), clock.moment(found.latest))
+        span = text("forecast.span", earliest=ends[0], latest=ends[1])
+    said = text(
+        "forecast.reaches",
+        spec=text(f"forecast.{found.spec}"),
+        expected=clock.moment(found.expected),
+        span=span,
+    )
+    if found.cpk_now is not None and found.cpk_then is not None:
+        cpk = (index(found.cpk_now), index(found.cpk_then))
+        said += " " + text("forecast.cpk", now=cpk[0], then=cpk[1])
+    return said
 
 
 def tally(n_act: int, n_watch: int) -> str:

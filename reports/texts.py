@@ -6,6 +6,7 @@ A key is a dotted path; a text may hold named fields in braces. A text with a co
 
 from __future__ import annotations
 
+import re
 import tomllib
 from functools import cache
 from pathlib import Path
@@ -51,3 +52,17 @@ def join(parts: list[str]) -> str:
     if len(parts) < 2:
         return "".join(parts)
     return text("join.last", head=text("join.comma").join(parts[:-1]), last=parts[-1])
+
+
+# C0 and C1 controls, zero-width marks and those that turn the direction of text.
+_HIDDEN = re.compile(
+    "[\x00-\x1f\x7f-\x9f\u061c\u200b-\u200f\u2028-\u202e\u2060-\u2069\ufeff\ufff9-\ufffb]"
+)
+
+
+def shown(name: str) -> str:
+    """A name from the data with every mark that hides or turns text made visible.
+
+    `lot<U+202E>gnp` is written so, and cannot pass for another lot on a page.
+    """
+    return _HIDDEN.sub(lambda mark: f"\u27e8U+{ord(mark[0]):04X}\u27e9", name.strip(" "))
