@@ -150,8 +150,11 @@ def cusum(
         floor = np.empty(block.shape)
         for walk, start in ((high, up[rows]), (low, down[rows])):
             walk -= drop
+            # The lowest level begins at -start: it stands in the first place for a moment.
+            first = walk[:, 0].copy()
+            np.minimum(first, -start, out=walk[:, 0])
             np.minimum.accumulate(walk, axis=1, out=floor)
-            np.minimum(floor, -start[:, None], out=floor)
+            walk[:, 0] = first
             walk -= floor
         rise, fall = high > design.h, low > design.h
         both = rise & fall

@@ -259,9 +259,11 @@ def first_order_recursion(
     """
     if out is None:
         out = np.empty(inputs.shape)
-    out[...] = inputs
-    reach, weight = 1, keep
-    spare = np.empty_like(out)
+    np.multiply(inputs[:, :-1], keep, out=out[:, 1:])
+    out[:, 1:] += inputs[:, 1:]
+    out[:, :1] = inputs[:, :1]
+    reach, weight = 2, keep * keep
+    spare = np.empty(out.shape)
     while reach < out.shape[1] and abs(weight) > 1e-18:
         held = np.multiply(out[:, :-reach], weight, out=spare[:, reach:])
         out[:, reach:] += held

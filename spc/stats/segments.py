@@ -64,15 +64,20 @@ def as_points(z: ArrayLike, missing: Missing = "raise") -> FloatArray:
     points = np.asarray(z, dtype=np.float64)
     if points.ndim not in (1, 2):
         raise ValueError(f"points must have shape (n,) or (streams, n), not {points.shape}")
-    finite = np.isfinite(points)
-    if not finite.all():
-        bad = ~finite if missing == "raise" else np.isinf(points)
+    if not _sum_is_finite(points):
+        bad = ~np.isfinite(points) if missing == "raise" else np.isinf(points)
         if bad.any():
             where = tuple(int(i) for i in np.argwhere(bad)[0])
             place = where[0] if points.ndim == 1 else where
             mend = "" if missing == "skip" else "; pass missing='skip' where NaN means no point"
             raise ValueError(f"point {place} is {points[where]}, not a finite number{mend}")
     return points
+
+
+def _sum_is_finite(points: FloatArray) -> bool:
+    """False where any point is not finite (a quick look; rarely also where all are)."""
+    with np.errstate(over="ignore", invalid="ignore"):
+        return bool(np.isfinite(points.sum()))
 
 
 def find_runs(points: FloatArray, segment: ArrayLike | None = None) -> Runs:
@@ -92,9 +97,10 @@ def find_runs(points: FloatArray, segment: ArrayLike | None = None) -> Runs:
     """
     width = points.shape[-1]
     codes = None if segment is None else _fit_codes(segment, points.shape)
-    present = ~np.isnan(points)
-    complete = bool(present.all())
-    order = None if complete else np.flatnonzero(present)
+    order = None
+    if not _sum_is_finite(points):
+        present = ~np.isnan(points)
+        order = None if present.all() else np.flatnonzero(present)
     count = points.size if order is None else order.size
     if order is None:
         change = np.zeros(points.shape, dtype=np.bool_)
@@ -111,7 +117,7 @@ def find_runs(points: FloatArray, segment: ArrayLike | None = None) -> Runs:
             fresh[1:] |= kept[1:] != kept[:-1]
         starts = np.flatnonzero(fresh)
     lengths = np.diff(np.concatenate((starts, [count])))
-    whole = complete and bool((lengths == width).all())
+    whole = order is None and bool((lengths == width).all())
     return Runs(points.shape, order, starts, lengths, whole)
 
 
