@@ -13,6 +13,16 @@ from typing import Any
 import numpy as np
 import pytest
 
+from spc.stats.film import (
+    depth_of_focus,
+    resolution,
+    spin_slope,
+    spin_thickness,
+    swing_period,
+    swing_ratio,
+    thinned_film,
+    thinned_limit,
+)
 from spc.stats.overlay import OVERLAY_TERMS, fit_overlay, symmetric_terms
 
 SHORT = {
@@ -101,3 +111,55 @@ def test_overlay_one_mark_a_field_is_not_estimable(entries: list[dict[str, Any]]
     assert estimable[["-x" in n for n in OVERLAY_TERMS]].sum() == entry["values"]["rank_x"]
     assert estimable[["-y" in n for n in OVERLAY_TERMS]].sum() == entry["values"]["rank_y"]
     assert set(fit.dropped) == {n for n in OVERLAY_TERMS if n.startswith("field")}
+
+
+def test_swing_curve(entries: list[dict[str, Any]]) -> None:
+    for entry in of_kind(entries, "swing curve"):
+        given, want = entry["inputs"], entry["values"]
+        period = swing_period(given["wavelength_nm"], given["resist_index"])
+        assert period == pytest.approx(want["period_nm"], rel=1e-9)
+        assert period / 2 == pytest.approx(want["max_to_min_nm"], rel=1e-9)
+
+
+def test_swing_ratio(entries: list[dict[str, Any]]) -> None:
+    for entry in of_kind(entries, "swing ratio"):
+        g, want = entry["inputs"], entry["values"]
+        what = (g["R_top"], g["R_bottom"], g["absorbance_per_nm"], g["thickness_nm"])
+        assert swing_ratio(*what) == pytest.approx(
+            want["swing_ratio_full_reflection_sum"], rel=1e-9
+        )
+        assert swing_ratio(*what, first_order=True) == pytest.approx(
+            want["swing_ratio_first_order"], rel=1e-9
+        )
+
+
+def test_rayleigh(entries: list[dict[str, Any]]) -> None:
+    for entry in of_kind(entries, "Rayleigh"):
+        g, want = entry["inputs"], entry["values"]
+        assert resolution(g["wavelength_nm"], g["NA"], g["k1"]) == pytest.approx(
+            want["resolution_nm"], rel=1e-9
+        )
+        assert depth_of_focus(g["wavelength_nm"], g["NA"], g["k2"]) == pytest.approx(
+            want["depth_of_focus_nm"], rel=1e-9
+        )
+
+
+def test_spin_thinning(entries: list[dict[str, Any]]) -> None:
+    for entry in of_kind(entries, "spin thinning"):
+        g, want = entry["inputs"], entry["values"]
+        liquid = {"density_kg_m3": g["density_kg_m3"], "viscosity_pa_s": g["viscosity_pa_s"]}
+        film = thinned_film(g["h0_m"], g["time_s"], g["spin_rpm"], **liquid)
+        limit = thinned_limit(g["time_s"], g["spin_rpm"], **liquid)
+        assert film == pytest.approx(want["h_m"], rel=1e-9)
+        assert limit == pytest.approx(want["long_time_limit_m"], rel=1e-9)
+
+
+def test_spin_speed_exponent(entries: list[dict[str, Any]]) -> None:
+    for entry in of_kind(entries, "spin speed exponent"):
+        g, want = entry["inputs"], entry["values"]
+        film = spin_thickness(g["thickness_nm"], g["rpm_from"], g["rpm_to"])
+        assert film == pytest.approx(want["thickness_nm_at_new_speed"], rel=1e-9)
+        slope = spin_slope(g["thickness_nm"], g["rpm_from"])
+        assert slope == pytest.approx(want["slope_nm_per_rpm_at_start"], rel=1e-9)
+        share = slope * g["rpm_from"] / g["thickness_nm"]
+        assert share == pytest.approx(want["percent_change_per_percent_speed"], rel=1e-9)
