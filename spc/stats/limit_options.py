@@ -6,6 +6,7 @@ from dataclasses import dataclass
 
 from scipy import special
 
+from spc.stats.serial_effect import SerialEffect
 from spc.stats.tails import two_sided_alpha
 
 
@@ -24,6 +25,9 @@ class LimitOptions:
         sigma are estimated.
     point : {"lot", "wafer"}
         What one plotted point is.
+    serial : SerialEffect, optional
+        By stream, what the autocorrelation of the baseline does to its mean and sd
+        (`spc.stats.autocorrelation.ar1_baseline`); limits of means are corrected for it.
 
     Raises
     ------
@@ -35,6 +39,7 @@ class LimitOptions:
     alpha: float | None = None
     widen: bool = False
     point: str = "lot"
+    serial: SerialEffect | None = None
 
     def __post_init__(self) -> None:
         if self.alpha is not None and not 0.0 < self.alpha < 1.0:

@@ -17,7 +17,6 @@ from spc.stats.components import Components, point_weights
 from spc.stats.grouping import FloatArray
 from spc.stats.limit_options import DEFAULT, LimitOptions
 from spc.stats.robust_baseline import RobustBaseline, robust_baseline, robust_spread_baseline
-from spc.stats.serial_effect import SerialEffect
 from spc.stats.spread import (
     SpreadLimits,
     distance_limit,
@@ -93,7 +92,6 @@ def mean_limits(
     stream: ArrayLike = 0,
     center: ArrayLike | None = None,
     baseline_lots: ArrayLike | None = None,
-    serial: SerialEffect | None = None,
     options: LimitOptions = DEFAULT,
 ) -> MeanLimits:
     """Limits of lot or wafer means, each with its own sample size.
@@ -112,10 +110,8 @@ def mean_limits(
         Where only the number m of baseline points is known: the centre's variance is then
         sigma^2 / m and sigma has m - 1 degrees of freedom. Default: standard error of the mean
         and Satterthwaite's degrees of freedom from `components`.
-    serial : SerialEffect, optional
-        By stream, what the autocorrelation of the baseline does to its mean and its sd
-        (`spc.stats.autocorrelation.ar1_baseline`); the limits are corrected for it.
     options : LimitOptions
+        Its `serial` corrects the limits for the autocorrelation of the baseline.
 
     Returns
     -------
@@ -146,6 +142,7 @@ def mean_limits(
         if not (lots >= 2).all():
             raise ValueError("limits need a baseline of at least two points")
         error, df = variance / lots, np.broadcast_to(lots - 1.0, variance.shape)
+    serial = options.serial
     if serial is not None:
         variance = variance / serial.variance_bias[place]
         error = error * serial.mean_factor[place] / serial.variance_bias[place]

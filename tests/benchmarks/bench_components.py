@@ -1,7 +1,7 @@
 """Time the variance components of a large bay: python -m tests.benchmarks.bench_components
 
-Prints processor seconds and ratios to a plain pass over the same wafers (one bincount of their means), so
-that runs on different machines can be compared. Set OMP_NUM_THREADS=1 for one core.
+Prints processor seconds and ratios to a plain pass over the same wafers (one bincount of their
+means), so that runs on different machines can be compared. Set OMP_NUM_THREADS=1 for one core.
 """
 
 from __future__ import annotations

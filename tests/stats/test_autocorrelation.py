@@ -237,3 +237,21 @@ def test_residuals_of_a_shift_and_after_a_gap() -> None:
         residual_chart([1.0], 0.0, 1.0)
     with pytest.raises(ValueError, match="sigma"):
         residual_chart([1.0], 0.0, 0.5, sigma=0.0)
+
+
+@pytest.mark.slow
+@pytest.mark.parametrize("phi", [-0.3, 0.2, 0.6, 0.9])
+@pytest.mark.parametrize("rules", [FOUR[:2], (FOUR[0], FOUR[2]), (FOUR[0], FOUR[3]), FOUR])
+def test_factors_by_long_simulation(phi: float, rules: tuple[str, ...]) -> None:
+    from spc.stats.rules import evaluate, parse_rules
+
+    n, streams = 4000, 3000
+    x = ar1(np.random.default_rng(29), phi, (streams, n))
+    hit = evaluate(x, parse_rules(rules)).any
+    exact = ar1_signals(phi, rules)
+    share = hit[:, 10:].mean(axis=1)
+    assert abs(share.mean() - exact.rate) < 4 * share.std() / np.sqrt(streams)
+    ended = hit.any(axis=1)
+    assert ended.mean() > 0.999
+    first = np.where(ended, hit.argmax(axis=1) + 1, n)
+    assert abs(first.mean() - exact.arl) < 4.5 * first.std() / np.sqrt(streams) + 0.5

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
@@ -152,7 +153,7 @@ def test_limits_correct_for_autocorrelation_of_the_baseline() -> None:
     at = np.arange(streams)
     serial = ar1_baseline(np.full(streams, phi), m)
     plain = mean_limits(fit, 1, 1, stream=at, options=WIDE)
-    fixed = mean_limits(fit, 1, 1, stream=at, serial=serial, options=WIDE)
+    fixed = mean_limits(fit, 1, 1, stream=at, options=replace(WIDE, serial=serial))
     rates = [
         float((stats.norm.sf(x.upper) + stats.norm.cdf(x.lower)).mean()) for x in (plain, fixed)
     ]
@@ -202,7 +203,7 @@ def test_flow_rate_chart_of_the_handbook(shared_reference: Callable[[str], Any])
     sigma = np.abs(np.diff(x)).mean() / float(d2(2))
     fit = baselines(np.random.default_rng(0), 1, 5)
     known = {"mean": np.array([x.mean()]), "lot": np.array([sigma**2])}
-    limits = mean_limits(Components(**{**fit.__dict__, **known}), 1, 1)
+    limits = mean_limits(replace(fit, **known), 1, 1)
     expected = example["computed_with_exact_d2"]
     assert float(limits.upper) == pytest.approx(expected["ucl"], rel=1e-9)
     assert float(limits.lower) == pytest.approx(expected["lcl"], rel=1e-9)
@@ -357,3 +358,38 @@ def test_distance_rate_by_simulation() -> None:
     score = distance_score(t2, p, m=m)
     assert score.std() == pytest.approx(1.0, abs=0.02)
     assert score.mean() == pytest.approx(0.0, abs=0.02)
+
+
+@pytest.mark.slow
+def test_rates_of_whole_baselines_by_simulation() -> None:
+    # Readings in, rates out: 25 lots of 2 or 3 wafers of 7 to 9 sites with a signature; widened
+    # limits of means, within-wafer and wafer-to-wafer sds against later lots of 3 wafers of 9.
+    from spc.stats.components import site_signatures, summarise
+
+    rng = np.random.default_rng(71)
+    streams, lots = 4000, 25
+    wafers = rng.integers(2, 4, streams * lots)
+    wafer_lot = np.repeat(np.arange(wafers.size), wafers)
+    full = np.tile(np.arange(9), wafer_lot.size)
+    wafer = np.repeat(np.arange(wafer_lot.size), 9)
+    keep = rng.random(wafer.size) < 0.9
+    wafer, site = wafer[keep], full[keep]
+    lot = wafer_lot[wafer]
+    y = rng.normal(size=wafers.size)[lot] + 0.6 * rng.normal(size=wafer_lot.size)[wafer]
+    y = y + 0.5 * rng.normal(size=wafer.size) + np.cos(site)
+    shape = site_signatures(lot // lots, wafer, site, y)
+    summary = summarise(lot // lots, lot, wafer, shape.residual)
+    fit = nested_components(summary, site_df_lost=shape.df)
+    at = np.arange(streams)
+    means = mean_limits(fit, 3, 9, stream=at, options=WIDE)
+    true = np.sqrt(1.0 + 0.36 / 3 + 0.25 / 27)
+    rate = (stats.norm.sf(means.upper / true) + stats.norm.cdf(means.lower / true)).mean()
+    assert rate == pytest.approx(ALPHA, rel=0.12)
+    within = within_limits(fit, 3, 9, stream=at, options=WIDE)
+    law = stats.chi2(24)
+    rate = (law.sf(24 * within.upper**2 / 0.25) + law.cdf(24 * within.lower**2 / 0.25)).mean()
+    assert rate == pytest.approx(ALPHA, rel=0.1)
+    between = wafer_spread_limits(fit, 3, 9, stream=at, options=WIDE)
+    law, true2 = stats.chi2(2), 0.36 + 0.25 / 9
+    rate = (law.sf(2 * between.upper**2 / true2) + law.cdf(2 * between.lower**2 / true2)).mean()
+    assert rate == pytest.approx(ALPHA, rel=0.15)
