@@ -116,17 +116,17 @@ def _records(
     lines: Lines, width: int, form: TextFormat
 ) -> Iterator[tuple[int, list[str], _FaultAt | None]]:
     """Each record with its first line; or the line that begins none, with the fault."""
-    reader = csv.reader(_Bounded(lines), delimiter=form.separator)
+    source = _OneRecord(lines)
+    reader = csv.reader(source, delimiter=form.separator)
     while True:
         lines.start()
         reason = None
         try:
             row = next(reader)
+            if source.cut:
+                reason = "a quote is opened here and never closed"
         except StopIteration:
-            if not lines.seen:
-                return
-            row = []  # a quote that was open at the end of the file
-            reason = "a quote is opened here and never closed"
+            return
         except csv.Error as error:
             row = []
             reason = _said(error, form)
@@ -137,28 +137,38 @@ def _records(
         if len(row) == width and reason is None:
             yield first, row, None
             continue
-        if span > 1:
+        if span > 1 and reason is None:
             reason = "a quote is opened here and not closed where the field should end"
         if span > 1 or reason is not None:
             lines.give_back_all_but_first()
-            reader = csv.reader(_Bounded(lines), delimiter=form.separator)
+            source = _OneRecord(lines)
+            reader = csv.reader(source, delimiter=form.separator)
         shown = form.separator.join(row)[:_SHOWN] or None
         yield first, row, (None, shown, reason or _ragged(len(row), width))
 
 
-class _Bounded:
-    """Lines for one record at a time, ending a record that grows without end."""
+class _OneRecord:
+    """Lines for the csv module, which asks for another one only while a quote is open.
+
+    `cut` says that it asked in vain: the file ended, or the record grew without end.
+    """
 
     def __init__(self, lines: Lines) -> None:
         self._lines = lines
+        self.cut = False
 
-    def __iter__(self) -> _Bounded:
+    def __iter__(self) -> _OneRecord:
         return self
 
     def __next__(self) -> str:
-        if len(self._lines.seen) > _LONGEST_RECORD:
-            raise StopIteration
-        return next(self._lines)
+        inside = bool(self._lines.seen)
+        try:
+            if len(self._lines.seen) >= _LONGEST_RECORD:
+                raise StopIteration
+            return next(self._lines)
+        except StopIteration:
+            self.cut = inside
+            raise
 
 
 def _said(error: csv.Error, form: TextFormat) -> str:

@@ -149,9 +149,10 @@ def map_header(names: Sequence[str], line: int, feed: Feed) -> Mapping:
         for name in ("x_mm", "y_mm", "field_x_mm", "field_y_mm"):
             if any(group.places for group in wide):
                 house.pop(name, None)
-    kind = feed.settings.kind or _kind(set(house) | _given_by(wide))
-    if kind is None or not set(REQUIRED[kind]) <= set(house) | _given_by(wide):
-        raise _no_kind(names, line, feed, house, kind)
+    given = set(house) | _given_by(wide)
+    kind = feed.settings.kind or _kind(given)
+    if kind is None or not set(REQUIRED[kind]) <= given:
+        raise _no_kind(names, line, feed, given, kind)
     if kind == "readings":
         for first, second in PAIRS:
             if (first in house) != (second in house):
@@ -224,14 +225,14 @@ def _kind(names: set[str]) -> Kind | None:
 
 
 def _no_kind(
-    names: Sequence[str], line: int, feed: Feed, house: dict[str, Source], kind: Kind | None
+    names: Sequence[str], line: int, feed: Feed, given: set[str], kind: Kind | None
 ) -> Refused:
     best: Kind = "readings"
     for one in REQUIRED:
-        if len(set(REQUIRED[one]) & set(house)) > len(set(REQUIRED[best]) & set(house)):
+        if len(set(REQUIRED[one]) & given) > len(set(REQUIRED[best]) & given):
             best = one
     best = kind or best
-    missing = [name for name in REQUIRED[best] if name not in house]
+    missing = [name for name in REQUIRED[best] if name not in given]
     near = {name.lower().replace(" ", "_"): name for name in names}
     shown = ",".join(names)[:200]
     if len(missing) == len(REQUIRED[best]):
@@ -243,5 +244,7 @@ def _no_kind(
     hint = f"; rename {', '.join(likely)}" if likely else "; add it, or map it by a [[feed]]"
     if feed.name is not None:
         hint = f"; mend `columns` or `constants` of feed {feed.name!r}"
-    reason = f"taken for {best}, the header lacks {', '.join(missing)}{hint}"
+    foreign = feed.settings.columns
+    said = [f"{n} ({foreign[n]!r} in the file)" if n in foreign else n for n in missing]
+    reason = f"taken for {best}, the header lacks {', '.join(said)}{hint}"
     return Refused(reason, line=line, column=missing[0], value=shown)

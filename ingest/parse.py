@@ -91,8 +91,9 @@ def read_header(text: Text, form: TextFormat) -> Header:
         start = text.data.find(b"\n", start) + 1
         if start == 0:
             raise Refused(f"ends before its header: the feed skips {form.skip_lines} lines", line=1)
+    window_bytes = 64 * form.max_field_characters
     window = io.TextIOWrapper(
-        io.BytesIO(text.data[start : start + 64 * form.max_field_characters]),
+        io.BytesIO(text.data[start : start + window_bytes]),
         encoding="utf-8",
         errors="ignore",  # the window may cut a character
         newline="",
@@ -113,6 +114,8 @@ def read_header(text: Text, form: TextFormat) -> Header:
     names = tuple(cell.strip() for cell in row)
     _check_names(names, line, text.damaged)
     consumed = start + sum(len(one.encode("utf-8")) for one in lines.seen)
+    if consumed >= start + window_bytes - 4 and consumed < len(text.data):
+        raise Refused(f"the header is longer than {window_bytes} bytes", line=line)
     return Header(names, line, consumed)
 
 
@@ -196,7 +199,9 @@ def _fast(
         return "skip"
 
     body = memoryview(data)[header.body : end]
-    quoted = data.find(b'"', header.body) >= 0
+    quotes = data.count(b'"', header.body)
+    if quotes % 2:
+        return None  # one of them is not closed
     try:
         table = pacsv.read_csv(
             pa.BufferReader(pa.py_buffer(body)),
@@ -205,7 +210,7 @@ def _fast(
             ),
             parse_options=pacsv.ParseOptions(
                 delimiter=form.separator,
-                newlines_in_values=quoted,
+                newlines_in_values=quotes > 0,
                 invalid_row_handler=skip,
             ),
             convert_options=pacsv.ConvertOptions(

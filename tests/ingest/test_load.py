@@ -165,9 +165,9 @@ def test_same_stamp_with_another_context_is_a_conflict(night: Intake) -> None:
 
 
 def test_the_same_reading_in_another_unit_is_a_duplicate(night: Intake) -> None:
-    # 1.1876 um is 1187.6 nm, though 1.1876 * 1000 is 1187.6000000000001 in doubles.
-    night.drop("a.csv", sheet(reading("1187.6")))
-    night.drop("b.csv", sheet(reading("1.1876", unit="um"), reading("11876", unit="angstrom")))
+    # 1.005 um is 1005 nm, though 1.005 * 1000 is 1004.9999999999999 in doubles.
+    night.drop("a.csv", sheet(reading("1005")))
+    night.drop("b.csv", sheet(reading("1.005", unit="um"), reading("10050", unit="angstrom")))
     report = night.take()
     assert report.readings["loaded"] == 1
     assert report.readings["duplicate"] == 2
