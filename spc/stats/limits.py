@@ -27,7 +27,7 @@ from spc.stats.spread import (
     wafer_spread_limits,
     within_limits,
 )
-from spc.stats.tails import t_quantile, t_score, two_sided_alpha
+from spc.stats.tails import SCORE_LIMIT, t_quantile, t_score, two_sided_alpha
 
 __all__ = [
     "LimitOptions",
@@ -70,8 +70,11 @@ class MeanLimits:
     df: FloatArray
 
     def standardise(self, values: ArrayLike) -> FloatArray:
-        """Distances from the centre in units of `unit`."""
-        return (np.asarray(values, dtype=np.float64) - self.center) / self.unit
+        """Distances from the centre in units of `unit`.
+
+        Where the baseline had no variation at all, 0 on the centre and +-40 off it.
+        """
+        return _ratio(np.asarray(values, dtype=np.float64) - self.center, self.unit)
 
     def scores(self, values: ArrayLike) -> FloatArray:
         """Normal scores of the points by equal probability.
@@ -80,8 +83,14 @@ class MeanLimits:
         every zone of a run rule keep its normal probability, where `standardise` does so for the
         limit alone.
         """
-        ratio = (np.asarray(values, dtype=np.float64) - self.center) / self.spread
+        ratio = _ratio(np.asarray(values, dtype=np.float64) - self.center, self.spread)
         return t_score(ratio, self.df)
+
+
+def _ratio(off: FloatArray, unit: FloatArray) -> FloatArray:
+    still = unit == 0
+    edge = np.where(off == 0, 0.0, np.copysign(SCORE_LIMIT, off))
+    return np.where(still, edge, off / np.where(still, 1.0, unit))
 
 
 def mean_limits(
@@ -129,8 +138,8 @@ def mean_limits(
     Quality Technology 2). That is exact for points sampled like the baseline. For others the
     simulated rate is 0.0025 to 0.0027 after 30 lots and 0.0014 to 0.0033 after 12. Map and overlay
     terms are means with one value a wafer: summarise them with one site and pass `n_sites=1`.
-    Wafers of one lot share its lot effect, so points of
-    `point="wafer"` are not independent of one another.
+    Wafers of one lot share its lot effect, so points of `point="wafer"` are not independent of one
+    another.
     """
     wafers, sites, place = np.broadcast_arrays(n_wafers, n_sites, stream)
     weights = point_weights(wafers, sites, point=options.point)
@@ -155,7 +164,8 @@ def mean_limits(
         df, error = np.full(variance.shape, np.inf), np.zeros_like(variance)
     still = variance == 0
     spread = np.sqrt(variance + error)
-    half = np.where(still, 0.0, t_quantile(options.rate, np.where(still, np.inf, df)) * spread)
+    df = np.where(still, np.inf, df)
+    half = np.where(still, 0.0, t_quantile(options.rate, df) * spread)
     return MeanLimits(
         center=middle,
         sigma=np.sqrt(variance),

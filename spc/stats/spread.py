@@ -17,7 +17,7 @@ from spc.stats.components import Components
 from spc.stats.constants import c4
 from spc.stats.grouping import FloatArray, IntArray, sum_by
 from spc.stats.limit_options import DEFAULT, LimitOptions
-from spc.stats.tails import f_quantile, f_score
+from spc.stats.tails import SCORE_LIMIT, f_quantile, f_score
 
 
 @dataclass(frozen=True)
@@ -115,7 +115,8 @@ def spread_score(
     Returns
     -------
     array of float
-        NaN where df is 0 or sigma 0; within +- 40 (a spread of 0 scores -40).
+        Within +- 40 (a spread of 0 scores -40). NaN where df is 0. Where sigma is 0, a spread of
+        0 scores 0 and any other 40.
 
     Notes
     -----
@@ -124,9 +125,11 @@ def spread_score(
     x, s, nu, other = np.broadcast_arrays(
         *(np.asarray(v, dtype=np.float64) for v in (value, sigma, df, df_sigma))
     )
-    usable = (s > 0) & (nu > 0) & (x >= 0) & (other > 0)
-    ratio = np.where(usable, x, 1.0) / np.where(usable, s, 1.0)
+    usable = (s >= 0) & (nu > 0) & (x >= 0) & (other > 0)
+    still = s == 0
+    ratio = np.where(usable, x, 1.0) / np.where(usable & ~still, s, 1.0)
     score = f_score(ratio**2, np.where(usable, nu, 1.0), np.where(usable, other, 1.0))
+    score = np.where(still, np.where(x > 0, SCORE_LIMIT, 0.0), score)
     return np.where(usable, score, np.nan)
 
 

@@ -223,6 +223,20 @@ def test_spread_limits_are_chi_square_limits(df: int) -> None:
     np.testing.assert_allclose(spread_score(values, 2.0, df), [-3.0, 0.0, 3.0], atol=1e-8)
 
 
+def test_streams_without_variation_have_limits_on_the_centre() -> None:
+    lot = np.repeat(np.arange(6), 2)
+    still = WaferSummary(np.zeros_like(lot), lot, np.full(12, 4), np.full(12, 1200.1), np.zeros(12))
+    fit = nested_components(still)
+    for options in (LimitOptions(), WIDE):
+        limits = mean_limits(fit, 2, 4, options=options)
+        assert float(limits.lower) == float(limits.center) == float(limits.upper)
+        for score in (limits.standardise, limits.scores):
+            np.testing.assert_array_equal(score([limits.center, 0.0, 2e3]), [0.0, -40.0, 40.0])
+        within = within_limits(fit, 2, 4, options=options)
+        assert float(within.upper) == 0.0
+        np.testing.assert_array_equal(within.scores([0.0, 0.1]), [0.0, 40.0])
+
+
 def test_spread_limits_from_an_estimated_sigma_are_f_limits() -> None:
     limits = spread_limits(1.0, 8, df_sigma=40, options=WIDE)
     assert float(limits.upper) ** 2 == pytest.approx(stats.f.isf(ALPHA / 2, 8, 40), rel=1e-9)
