@@ -19,7 +19,7 @@ from spc.stats.attribution_effects import Effect
 from spc.stats.attribution_evidence import FloatArray, statistic_class
 from spc.stats.attribution_state import Candidate, Found, State
 
-_HOPELESS = -3.0
+_HOPELESS = -5.0
 _BORNE_OUT = 3.0
 _PASSES = 2
 _MERGE_SLACK = 1.0

@@ -118,6 +118,8 @@ def ar1_inflation(m: FloatArray, phi: FloatArray) -> FloatArray:
 
     `m` points (values under 1 count as 1) and `phi` broadcast together. Source: module docstring.
     """
+    if not np.any(phi):
+        return np.ones(np.broadcast_shapes(np.shape(m), np.shape(phi)))
     m = np.maximum(m, 1.0)
     one = 1.0 - phi
     return (1.0 + phi) / one - 2.0 * phi * (1.0 - phi**m) / (m * one**2)

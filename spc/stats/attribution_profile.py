@@ -24,7 +24,7 @@ from spc.stats.attribution_evidence import (
 from spc.stats.attribution_noise import Noise
 from spc.stats.attribution_search import OffsetModel, inclusion, new_cells, offset_model
 
-_MAX_BINS = 72
+_MAX_BINS = 64
 _NEAR = 12
 
 
@@ -68,7 +68,7 @@ def profile_level(
     Only windows with a cell measured after `options.since` are looked at. Returns None when the level has no monitored cell.
     """
     cells = np.flatnonzero(evidence.monitoring & column.cells(level))
-    if not len(cells):
+    if not len(cells) or not new_cells(evidence, options)[cells].any():
         return None
     info, share = noise.information(np.where(column.cells(level), 0, -1))
     look = _Look.of(evidence, noise, column, cells, y, info[cells], share[cells], unknown, options)
@@ -149,25 +149,28 @@ class _Look:
         ends = np.append(start[1:], 1.0 / 24.0)
         total = s0[:, 0] * self.model.full / np.maximum(i0[:, 0], 1e-300)
 
+        # Only windows that hold something new: (start bin, end bin) pairs, flat.
+        fresh = np.bincount(at, self.new, k)[::-1].cumsum()[::-1]
+        a, b = np.nonzero(fresh[:, None] - np.append(fresh, 0.0)[None, 1:] > 0)
+
         def window(c: FloatArray) -> FloatArray:
-            out: FloatArray = c[:, :k, None] - c[:, None, 1:]
+            out: FloatArray = c[:, a] - c[:, b + 1]
             return out
 
-        t0 = start[None, :, None]
-        w_s0, w_i0, w_i1, w_points = window(s0), window(i0), window(i1), window(points)
-        reach = np.maximum(ends[None, :] - start[:, None], 1.0 / 24.0)
+        t0 = start[a]
+        w_i0, w_i1, w_points = window(i0), window(i1), np.maximum(window(points), 0.0)
+        w_s0 = window(s0)
+        reach = np.maximum(ends[b] - t0, 1.0 / 24.0)
         step = self.model.terms(
-            np.maximum(w_i0, 0.0), w_i0, np.maximum(w_points, 0.0), self.tau2[:, None, None]
-        ).log_bayes(w_s0, total[:, None, None])
+            np.maximum(w_i0, 0.0), w_i0, w_points, self.tau2[:, None]
+        ).log_bayes(w_s0, total[:, None])  # fmt: skip
         info = np.maximum(window(i2) - 2.0 * t0 * w_i1 + t0**2 * w_i0, 0.0)
         ramp = self.model.terms(
-            info, w_i1 - t0 * w_i0, np.maximum(w_points, 0.0),
-            self.tau2[:, None, None] / reach[None] ** 2,
-        ).log_bayes(window(s1) - t0 * w_s0, total[:, None, None])  # fmt: skip
-        fresh = np.bincount(at, self.new, k)[::-1].cumsum()[::-1]
-        upper = fresh[:, None] - np.append(fresh, 0.0)[None, 1:] > 0
-        raw_step = np.where(upper, self._over_families(step), -np.inf)
-        raw_ramp = np.where(upper, self._over_families(ramp), -np.inf)
+            info, w_i1 - t0 * w_i0, w_points, self.tau2[:, None] / reach**2
+        ).log_bayes(window(s1) - t0 * w_s0, total[:, None])  # fmt: skip
+        raw_step, raw_ramp = np.full((k, k), -np.inf), np.full((k, k), -np.inf)
+        raw_step[a, b] = self._over_families(step)
+        raw_ramp[a, b] = self._over_families(ramp)
         raw_lot, prior_lot = self._lots(total)
         log = {name: np.log(value) for name, value in self.options.shape_prior.items()}
         open_step, open_ramp, closed = self._priors(k)

@@ -83,12 +83,14 @@ class OffsetModel:
 @dataclass(frozen=True)
 class Windows:
     """All windows of one kind. `kind` step, ramp, window or lot; `terms` per (pair, window);
-    `prior` log prior per (level, window), -inf where not allowed; `width` in bins."""
+    `prior` log prior per (level, window), -inf where not allowed; `width` in bins; `first` is the
+    bin of the first window (those before it are not allowed for any level)."""
 
     kind: str
     terms: Terms
     prior: FloatArray
     width: int = 0
+    first: int = 0
 
 
 @dataclass(frozen=True)
@@ -114,6 +116,7 @@ class Plan:
     log_not: FloatArray
     full_scale: FloatArray
     windows: tuple[Windows, ...]
+    lot_cells: IntArray
     lot_pair: IntArray
     lot_owner: IntArray
     lot_start: IntArray
@@ -154,12 +157,14 @@ def scan(plan: Plan, y: FloatArray) -> Best:
             elif windows.kind == "ramp":
                 s = c1[:, :n_bins] - edge_of_pair * c0[:, :n_bins]
             else:
-                s = c0[:, : n_bins - windows.width] - c0[:, windows.width : n_bins]
+                begin, stop = windows.first, windows.first + windows.prior.shape[1]
+                s = c0[:, begin:stop] - c0[:, begin + windows.width : stop + windows.width]
             b = windows.terms.log_bayes(s, total[:, None])
             b = np.logaddexp(plan.log_not[:, None], plan.log_pi[:, None] + b)
             table = np.add.reduceat(b, plan.start, axis=0) + windows.prior
             at = table.argmax(1)
             best = table[np.arange(n_levels), at]
+            at = at + windows.first
         better = best > score
         score = np.where(better, best, score)
         kind = np.where(better, i, kind)
@@ -176,7 +181,7 @@ def _scan_lots(
     at = np.zeros(n_levels, dtype=np.int64)
     if not len(plan.lot_start):
         return best, at
-    s = np.bincount(plan.lot_pair, own, len(plan.lot_owner))
+    s = np.bincount(plan.lot_pair, own[plan.lot_cells], len(plan.lot_owner))
     b = windows.terms.log_bayes(s, total[plan.lot_owner])
     b = np.logaddexp(plan.log_not[plan.lot_owner], plan.log_pi[plan.lot_owner] + b)
     value = np.add.reduceat(b, plan.lot_start) + windows.prior
@@ -236,8 +241,8 @@ def make_plan(
         full_scale=1.0 / ar1_inflation(
             np.bincount(pair, share[cells]) / model.series, model.phi
         ),
-        windows=windows, lot_pair=lots[0], lot_owner=lots[1], lot_start=lots[2],
-        lot_code=lots[3], lot_level=lots[4],
+        windows=windows, lot_cells=lots[0], lot_pair=lots[1], lot_owner=lots[2],
+        lot_start=lots[3], lot_code=lots[4], lot_level=lots[5],
     )  # fmt: skip
 
 
@@ -368,22 +373,26 @@ class _WindowBuilder:
         priors = [self._window_allowed(w) for w in _WIDTHS if w < n_bins]
         count = np.maximum(sum(p.sum(1) for p in priors), 1)
         for width, allowed in zip(_WIDTHS, priors, strict=False):
-            i = i0[:, : n_bins - width] - i0[:, width:]
-            p = points[:, : n_bins - width] - points[:, width:]
-            prior = np.where(allowed, -np.log(count)[:, None], -np.inf)
+            some = np.flatnonzero(allowed.any(0))
+            if not len(some):
+                continue
+            begin, stop = int(some[0]), int(some[-1]) + 1
+            i = i0[:, begin:stop] - i0[:, begin + width : stop + width]
+            p = points[:, begin:stop] - points[:, begin + width : stop + width]
+            prior = np.where(allowed[:, begin:stop], -np.log(count)[:, None], -np.inf)
             terms = self.model.terms(i, i, p, tau2[:, None])
-            out.append(Windows("window", terms, self._add(prior, "window"), width))
+            out.append(Windows("window", terms, self._add(prior, "window"), width, begin))
         lots = self._lots()
-        pair_of_lot, lot_level = lots[1], lots[4]
-        info = np.bincount(lots[0], self.info, len(pair_of_lot))
-        number = np.bincount(lots[0], self.share, len(pair_of_lot))
+        some, entry, pair_of_lot, lot_level = lots[0], lots[1], lots[2], lots[5]
+        info = np.bincount(entry, self.info[some], len(pair_of_lot))
+        number = np.bincount(entry, self.share[some], len(pair_of_lot))
         model = OffsetModel(
             self.model.variance[pair_of_lot], self.model.full[pair_of_lot],
             self.model.phi[pair_of_lot], self.model.series[pair_of_lot],
         )  # fmt: skip
         terms = model.terms(info, info, number, 4.0 * tau2[pair_of_lot])
-        out.append(Windows("lot", terms, self._add(self._lot_prior(lots), "lot")))
-        assert lot_level.ndim == 1
+        prior = -np.log(np.maximum(np.bincount(lot_level), 1))[lot_level]
+        out.append(Windows("lot", terms, self._add(prior, "lot")))
         return tuple(out), lots
 
     def _table(self, weight: FloatArray) -> FloatArray:
@@ -434,19 +443,15 @@ class _WindowBuilder:
         fresh = _suffix(self._level_table(self.new.astype(float)))
         return occupied & (fresh[:, : n_bins - width] - fresh[:, width:] > 0)
 
-    def _lots(self) -> tuple[IntArray, IntArray, IntArray, IntArray, IntArray]:
-        """Index the (level, lot, family) entries: entry of each cell, pair of each entry, first
-        entry of each (level, lot), its lot and its level."""
+    def _lots(self) -> tuple[IntArray, ...]:
+        """Index the (level, lot, family) entries of lots with something new: the cells concerned
+        (position in `cells`), the entry of each, the pair of each entry, the first entry of each
+        (level, lot), its lot and its level."""
         lot = self.evidence.lot[self.cells]
         n_lots, n_pairs = int(lot.max()) + 1, len(self.family)
-        key = (self.level * n_lots + lot) * n_pairs + self.pair
+        level_lot = self.level * n_lots + lot
+        some = np.flatnonzero(np.isin(level_lot, level_lot[self.new]))
+        key = level_lot[some] * n_pairs + self.pair[some]
         keys, entry = np.unique(key, return_inverse=True)
-        level_lot, first = np.unique(keys // n_pairs, return_index=True)
-        return entry, keys % n_pairs, first, level_lot % n_lots, level_lot // n_lots
-
-    def _lot_prior(self, lots: tuple[IntArray, ...]) -> FloatArray:
-        entry, _, first, _, level = lots
-        fresh_entry = np.bincount(entry, self.new, len(lots[1])) > 0
-        fresh = np.maximum.reduceat(fresh_entry, first)
-        count = np.bincount(level, fresh)
-        return np.where(fresh, -np.log(np.maximum(count[level], 1)), -np.inf)
+        found, first = np.unique(keys // n_pairs, return_index=True)
+        return some, entry, keys % n_pairs, first, found % n_lots, found // n_lots

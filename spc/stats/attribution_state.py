@@ -21,7 +21,7 @@ from spc.stats.attribution_evidence import (
     FloatArray,
     IntArray,
 )
-from spc.stats.attribution_fit import Fit, fit_effect
+from spc.stats.attribution_fit import Fit, fit_effect, pattern_of
 from spc.stats.attribution_noise import Noise, estimate_noise
 from spc.stats.attribution_profile import Profile, profile_level
 from spc.stats.attribution_search import Plan, make_plan, scan
@@ -205,6 +205,10 @@ class State:
             if column.factors == (WHOLE,) or column.twin_of >= 0 or not len(known):
                 continue
             candidate = self.candidate(column, int(np.bincount(known).argmax()))
+            shape = found.profile.shape
+            pattern = pattern_of(column, candidate.level, shape, self.evidence)
+            if jaccard(found.fit.cells, np.flatnonzero(pattern)) < 0.5:
+                continue
             profile = self.look(candidate, y, fresh)
             if profile is None or profile.gain < found.profile.gain / 2.0:
                 continue

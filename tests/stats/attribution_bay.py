@@ -176,9 +176,6 @@ class _Maker:
         rng, bay = self.rng, self.bay
         n_families = int(family.max()) + 1
         score = self.is_score(data)
-        common = rng.standard_normal((self.n, n_families, 2))
-        for t in range(1, self.n):  # simulation of a recursion, not of the product
-            common[t] = common[t]
         tool = np.where(data["characteristic"] == 0, data["coat.tool"], data["tool"])
         lots = self._ar(tool, data["lot"], family, n_families)
         own_lot = self._point_noise(data, family)
@@ -203,14 +200,13 @@ class _Maker:
     ) -> np.ndarray:
         from scipy.signal import lfilter
 
-        phi = min(0.95, self.bay.phi / 0.6)
+        phi = self.bay.phi
         out = np.empty(len(tool))
         for t in np.unique(tool).tolist():
             mine = tool == t
             lots = np.unique(lot[mine])
             e = self.rng.standard_normal((len(lots), n_families))
             z = lfilter([np.sqrt(1.0 - phi**2)], [1.0, -phi], e, axis=0)
-            z[:5] += 0.0
             out[mine] = z[np.searchsorted(lots, lot[mine]), family[mine]]
         return out
 
@@ -272,8 +268,7 @@ class _Maker:
         claimed = rng.chisquare(bay.variance_df, m) / bay.variance_df
         lot = np.where(score, 0.0, 1.0) * claimed
         own = np.where(score, 1.0, 0.6) * claimed
-        phi_true = np.where(score, 0.0, bay.phi)
-        phi = np.clip(phi_true + rng.standard_normal(m) / np.sqrt(points), -0.9, 0.9)
+        phi = _lag_one(series, point, data["t_process"], value - center[series], base, m)
         levels = np.stack([data[name] for name in FACTORS], axis=1).astype(np.int64)
         times = np.full(levels.shape, np.nan)
         for name in ("coat.tool", "coat.module", "resist_batch"):
@@ -289,6 +284,21 @@ class _Maker:
             var_center=np.where(score, 0.02, (lot + own) / points * (1 + bay.phi) / (1 - bay.phi)),
             t_level=times,
         )  # fmt: skip
+
+
+def _lag_one(
+    series: np.ndarray, point: np.ndarray, time: np.ndarray, residual: np.ndarray,
+    base: np.ndarray, m: int,
+) -> np.ndarray:  # fmt: skip
+    """Lag-1 autocorrelation of the baseline points of each series, as a caller would find it."""
+    _, first, code = np.unique(point[base], return_index=True, return_inverse=True)
+    mean = np.bincount(code, residual[base]) / np.bincount(code)
+    owner = series[base][first]
+    order = np.lexsort((time[base][first], owner))
+    mean, owner = mean[order], owner[order]
+    same = owner[1:] == owner[:-1]
+    top = np.bincount(owner[1:][same], (mean[1:] * mean[:-1])[same], m)
+    return np.clip(top / np.maximum(np.bincount(owner, mean**2, m), 1e-9), -0.9, 0.9)
 
 
 SIGMA = float(np.sqrt(1.6))
