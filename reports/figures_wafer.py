@@ -110,7 +110,7 @@ def _values(
         format=f".{decimals}f",
     ) if not numbered else None  # fmt: skip
     dots = base.mark_point(
-        filled=True, opacity=1, size=size, stroke=light("sheet"), strokeWidth=0.6
+        filled=True, opacity=1, size=size, stroke=light("soft"), strokeWidth=0.6
     ).encode(
         x=x,
         y=y,

@@ -6,7 +6,7 @@ from dataclasses import dataclass
 from typing import Any
 
 from reports.model import ChartPoint, ChartSeries, ExcursionCard, FeedNotice, NightPage
-from reports.numbers import LocalClock, count, interval, number, quantity
+from reports.numbers import LocalClock, count, decimals_for, number, unit_name
 from reports.pages import Figure, link, map_figure, overlay_figure, page, time_figure
 from reports.sentences import (
     clock_of,
@@ -15,7 +15,6 @@ from reports.sentences import (
     night_sentence,
     rules_words,
     sentence,
-    series_name,
 )
 from reports.tables import Cell, Column, Row, Table, name_cell, number_cell, time_cell
 from reports.texts import plural, shown, text
@@ -146,47 +145,53 @@ def points_table(
     series: ChartSeries, points: tuple[ChartPoint, ...], name: str, caption: str, clock: LocalClock
 ) -> Table:
     """Plotted points with their limits and the rules they broke, in words."""
-    unit = series.unit
-    digits = 2 if unit != "1" else 3
     rows = []
     for point in points:
-        low, high = point.lower_limit, point.upper_limit
-        limits = interval(low, high) if low is not None and high is not None else number(high)
+        decimals = decimals_for(point.sigma) if point.sigma else None
+        low, high = number(point.lower_limit, decimals), number(point.upper_limit, decimals)
         lot = point.lot if not point.wafer else f"{point.lot} {point.wafer}"
         rows.append(
             Row(
                 (
                     time_cell(point.at, clock),
                     name_cell(lot),
-                    number_cell(point.value, quantity(round(point.value, digits), unit)),
-                    Cell(limits),
+                    number_cell(point.value, number(point.value, decimals)),
+                    Cell(text("number.interval", low=low, high=high)),
                     number_cell(point.n_sites, count(point.n_sites)),
                     Cell(rules_words(point.rules) or text(f"phase.{point.phase}")),
                 ),
                 marked=bool(point.rules),
             )
         )
+    unit = unit_name(series.unit)
+    heading = text("column.value", unit=unit) if unit else text("column.bare")
     columns = (
         Column(text("column.at"), "at", "time"),
         Column(text("column.lot"), "lot"),
-        Column(series_name(shown(series.characteristic), series.statistic), "value", "number"),
-        Column(text("column.limits"), "limits"),
-        Column(text("column.readings"), "n_sites", "number"),
+        Column(heading, f"value_{unit}" if unit else "value", "number"),
+        Column(text("column.limits"), "limits", extra=True),
+        Column(text("column.readings"), "n_sites", "number", extra=True),
         Column(text("column.rules"), "rules"),
     )
     return Table(name, caption, columns, tuple(rows), file=name)
 
 
-def _tables(series: ChartSeries, name: str, clock: LocalClock) -> tuple[Table, Table]:
-    """The points that matter (newest first, a few), and all of them."""
+def recent_points(series: ChartSeries, name: str, clock: LocalClock, most: int) -> Table:
+    """The points that matter, newest first: those since it began and those that broke a rule."""
     newest = tuple(reversed(series.points))
     onset = series.onset
-    own = [p for p in newest if p.rules or (onset and p.at >= onset.earliest)]
-    few = tuple(own[:_POINTS_SHOWN] or newest[:_POINTS_SHOWN])
-    caption = plural("night.points", len(few), count=len(few), all=len(own) or len(newest))
+    own = [p for p in newest if p.rules or (onset and p.at >= onset.earliest)] or list(newest)
+    few = tuple(own[:most])
+    caption = plural("night.points", len(few), count=len(few), all=len(own))
+    return points_table(series, few, f"{name}-points", caption, clock)
+
+
+def _tables(series: ChartSeries, name: str, clock: LocalClock) -> tuple[Table, Table]:
+    """The points that matter, and all of them."""
+    newest = tuple(reversed(series.points))
     everything = plural("night.all_points", len(newest), count=count(len(newest)))
     return (
-        points_table(series, few, f"{name}-points", caption, clock),
+        recent_points(series, name, clock, _POINTS_SHOWN),
         points_table(series, newest, f"{name}-all", everything, clock),
     )
 

@@ -173,13 +173,14 @@ class LocalClock:
     as_of: datetime
 
     def moment(self, stamp: datetime | None) -> str:
-        """`Tue 22:40` within six days of `as_of`, else with the date (and year, if another)."""
+        """`Tue 22:40` within six days before `as_of`, else with the date (and year, if another)."""
         if stamp is None:
             return NOTHING
         local = stamp.astimezone(self.zone)
         clock = f"{local:%H:%M}" + self._twice(local)
-        days = abs((self.as_of.astimezone(self.zone).date() - local.date()).days)
-        if days < 6:
+        days = (self.as_of.astimezone(self.zone).date() - local.date()).days
+        # a weekday alone is one that has been; what is to come gets its date
+        if 0 <= days < 6:
             return text("time.near", weekday=self._weekday(local), clock=clock)
         return text("time.far", weekday=self._weekday(local), date=self.day(stamp), clock=clock)
 

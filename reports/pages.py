@@ -85,14 +85,18 @@ def time_figure(
     label = figures.chart_label(series)
     wide, narrow = (figures.control_chart(series, edition, size, axis) for size in sizes)
     made = drawn(name, label, wide, narrow)
-    clock = LocalClock(edition.zone, edition.as_of)
+    events = series_events(series, LocalClock(edition.zone, edition.as_of))
+    return Figure(made.name, label, made.wide, made.narrow, events, text("chart.key"))
+
+
+def series_events(series: ChartSeries, clock: LocalClock) -> tuple[tuple[str, str], ...]:
+    """Letters and words of the events that stand on the axis of a series."""
     start = series.points[0].at
-    events = tuple(
+    return tuple(
         (event_letter(i), event_words(event, clock))
         for i, event in enumerate(ordered_events(series))
         if event.at >= start
     )
-    return Figure(made.name, label, made.wide, made.narrow, events, text("chart.key"))
 
 
 def map_figure(name: str, picture: WaferMapPicture) -> Figure:

@@ -30,6 +30,12 @@ class Column:
     heading: str
     name: str
     kind: Kind = "text"
+    extra: bool = False  # left out on narrow screens where the table is tight
+
+    @property
+    def look(self) -> str:
+        """Its classes in a page."""
+        return f"{self.kind[0]} extra" if self.extra else self.kind[0]
 
 
 @dataclass(frozen=True)
