@@ -1,8 +1,8 @@
 """Run length of a control chart: how many points until it signals.
 
 One door for all designs: sets of run rules (Markov chain, exact), EWMA and two-sided CUSUM
-(integral equation), and by simulation, with its standard error, the few sets of rules that have
-no finite chain.
+(integral equation), rules that compare points (recursion on the last value).  The few sets of
+rules that are out of reach of these are simulated, and the standard error is stated.
 """
 
 from __future__ import annotations
@@ -25,6 +25,7 @@ from spc.stats.run_length_cusum import cusum_run_length
 from spc.stats.run_length_ewma import ewma_run_length
 from spc.stats.run_length_rules import rules_run_length
 from spc.stats.run_length_simulated import simulated_run_length
+from spc.stats.run_length_trends import trends_run_length
 
 __all__ = [
     "CusumDesign",
@@ -80,7 +81,10 @@ def run_length(
         return ewma_run_length(design, shift, n, steady_state)
     if isinstance(design, CusumDesign):
         return cusum_run_length(design, shift, n, steady_state)
+    compares = any(rule.kind in ("trending", "alternating") for rule in design.rules)
     try:
+        if compares and not steady_state:
+            return trends_run_length(design, shift, n)
         return rules_run_length(design, shift, n, steady_state)
     except NotAChainError:
         return simulated_run_length(design, shift, n, steady_state)

@@ -7,7 +7,8 @@ EWMA or a CUSUM); the arithmetic is the same.  Brook & Evans (1972), Biometrika 
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
+from functools import lru_cache
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
@@ -69,6 +70,15 @@ class Chain:
     leave: FloatArray
     start: FloatArray
     early: FloatArray = field(default_factory=lambda: np.empty(0))
+
+
+@lru_cache(maxsize=64)
+def gauss_legendre(count: int) -> tuple[FloatArray, FloatArray]:
+    """Nodes and weights on [-1, 1]; an odd count has a node at 0."""
+    nodes, weights = np.polynomial.legendre.leggauss(count)
+    for table in (nodes, weights):
+        table.flags.writeable = False
+    return nodes, weights
 
 
 class Solver:
@@ -174,15 +184,8 @@ def run_length_of(chain: Chain, n: ArrayLike | None, method: str) -> RunLength:
         second = 2.0 * (chain.start @ (chain.step @ twice)) - first
     variance = max(float(second - first**2), 0.0)
     median, chances = _quantiles(chain, n)
-    asked = None if n is None else np.asarray(n, dtype=np.int64)
-    return RunLength(
-        arl=float(1.0 + first),
-        sdrl=math.sqrt(variance),
-        median=median,
-        prob_within=None if asked is None else (float(chances[0]) if asked.ndim == 0 else chances),
-        n=None if asked is None else (int(asked) if asked.ndim == 0 else asked),
-        method=method,
-    )
+    found = RunLength(float(1.0 + first), math.sqrt(variance), median, method=method)
+    return _filled(found, n, chances)
 
 
 def check_counts(n: ArrayLike | None) -> NDArray[np.int64]:
@@ -257,3 +260,41 @@ def geometric_quantiles(
             tail = 1.0 if rate is None else -math.expm1((count - known) * math.log1p(-rate))
             chances[i] = (cumulated[-1] if known else 0.0) + left * tail
     return median, np.clip(chances, 0.0, 1.0)
+
+
+def run_length_of_masses(
+    masses: FloatArray, left: float, rate: float | None, n: ArrayLike | None, method: str
+) -> RunLength:
+    """Run length from the chance of a signal at each of the first points and a geometric tail.
+
+    Parameters
+    ----------
+    masses : array
+        Chance of the first signal at point 1, 2, ...
+    left : float
+        Chance of no signal at those points.
+    rate : float or None
+        Chance of a signal at each later point, given none before; None where `left` is nothing.
+    n : int or array of int, optional
+        Counts for `prob_within`.
+    method : str
+    """
+    asked = check_counts(n)
+    median, chances = geometric_quantiles(masses, left, rate, asked)
+    survival = left + np.cumsum(masses[::-1])[::-1][1:]
+    count = np.arange(1, masses.size)
+    first, second = float(survival.sum()), float((2 * count - 1) @ survival)
+    if rate is not None:
+        first += left / rate
+        second += left * ((2 * masses.size - 1) / rate + 2.0 * (1.0 - rate) / rate**2)
+    sd = math.sqrt(max(second - first**2, 0.0))
+    return _filled(RunLength(1.0 + first, sd, median, method=method), n, chances)
+
+
+def _filled(found: RunLength, n: ArrayLike | None, chances: FloatArray) -> RunLength:
+    """The same with the chances within n, in the shape of the n that was asked for."""
+    if n is None:
+        return found
+    if np.ndim(n) == 0:
+        return replace(found, n=int(np.asarray(n)), prob_within=float(chances[0]))
+    return replace(found, n=check_counts(n), prob_within=chances)

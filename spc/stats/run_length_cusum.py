@@ -9,7 +9,7 @@ here by the same renewal argument for the variance and the whole distribution.
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
@@ -19,9 +19,9 @@ from spc.stats.run_length_chain import (
     RunLength,
     Solver,
     check_counts,
-    geometric_quantiles,
+    gauss_legendre,
+    run_length_of_masses,
 )
-from spc.stats.run_length_ewma import gauss_legendre
 
 FloatArray = NDArray[np.float64]
 
@@ -100,20 +100,12 @@ def cusum_run_length(
     )
     asked = check_counts(n)
     masses, left, rate = _walk(upper, lower, int(asked.max()) if asked.size else 0)
-    median, array = geometric_quantiles(masses, left, rate, asked)
+    walked = run_length_of_masses(masses, left, rate, n, "integral equation")
     arl = _both_means(*_mean_of(upper), *_mean_of(lower))
     ends = sorted((upper.moments[2], lower.moments[2]))
-    if ends[1] > _FAR_APART * ends[0]:
-        sdrl = _sd_of_walk(masses, left, rate)
-    else:
-        sdrl = _both_sds(upper, lower, arl)
-    error = abs(coarse / arl - 1.0)
-    if n is None:
-        return RunLength(arl, sdrl, median, None, None, "integral equation", error)
-    if np.ndim(n) == 0:
-        chance, count = float(array[0]), int(asked[0])
-        return RunLength(arl, sdrl, median, chance, count, "integral equation", error)
-    return RunLength(arl, sdrl, median, array, asked, "integral equation", error)
+    far_apart = ends[1] > _FAR_APART * ends[0]
+    sdrl = walked.sdrl if far_apart else _both_sds(upper, lower, arl)
+    return replace(walked, arl=arl, sdrl=sdrl, relative_error=abs(coarse / arl - 1.0))
 
 
 def cusum_arl(k: float, h: float, shift: float) -> float:
@@ -188,17 +180,6 @@ def _both_sds(upper: _Side, lower: _Side, mean: float) -> float:
     total = (a2 - lower_first * a20) / (2.0 * a0) + (b2 - upper_first * b20) / (2.0 * b0) - mean
     square = total / (0.5 / a0 + 0.5 / b0)
     return math.sqrt(max(square - mean**2, 0.0))
-
-
-def _sd_of_walk(masses: FloatArray, left: float, rate: float | None) -> float:
-    """Standard deviation from the chances of each point and a geometric tail."""
-    survival = left + np.cumsum(masses[::-1])[::-1][1:]
-    count = np.arange(1, masses.size)
-    first, second = survival.sum(), (2 * count - 1) @ survival
-    if rate is not None:
-        first += left / rate
-        second += left * ((2 * masses.size - 1) / rate + 2.0 * (1.0 - rate) / rate**2)
-    return math.sqrt(max(float(second - first**2), 0.0))
 
 
 def _steady_marginal(step: FloatArray, leave: FloatArray, zero: FloatArray) -> FloatArray:

@@ -9,28 +9,25 @@ from __future__ import annotations
 
 import math
 from dataclasses import replace
-from functools import lru_cache
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
 from spc.stats.designs import EwmaDesign
 from spc.stats.ewma import limit_factors
-from spc.stats.run_length_chain import Chain, RunLength, Solver, run_length_of, steady_start
+from spc.stats.run_length_chain import (
+    Chain,
+    RunLength,
+    Solver,
+    gauss_legendre,
+    run_length_of,
+    steady_start,
+)
 
 FloatArray = NDArray[np.float64]
 
 _SETTLED_LIMITS = 1e-12
 _MOST_NODES = 2_001
-
-
-@lru_cache(maxsize=64)
-def gauss_legendre(count: int) -> tuple[FloatArray, FloatArray]:
-    """Nodes and weights on [-1, 1]; an odd count has a node at 0."""
-    nodes, weights = np.polynomial.legendre.leggauss(count)
-    for table in (nodes, weights):
-        table.flags.writeable = False
-    return nodes, weights
 
 
 def ewma_run_length(

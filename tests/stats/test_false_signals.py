@@ -9,6 +9,7 @@ import pytest
 from scipy.stats import multivariate_normal, norm
 from scipy.stats import t as student
 
+from spc.stats.ar1_chain import ar1_signals
 from spc.stats.false_signals import (
     baseline_grid,
     expected_false_signals,
@@ -127,6 +128,13 @@ class TestAutocorrelation:
         exact = 2.0 * (tail([1, 2]) + tail([0, 2]) - tail([0, 1, 2]))
         found = signal_rates(rule, phi=phi)
         assert abs(found.signals / exact - 1.0) < 4 * found.relative_error + 0.01
+
+    @pytest.mark.parametrize("phi", [0.3, 0.6])
+    def test_set_against_the_recursion_on_the_last_value(self, phi: float) -> None:
+        """With known limits the rate of signals is also had exactly, from another room."""
+        exact = ar1_signals(phi, [rule.name for rule in WESTERN_ELECTRIC]).rate
+        found = signal_rates(WESTERN_ELECTRIC, phi=phi)
+        assert abs(found.signals / exact - 1.0) < 4 * found.relative_error
 
     def test_interpolation_between_grid_points(self) -> None:
         low, middle, high = (
