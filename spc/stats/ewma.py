@@ -174,13 +174,13 @@ def ewma_chart(
 
 def _beside(value: ArrayLike, there: BoolArray, name: str) -> FloatArray:
     """Check a centre or sigma; the last axis is kept short where it does not change in time."""
-    given = np.asarray(value, dtype=np.float64)
+    given = np.atleast_1d(np.asarray(value, dtype=np.float64))
     given = given.reshape((1,) * (there.ndim - given.ndim) + given.shape)
-    used = (
-        given[np.broadcast_to(there, np.broadcast_shapes(given.shape, there.shape))]
-        if (given.shape == there.shape)
-        else given
-    )
+    try:
+        np.broadcast_to(given, there.shape)
+    except ValueError:
+        raise ValueError(f"{name} of shape {given.shape} does not fit {there.shape}") from None
+    used = given[there] if given.shape == there.shape else given
     if not np.isfinite(used).all() or (name == "sigma" and not (used > 0.0).all()):
         above = " above 0" if name == "sigma" else ""
         raise ValueError(f"the {name} of every point must be a finite number{above}")

@@ -116,6 +116,14 @@ class TestOnset:
             cusum([1.0], CusumDesign(0.5, 4.0)).onset(0)
 
 
+@pytest.mark.parametrize("shape", [(0,), (1,), (3, 0), (0, 4), (2, 1)])
+def test_small_shapes(shape: tuple[int, ...]) -> None:
+    path = cusum(np.ones(shape), CusumDesign(0.5, 4.0))
+    assert path.upper.shape == path.side.shape == shape
+    if path.upper.size:
+        assert path.onset(1).shape == shape
+
+
 def test_larger_sum_decides_the_side() -> None:
     path = cusum([0.0], CusumDesign(0.0, 1.0), start=(2.0, 3.0))
     assert path.side.tolist() == [-1]

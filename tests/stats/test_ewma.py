@@ -134,6 +134,26 @@ def test_signal_is_strict_and_has_a_side() -> None:
     assert ewma_chart([3.0, 3.1, -3.0, -3.1], design).side.tolist() == [0, 1, 0, -1]
 
 
+def test_one_centre_and_sigma_a_stream_or_a_point() -> None:
+    rng = np.random.default_rng(6)
+    x = rng.standard_normal((3, 40))
+    design = EwmaDesign(0.3, 2.5, fast_start=0.5)
+    centre, sigma = np.array([[1.0], [0.0], [-2.0]]), np.array([[1.0], [0.5], [2.0]])
+    short = ewma_chart(x, design, centre, sigma)
+    full = ewma_chart(x, design, np.tile(centre, 40), np.tile(sigma, 40))
+    for name in ("value", "sigma", "center", "lower", "upper", "side"):
+        np.testing.assert_allclose(getattr(short, name), getattr(full, name), atol=1e-13)
+    with pytest.raises(ValueError, match="sigma of shape"):
+        ewma_chart(x, design, 0.0, np.ones(7))
+
+
+@pytest.mark.parametrize("shape", [(0,), (1,), (3, 0), (0, 4), (2, 1)])
+def test_small_shapes(shape: tuple[int, ...]) -> None:
+    assert ewma(np.ones(shape), 0.5).shape == shape
+    assert ewma_chart(np.ones(shape), EwmaDesign(0.5, 3.0)).side.shape == shape
+    assert ewma_chart(np.ones(shape), EwmaDesign(0.5, 3.0), np.zeros(shape)).side.shape == shape
+
+
 @pytest.mark.parametrize("lam", [0.0, -0.1, 1.1, np.nan])
 def test_weight_out_of_range(lam: float) -> None:
     with pytest.raises(ValueError, match="lambda"):
