@@ -8,27 +8,27 @@ It is tried again when its content changes, or when the feeds of the configurati
 
 from __future__ import annotations
 
-from collections.abc import Callable
-from dataclasses import asdict, dataclass, field
+from collections.abc import Callable, Generator, Sequence
+from concurrent.futures import Future, ThreadPoolExecutor
+from contextlib import ExitStack, closing
+from dataclasses import dataclass
 from datetime import datetime
 
 from sqlalchemy import Connection, Engine
 
 from config.load import Bay
-from ingest.drops import Content, Drop, NotSettledError, find_drops, read_drop, settled
-from ingest.feeds import REQUIRED, Feeds, feeds_of
-from ingest.log_rows import EventBatch, LogBatch, store_events, store_log
-from ingest.prepare import Prepared, Rulebook, prepare
-from ingest.readings import Batch
-from ingest.report import Counts, FileReport, IngestReport, Kind, LateFeed, Reason
-from ingest.store_readings import Stored, store_readings
+from ingest.drops import Drop, NotSettledError, find_drops, read_drop, settled
+from ingest.feeds import feeds_of
+from ingest.prepare import Rulebook
+from ingest.report import FileReport, IngestReport, LateFeed, Reason
+from ingest.store import Fetched, Store
 from ingest.units import planned_units
 from spc.records import ledger
-from spc.records.interned import Vocabulary
 from spc.records.sessions import reading
 from spc.records.stamps import to_us
 
-_REASON_KEPT = 2000
+# Larger files are not read ahead: two of the largest at once would need too much memory.
+READ_AHEAD_BYTES = 16 * 1024 * 1024
 
 Progress = Callable[[int, int, str], None]
 
@@ -84,20 +84,24 @@ def take_in(
         else:
             waiting.append(_waiting(drop, "was changed just now and may still be written"))
     rulebook = Rulebook(settings, planned_units(bay.plan), units)
-    intake = _Pass(engine, clock_us, feeds, rulebook, stale)
-    reports = []
+    store = Store(engine, clock_us, feeds, rulebook)
+    reports: list[FileReport] = []
     stopped = False
-    for done, drop in enumerate(todo):
-        if stop():
-            stopped = True
-            break
-        if progress is not None:
-            progress(done, len(todo), drop.path)
-        report = intake.take(drop)
-        if report is None:
-            unchanged += 1
-        else:
-            reports.append(report)
+    with closing(_in_hand(todo, store)) as in_hand:
+        for done, drop in enumerate(todo):
+            if stop():
+                stopped = True
+                break
+            if progress is not None:
+                progress(done, len(todo), drop.path)
+            claimed = next(in_hand)
+            report = claimed.waiting
+            if claimed.fetched is not None:
+                report = store.store(claimed.fetched)
+            if report is None:
+                unchanged += 1
+            else:
+                reports.append(report)
     with reading(engine) as connection:
         late = _late_feeds(connection, bay, clock_us)
     return IngestReport(
@@ -108,142 +112,52 @@ def take_in(
     )
 
 
-@dataclass
-class _Pass:
-    """What one pass carries from file to file."""
+@dataclass(frozen=True)
+class _Claimed:
+    """A file in hand: read, or the reason why it has to wait. `release` gives it back."""
 
-    engine: Engine
-    clock_us: int
-    feeds: Feeds
-    rulebook: Rulebook
-    stale: set[str]
-    vocabulary: Vocabulary = field(default_factory=Vocabulary)
-
-    def take(self, drop: Drop) -> FileReport | None:
-        """Take in one file; None when its content was seen under this very path before."""
-        with ledger.claimed(self.engine, drop.path) as mine:
-            if not mine:
-                return _waiting(drop, "another worker has it in hand")
-            try:
-                content = read_drop(drop, self.rulebook.settings.drops.max_file_bytes)
-            except NotSettledError as error:
-                return _waiting(drop, str(error))
-            with reading(self.engine) as connection:
-                entry = ledger.entry_of(connection, content.digest)
-            prepared = None
-            if entry is None or content.digest in self.stale:
-                prepared = self._prepare(drop, content)
-            try:
-                with self.engine.begin() as connection:
-                    ledger.begin_storing(connection)
-                    report = self._store(connection, drop, content, prepared)
-            except BaseException:
-                self.vocabulary.forget()
-                raise
-            self.vocabulary.keep()
-            self.stale.discard(content.digest)
-            return report
-
-    def _prepare(self, drop: Drop, content: Content) -> Prepared:
-        return prepare(content, self.feeds.of(drop.path), self.rulebook)
-
-    def _store(
-        self, connection: Connection, drop: Drop, content: Content, prepared: Prepared | None
-    ) -> FileReport | None:
-        sighting = ledger.Sighting(drop.path, drop.size, drop.modified_ns, content.digest)
-        entry = ledger.entry_of(connection, content.digest)
-        again = entry is not None and entry.outcome == "quarantined" and prepared is not None
-        if entry is not None and not again:
-            before = ledger.sighting_of(connection, drop.path)
-            ledger.record_sighting(connection, sighting, self.clock_us)
-            if drop.path == entry.path or (before and before.content_hash == content.digest):
-                return None
-            reason = Reason(None, None, None, f"the same content as {entry.path}")
-            return FileReport(drop.path, "duplicate", _kind(entry.kind), reasons=(reason,))
-        assert prepared is not None  # a content without an entry was prepared
-        known = ledger.parameter_units(connection)
-        if prepared.contradicts(known):
-            self.rulebook.stored_units.update(known)
-            prepared = self._prepare(drop, content)
-        report = self._write(connection, drop, content, prepared, entry)
-        new_units = {p: u for p, u in prepared.units.items() if p not in known}
-        ledger.record_units(connection, new_units)
-        self.rulebook.stored_units.update(new_units)
-        ledger.record_sighting(connection, sighting, self.clock_us)
-        if again and report.outcome == "quarantined":
-            return None  # refused before, and refused again
-        return report
-
-    def _write(
-        self,
-        connection: Connection,
-        drop: Drop,
-        content: Content,
-        prepared: Prepared,
-        stale: ledger.LedgerEntry | None,
-    ) -> FileReport:
-        """Write the row of the ledger, the rows of the file and its rejects."""
-        refused = prepared.refused
-        values: dict[str, object] = {
-            "content_hash": content.digest,
-            "path": drop.path,
-            "kind": None if refused else prepared.kind,
-            "outcome": "quarantined" if refused else "loaded",
-            "reason": str(refused)[:_REASON_KEPT] if refused else None,
-            "feed": prepared.feed,
-            "bytes": drop.size,
-            "loaded_us": self.clock_us,
-            "newest_us": prepared.newest_us,
-            "read_with": self.feeds.digest,
-        }
-        file_id = ledger.open_entry(connection, values, stale)
-        if refused is not None:
-            return FileReport(
-                drop.path, "quarantined", prepared.kind, prepared.feed, reasons=(refused,)
-            )
-        stored = store_batch(connection, file_id, prepared, self.vocabulary)
-        counts = Counts(
-            rows=prepared.rows,
-            loaded=stored.loaded,
-            duplicate=stored.duplicate,
-            superseded=stored.superseded,
-            rejected=prepared.rejected,
-        )
-        ledger.close_entry(connection, file_id, asdict(counts))
-        reasons, warnings = prepared.reasons(), prepared.warned()
-        for severity, kept in (("rejected", reasons), ("warned", warnings)):
-            ledger.record_rejects(connection, file_id, severity, map(_row, kept))
-        return FileReport(
-            drop.path,
-            "loaded",
-            prepared.kind,
-            prepared.feed,
-            counts,
-            tuple(reasons),
-            tuple(warnings),
-        )
+    fetched: Fetched | None
+    waiting: FileReport | None
+    release: Callable[[], None]
 
 
-def store_batch(
-    connection: Connection, file_id: int, prepared: Prepared, vocabulary: Vocabulary
-) -> Stored:
-    """Store the good rows of a file; those in conflict with stored ones are marked as faulty."""
-    batch = prepared.batch
-    if isinstance(batch, Batch):
-        return store_readings(connection, file_id, batch, vocabulary, prepared.faults)
-    if isinstance(batch, LogBatch):
-        return Stored(*store_log(connection, file_id, batch, vocabulary), 0)
-    if isinstance(batch, EventBatch):
-        return Stored(*store_events(connection, file_id, batch), 0)
-    return Stored(0, 0, 0)
+def _fetch(drop: Drop, store: Store) -> _Claimed:
+    """Claim, read and prepare one file; needs no transaction and may run beside the storing."""
+    with ExitStack() as stack:
+        if not stack.enter_context(ledger.claimed(store.engine, drop.path)):
+            return _Claimed(None, _waiting(drop, "another worker has it in hand"), _nothing)
+        try:
+            content = read_drop(drop, store.rulebook.settings.drops.max_file_bytes)
+        except NotSettledError as error:
+            return _Claimed(None, _waiting(drop, str(error)), _nothing)
+        with reading(store.engine) as connection:
+            entry = ledger.entry_of(connection, content.digest)
+        prepared = store.prepare(drop, content) if store.deserves_a_try(entry) else None
+        return _Claimed(Fetched(drop, content, prepared), None, stack.pop_all().close)
+    raise AssertionError  # pragma: no cover - the stack swallows nothing
 
 
-def _row(one: Reason) -> tuple[int, str | None, str | None, str, str | None]:
-    return one.line or 0, one.column, one.value, one.reason, one.text
+def _nothing() -> None:
+    """Release of what was never claimed."""
 
 
-def _kind(text: str | None) -> Kind | None:
-    return next((kind for kind in REQUIRED if kind == text), None)
+def _in_hand(todo: Sequence[Drop], store: Store) -> Generator[_Claimed, None, None]:
+    """Each file in turn; while one is stored the next is read already, if it is not too large."""
+    with ThreadPoolExecutor(1, thread_name_prefix="ingest") as pool:
+        ahead: Future[_Claimed] | None = None
+        try:
+            for i, drop in enumerate(todo):
+                current = ahead.result() if ahead is not None else _fetch(drop, store)
+                ahead = None
+                if i + 1 < len(todo) and todo[i + 1].size <= READ_AHEAD_BYTES:
+                    ahead = pool.submit(_fetch, todo[i + 1], store)
+                try:
+                    yield current
+                finally:
+                    current.release()
+        finally:
+            if ahead is not None:
+                ahead.result().release()
 
 
 def _waiting(drop: Drop, why: str) -> FileReport:

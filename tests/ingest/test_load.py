@@ -14,7 +14,7 @@ from pathlib import Path
 import pytest
 from sqlalchemy import Engine
 
-import ingest.load
+import ingest.store
 from ingest.drops import DropFolderError
 from tests.ingest.intake import CLOCK, Intake, reading, sheet
 
@@ -208,7 +208,7 @@ def test_failure_in_a_file_leaves_nothing_of_it(
 ) -> None:
     night.drop("a.csv", sheet(reading()))
     night.drop("b.csv", sheet(reading(lot="N2", tool="TRK9"), reading("x", lot="N2")))
-    real = ingest.load.ledger.record_rejects
+    real = ingest.store.ledger.record_rejects
     calls = []
 
     def broken(*args: object) -> None:
@@ -217,7 +217,7 @@ def test_failure_in_a_file_leaves_nothing_of_it(
             raise RuntimeError("pulled the plug")
         real(*args)  # type: ignore[arg-type]
 
-    monkeypatch.setattr(ingest.load.ledger, "record_rejects", broken)
+    monkeypatch.setattr(ingest.store.ledger, "record_rejects", broken)
     with pytest.raises(RuntimeError, match="pulled the plug"):
         night.take()
     monkeypatch.undo()
