@@ -7,10 +7,11 @@ level of a factor, or of a conjunction of two (`attribution_candidates`), a form
 ramp, single lot; each may end), an onset, and one amplitude per family (characteristic x
 statistic); a family need not move at all.
 
-Search. All levels x onsets x forms are scored at once by a marginal likelihood (`attribution_search`),
-the best few looked at event by event (`attribution_profile`), the best one taken if chance would
-not do as well (`attribution_calibration`), explained away (`attribution_fit`), and so on; then
-everything is refitted together (`attribution_greedy`). `attribution_suspects` reports.
+Search. All levels x onsets x forms are scored at once by a marginal likelihood
+(`attribution_search`), the best few looked at event by event (`attribution_profile`), the best one
+taken if chance would not do as well (`attribution_calibration`), explained away
+(`attribution_fit`), and so on; then everything is refitted together (`attribution_greedy`).
+`attribution_suspects` reports.
 
 Hand-over for the caller
 - One evidence entry per cell; statistics of spread and map distances as normal scores of variance 1
@@ -93,9 +94,7 @@ def attribute(
     search = Search(state)
     search.seed(previous_effects)
     found = search.run()
-    return tuple(
-        _report(state, f, search.left([f]), search.calibration, evidence) for f in found
-    )
+    return tuple(_report(state, f, search.left([f]), search.calibration, evidence) for f in found)
 
 
 def _until(evidence: Evidence, now: float) -> Evidence:
@@ -121,7 +120,9 @@ def _report(
     drift = None
     if shape.kind == "ramp":
         family = int(fit.families[fit.main()])
-        line = drift_line(state.evidence, state.noise, fit, found.candidate.column, residual, family)
+        line = drift_line(
+            state.evidence, state.noise, fit, found.candidate.column, residual, family
+        )
         drift = Drift(family, *line)
     last = float(found.candidate.column.time[fit.cells].max())
     return Effect(
@@ -140,9 +141,13 @@ def _report(
         series=tuple(
             SeriesSize(int(s), round(float(n)), float(v), float(e), bool(m))
             for s, n, v, e, m in zip(
-                fit.series, fit.series_points, fit.series_value, fit.series_se,
-                moved_series(state, found, fit), strict=True,
-            )  # fmt: skip
+                fit.series,
+                fit.series_points,
+                fit.series_value,
+                fit.series_se,
+                moved_series(state, found, fit),
+                strict=True,
+            )
         ),
         drift=drift,
         lots=np.unique(evidence.lot[fit.cells]),

@@ -55,7 +55,7 @@ def calibrate(
     n = len(evidence.series)
     draws = int(np.clip(options.null_cells // max(n, 1), 4, 60))
     rng = np.random.default_rng(options.seed)
-    root = np.linalg.cholesky(noise.correlation)
+    root: FloatArray = np.asarray(np.linalg.cholesky(noise.correlation), dtype=np.float64)
     sampler = _Sampler.of(evidence, noise, columns, offsets)
     pooled = []
     for _ in range(draws):

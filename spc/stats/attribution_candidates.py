@@ -19,6 +19,7 @@ from spc.stats.attribution_evidence import (
     Evidence,
     FloatArray,
     IntArray,
+    sums,
 )
 from spc.stats.attribution_noise import Noise, ar1_inflation
 
@@ -125,9 +126,7 @@ def conjunction_within(evidence: Evidence, parent: Column, level: int, other: Co
     )
 
 
-def usual_offsets(
-    evidence: Evidence, noise: Noise, columns: tuple[Column, ...]
-) -> Offsets:
+def usual_offsets(evidence: Evidence, noise: Noise, columns: tuple[Column, ...]) -> Offsets:
     """Estimate from the baseline cells how far each level usually lies from its series' centre.
 
     Columns are taken in turn, each on what the earlier ones left. Returns zero offsets without
@@ -162,18 +161,18 @@ def _random_effect(
     series, code = evidence.series[use], column.codes[use]
     key, pair = np.unique(series * n_levels + code, return_inverse=True)
     owner = key // n_levels
-    points = np.bincount(pair, share[use])
+    points = sums(pair, share[use])
     inflation = ar1_inflation(points, noise.phi[owner])
-    weight = np.maximum(np.bincount(pair, info[use]), 1e-300) / inflation
-    mean = np.bincount(pair, y[use]) / np.maximum(np.bincount(pair, info[use]), 1e-300)
+    weight = np.maximum(sums(pair, info[use]), 1e-300) / inflation
+    mean = sums(pair, y[use]) / np.maximum(sums(pair, info[use]), 1e-300)
     m = len(evidence.family)
-    all_weight = np.bincount(owner, weight, m)
-    center = np.bincount(owner, weight * mean, m) / np.maximum(all_weight, 1e-300)
+    all_weight = sums(owner, weight, m)
+    center = sums(owner, weight * mean, m) / np.maximum(all_weight, 1e-300)
     # What a level tells beyond its series' own centre: nothing if it is the series' only level.
     inner = weight * (1.0 - weight / all_weight[owner])
     cell = (key % n_levels) * n_families + evidence.family[owner]
-    a = np.bincount(cell, inner, n_levels * n_families).reshape(n_levels, n_families)
-    top = np.bincount(cell, inner * (mean - center[owner]), n_levels * n_families)
+    a = sums(cell, inner, n_levels * n_families).reshape(n_levels, n_families)
+    top = sums(cell, inner * (mean - center[owner]), n_levels * n_families)
     mean_level = top.reshape(n_levels, n_families) / np.maximum(a, 1e-300)
     typical = 1e-3 / noise.sigma**2
     known = a > typical

@@ -11,6 +11,7 @@ All times are seconds on one clock (any origin). All variances are squared units
 from __future__ import annotations
 
 from dataclasses import dataclass, field
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -23,6 +24,11 @@ DAY = 86400.0
 SPREAD = frozenset({"within-wafer", "wafer-to-wafer"})
 MAP = frozenset({"tilt-x", "tilt-y", "bowl", "map-distance"})
 RESIDUAL = frozenset({"residual"})
+
+
+def sums(index: IntArray, weights: NDArray[Any], length: int = 0) -> FloatArray:
+    """Return the sums of `weights` by `index` (codes from 0), at least `length` of them."""
+    return np.bincount(index, weights, length).astype(np.float64, copy=False)
 
 
 def statistic_class(name: str) -> str:

@@ -19,10 +19,11 @@ from spc.stats.attribution_evidence import (
     Evidence,
     FloatArray,
     IntArray,
+    sums,
 )
 from spc.stats.attribution_noise import Noise, ar1_inflation
 from spc.stats.attribution_profile import Shape
-from spc.stats.attribution_search import inclusion, offset_model
+from spc.stats.attribution_windows import inclusion, offset_model
 
 _PASSES = 4
 
@@ -95,23 +96,23 @@ def fit_effect(
         unknown[families],
     )  # fmt: skip
     x = pattern[level_cells]
-    i_raw = np.bincount(family, info[level_cells] * x**2, n_families)
-    cross = np.bincount(family, info[level_cells] * x, n_families)
-    points = np.bincount(family[on], share[level_cells][on], n_families)
+    i_raw = sums(family, info[level_cells] * x**2, n_families)
+    cross = sums(family, info[level_cells] * x, n_families)
+    points = sums(family[on], share[level_cells][on], n_families)
     wide = 2.0 if shape.lot >= 0 else 1.0
     tau2 = (wide * options.prior_sigmas * noise.sigma[families]) ** 2
     terms = model.terms(i_raw, cross, points, tau2)
     net = np.maximum(terms.info, 1e-300)
-    full = np.bincount(family, info[level_cells], n_families)
+    full = sums(family, info[level_cells], n_families)
     amplitude = np.zeros(n_families)
     held = np.zeros(len(residual))
     for _ in range(_PASSES):
         held[level_cells] = amplitude[family] * x
         y = noise.whiten(held + noise.clip(residual - held))[level_cells]
-        total = np.bincount(family, y, n_families) * model.full / np.maximum(full, 1e-300)
-        score = np.bincount(family, y * x, n_families) * terms.scale - terms.pull * total
+        total = sums(family, y, n_families) * model.full / np.maximum(full, 1e-300)
+        score = sums(family, y * x, n_families) * terms.scale - terms.pull * total
         amplitude = np.where(terms.info > 0, score / net, 0.0)
-    gain = terms.log_bayes(np.bincount(family, y * x, n_families), total)
+    gain = terms.log_bayes(sums(family, y * x, n_families), total)
     log_pi = inclusion(evidence, families, np.array([0]))
     odds = np.clip(log_pi - np.log1p(-np.exp(log_pi)) + gain, -50.0, 50.0)
     probability = 1.0 / (1.0 + np.exp(-odds))
@@ -135,11 +136,11 @@ def _series_sizes(
 ) -> tuple[IntArray, FloatArray, FloatArray, FloatArray, IntArray]:  # fmt: skip
     """Return series codes, own amplitude, its standard error, points, and each cell's position."""
     series, at = np.unique(evidence.series[cells], return_inverse=True)
-    points = np.bincount(at, share)
-    i = np.maximum(np.bincount(at, info * x**2), 1e-300)
-    value = np.bincount(at, y * x) / i
+    points = sums(at, share)
+    i = np.maximum(sums(at, info * x**2), 1e-300)
+    value = sums(at, y * x) / i
     inflation = ar1_inflation(points, noise.phi[series])
-    mean_x = np.bincount(at, info * x) / np.maximum(np.bincount(at, info * x**2), 1e-300)
+    mean_x = sums(at, info * x) / np.maximum(sums(at, info * x**2), 1e-300)
     se = np.sqrt(inflation / i + noise.center[series] * mean_x**2)
     return series, value, se, points, at
 
@@ -191,7 +192,7 @@ def drift_line(
     a = np.array([[w.sum(), (w * days).sum()], [(w * days).sum(), (w * days**2).sum()]])
     b = np.array([y.sum(), (y * days).sum()])
     series = evidence.series[cells]
-    points = np.bincount(series, share[cells])
+    points = sums(series, share[cells])
     used = np.flatnonzero(points)
     inflation = float(np.mean(ar1_inflation(points[used], noise.phi[used])))
     ridge = np.diag([1e-12 * a[0, 0], 1e-12 * max(a[1, 1], a[0, 0])])

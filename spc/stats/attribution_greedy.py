@@ -99,9 +99,7 @@ class Search:
             strength = self.state.strength(found.candidate, left, found.fresh)
             self.found[i] = replace(found, strength=strength)
         self.found = [
-            f
-            for f in self.found
-            if not f.fresh or self.calibration.p_value(f.strength) <= alpha
+            f for f in self.found if not f.fresh or self.calibration.p_value(f.strength) <= alpha
         ]
 
     def _at(

@@ -18,7 +18,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from spc.stats.attribution_evidence import Evidence, FloatArray, IntArray, statistic_class
+from spc.stats.attribution_evidence import Evidence, FloatArray, IntArray, statistic_class, sums
 
 _CLIP = 3.0
 # E[min(z^2, c^2)] of a standard normal z: 1 - 2 c phi(c) - 2 (1 - c^2) (1 - Phi(c)), c = 3.
@@ -62,26 +62,26 @@ class Noise:
 
         The score of any cell pattern x is then the plain sum x'y.
         """
-        by_point = np.bincount(self.point, self.weight * residual, len(self.point_factor))
+        by_point = sums(self.point, self.weight * residual, len(self.point_factor))
         out = self.weight * (residual - (self.point_factor * by_point)[self.point])
-        by_group = np.bincount(self.group, self.q * residual, len(self.group_factor))
+        by_group = sums(self.group, self.q * residual, len(self.group_factor))
         return out - self.q * (self.group_factor * by_group)[self.group]
 
     def information(self, codes: IntArray) -> tuple[FloatArray, FloatArray]:
         """Return what each cell adds to the information of its own level, 1/unit^2, and to points.
 
-        `codes` (n,) level codes, -1 for cells left out (they get 0). The sum over the cells of a level is x'V^-1 x for its pattern x;
-        a point whose cells lie in several levels loses what its lot part costs. The second array
-        (n,) sums to the number of plotted points that a level touches.
+        `codes` (n,) level codes, -1 for cells left out (they get 0). The sum over the cells of a
+        level is x'V^-1 x for its pattern x; a point whose cells lie in several levels loses what
+        its lot part costs. The second array (n,) sums to the plotted points that a level touches.
         """
         cells = np.flatnonzero(codes >= 0)
         width = int(codes.max(initial=0)) + 1
         level, point, group = codes[cells], self.point[cells], self.group[cells]
         _, pair = np.unique(point * width + level, return_inverse=True)
-        wx = np.bincount(pair, self.weight[cells])[pair]
+        wx = sums(pair, self.weight[cells])[pair]
         part = 1.0 / np.bincount(pair)[pair]
         _, pair = np.unique(group * width + level, return_inverse=True)
-        qx = np.bincount(pair, self.q[cells])[pair]
+        qx = sums(pair, self.q[cells])[pair]
         info, share = np.zeros(len(codes)), np.zeros(len(codes))
         info[cells] = self.weight[cells] * (1.0 - self.point_factor[point] * wx)
         info[cells] -= self.q[cells] * self.group_factor[group] * qx
@@ -141,21 +141,19 @@ def estimate_noise(evidence: Evidence, residual: FloatArray) -> Noise:
     kappa = _shared_lot_part(evidence, points, scale)
     lot_shared, lot_own = lot * kappa[family], lot * (1.0 - kappa[family])
     weight = 1.0 / own
-    w_point = np.bincount(points.code, weight)
-    v_point = np.bincount(points.code, lot_own) / np.bincount(points.code)
+    w_point = sums(points.code, weight)
+    v_point = sums(points.code, lot_own) / np.bincount(points.code)
     point_factor = v_point / (1.0 + v_point * w_point)
     q = weight / (1.0 + (v_point * w_point)[points.code])
     _, group = np.unique(evidence.lot * n_families + family, return_inverse=True)
-    a_group = np.bincount(group, q)
-    u_group = np.bincount(group, lot_shared) / np.bincount(group)
+    a_group = sums(group, q)
+    u_group = sums(group, lot_shared) / np.bincount(group)
     sigma = _typical_sigma(points, np.sqrt(points.variance * scale[points.series]), n_families)
     z = residual / np.sqrt(own + lot)
     cells_of = np.bincount(points.code)
     by_point = np.argsort(points.code, kind="stable")
     many = by_point[cells_of[points.code[by_point]] > 1]
-    _, many_first, many_size = np.unique(
-        points.code[many], return_index=True, return_counts=True
-    )
+    _, many_first, many_size = np.unique(points.code[many], return_index=True, return_counts=True)
     return Noise(
         weight=weight,
         point=points.code,
@@ -196,15 +194,15 @@ class _Points:
     def of(cls, evidence: Evidence, residual: FloatArray) -> _Points:
         _, first, code = np.unique(evidence.point, return_index=True, return_inverse=True)
         weight = 1.0 / evidence.var_own
-        total = np.bincount(code, weight)
-        lot = np.bincount(code, evidence.var_lot) / np.bincount(code)
+        total = sums(code, weight)
+        lot = sums(code, evidence.var_lot) / np.bincount(code)
         series = evidence.series[first]
         return cls(
             code=code.astype(np.int64),
             series=series,
             family=evidence.family[series],
             lot=evidence.lot[first],
-            value=np.bincount(code, weight * residual) / total,
+            value=sums(code, weight * residual) / total,
             variance=lot + 1.0 / total,
             lot_variance=lot,
             baseline=(~evidence.monitoring[first]).astype(float),
@@ -215,13 +213,13 @@ class _Points:
 def _shrunk_phi(evidence: Evidence, points: _Points) -> FloatArray:
     """Shrink each series' lag-1 autocorrelation to its family (variance of r1 is about 1/n)."""
     m = len(evidence.family)
-    count = np.bincount(points.series, points.baseline, m)
+    count = sums(points.series, points.baseline, m)
     count = np.where(count > 3, count, np.maximum(np.bincount(points.series, minlength=m) / 2, 3.0))
-    total = np.bincount(evidence.family, count)
-    mean = np.bincount(evidence.family, count * evidence.phi) / np.maximum(total, 1.0)
+    total = sums(evidence.family, count)
+    mean = sums(evidence.family, count * evidence.phi) / np.maximum(total, 1.0)
     away = (evidence.phi - mean[evidence.family]) ** 2 - 1.0 / count
     members = np.bincount(evidence.family)
-    between = np.maximum(np.bincount(evidence.family, away) / np.maximum(members, 1), 0.0)
+    between = np.maximum(sums(evidence.family, away) / np.maximum(members, 1), 0.0)
     trust = between[evidence.family] / (between[evidence.family] + 1.0 / count)
     # A family of few series is shrunk to 0 as far as its own mean is uncertain.
     mean = mean * np.maximum(total - 30.0, 0.0) / np.maximum(total, 1.0)
@@ -245,9 +243,9 @@ def _series_scale(evidence: Evidence, points: _Points, phi: FloatArray) -> Float
     square = np.minimum(step**2 / spread, _CLIP**2) / _CLIPPED_SQUARE
     owner = series[1:][same]
     df = np.bincount(owner, minlength=m) * (2.0 / 3.0)
-    total = np.bincount(owner, square, m) * (2.0 / 3.0)
-    df_family = np.bincount(evidence.family, df, n_families)
-    family = (np.bincount(evidence.family, total, n_families) + 20.0) / (df_family + 20.0)
+    total = sums(owner, square, m) * (2.0 / 3.0)
+    df_family = sums(evidence.family, df, n_families)
+    family = (sums(evidence.family, total, n_families) + 20.0) / (df_family + 20.0)
     ratio = (total + 40.0 * family[evidence.family]) / (df + 40.0)
     return np.clip(ratio, 0.7, 6.0)
 
@@ -268,21 +266,23 @@ def _shared_lot_part(evidence: Evidence, points: _Points, scale: FloatArray) -> 
     z = np.clip(z, -_CLIP, _CLIP)
     share = points.lot_variance[use] / points.variance[use]
     size = np.bincount(code)
-    product = (np.bincount(code, z) ** 2 - np.bincount(code, z**2)) / 2.0
+    product = (sums(code, z) ** 2 - sums(code, z**2)) / 2.0
     pairs = size * (size - 1) / 2.0
     family = points.family[use][first]
-    mean_share = np.bincount(code, share) / size
-    top = np.bincount(family, product, n_families)
-    bottom = np.bincount(family, pairs * mean_share, n_families)
-    n_pairs = np.bincount(family, pairs, n_families)
+    mean_share = sums(code, share) / size
+    top = sums(family, product, n_families)
+    bottom = sums(family, pairs * mean_share, n_families)
+    n_pairs = sums(family, pairs, n_families)
     kappa = np.clip(top / np.maximum(bottom, 1e-9), 0.0, 1.0)
     kappa = np.where(bottom > 1e-6, kappa, 0.0)
     return (n_pairs * kappa + 20.0 * 0.5) / (n_pairs + 20.0)
 
 
 def _typical_sigma(points: _Points, sigma: FloatArray, n_families: int) -> FloatArray:
-    total = np.bincount(points.family, sigma, n_families)
-    return np.maximum(total / np.maximum(np.bincount(points.family, minlength=n_families), 1), 1e-30)
+    total = sums(points.family, sigma, n_families)
+    return np.maximum(
+        total / np.maximum(np.bincount(points.family, minlength=n_families), 1), 1e-30
+    )
 
 
 def _caps(evidence: Evidence, z: FloatArray) -> FloatArray:
@@ -298,7 +298,7 @@ def _caps(evidence: Evidence, z: FloatArray) -> FloatArray:
     family = evidence.cell_family
     base = ~evidence.monitoring
     n = np.bincount(family[base], minlength=n_families)
-    wild = np.bincount(family[base], np.abs(z[base]) > 4.0, n_families)
+    wild = sums(family[base], np.abs(z[base]) > 4.0, n_families)
     rate = np.clip((wild + 0.5) / (n + 1.0), 1e-4, 0.05)
     cap = norm.isf(rate / 2.0)
     soft = np.array([statistic_class(name) != "mean" for name in evidence.family_statistic()])
@@ -319,7 +319,7 @@ def _family_correlation(evidence: Evidence, z: FloatArray) -> FloatArray:
     key = lot * n_families + family[use]
     size = n_lots * n_families
     count = np.bincount(key, minlength=size).reshape(n_lots, n_families)
-    total = np.bincount(key, np.clip(z[use], -_CLIP, _CLIP), size).reshape(n_lots, n_families)
+    total = sums(key, np.clip(z[use], -_CLIP, _CLIP), size).reshape(n_lots, n_families)
     seen = (count > 0).astype(float)
     mean = total / np.maximum(count, 1)
     mean = mean - mean.sum(0) / np.maximum(seen.sum(0), 1.0) * seen

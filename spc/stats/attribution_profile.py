@@ -20,9 +20,10 @@ from spc.stats.attribution_evidence import (
     Evidence,
     FloatArray,
     IntArray,
+    sums,
 )
 from spc.stats.attribution_noise import Noise
-from spc.stats.attribution_search import OffsetModel, inclusion, new_cells, offset_model
+from spc.stats.attribution_windows import OffsetModel, inclusion, new_cells, offset_model
 
 _MAX_BINS = 64
 _NEAR = 12
@@ -65,7 +66,8 @@ def profile_level(
 ) -> Profile | None:
     """Look closely at one level; `y` whitened residuals, `unknown` (F,) offset variance.
 
-    Only windows with a cell measured after `options.since` are looked at. Returns None when the level has no monitored cell.
+    Only windows with a cell measured after `options.since` are looked at. Returns None when the
+    level has no monitored cell, or none that is new.
     """
     cells = np.flatnonzero(evidence.monitoring & column.cells(level))
     if not len(cells) or not new_cells(evidence, options)[cells].any():
@@ -126,7 +128,8 @@ class _Look:
             time=(seconds - events[-1]) / DAY, model=model,
             log_pi=inclusion(evidence, families, np.array([0])),
             tau2=(options.prior_sigmas * noise.sigma[families]) ** 2,
-            lot=evidence.lot[cells], new=new_cells(evidence, options)[cells], options=options, origin=float(events[-1]),
+            lot=evidence.lot[cells], new=new_cells(evidence, options)[cells], options=options,
+            origin=float(events[-1]),
             born=not bool(np.any(column.cells(int(level)) & ~evidence.monitoring)),
         )  # fmt: skip
 
@@ -138,8 +141,8 @@ class _Look:
 
         def table(weight: FloatArray) -> FloatArray:
             out = np.zeros((n_families, k + 1))
-            sums = np.bincount(key, weight, n_families * k).reshape(n_families, k)
-            out[:, :k] = sums[:, ::-1].cumsum(1)[:, ::-1]
+            by_bin = sums(key, weight, n_families * k).reshape(n_families, k)
+            out[:, :k] = by_bin[:, ::-1].cumsum(1)[:, ::-1]
             return out
 
         s0, s1 = table(self.y), table(self.y * self.time)
@@ -150,7 +153,7 @@ class _Look:
         total = s0[:, 0] * self.model.full / np.maximum(i0[:, 0], 1e-300)
 
         # Only windows that hold something new: (start bin, end bin) pairs, flat.
-        fresh = np.bincount(at, self.new, k)[::-1].cumsum()[::-1]
+        fresh = sums(at, self.new, k)[::-1].cumsum()[::-1]
         a, b = np.nonzero(fresh[:, None] - np.append(fresh, 0.0)[None, 1:] > 0)
 
         def window(c: FloatArray) -> FloatArray:
@@ -195,11 +198,11 @@ class _Look:
         key = self.family * len(lots) + entry
 
         def table(weight: FloatArray) -> FloatArray:
-            return np.bincount(key, weight, n_families * len(lots)).reshape(n_families, -1)
+            return sums(key, weight, n_families * len(lots)).reshape(n_families, -1)
 
         info = table(self.info)
         terms = self.model.terms(info, info, table(self.share), 4.0 * self.tau2[:, None])
-        fresh = np.bincount(entry, self.new) > 0
+        fresh = sums(entry, self.new) > 0
         prior = np.where(fresh, -np.log(max(int(fresh.sum()), 1)), -np.inf)
         return self._over_families(terms.log_bayes(table(self.y), total[:, None])), prior
 
@@ -251,9 +254,7 @@ class _Look:
         shape = Shape(kind, float(bins[a]), float(bins[b + 1]))
         return Profile(score, float(raw[a, b]), shape, forms, (float(bins[a]), *onset))
 
-    def _onset(
-        self, raw: FloatArray, table: FloatArray, bins: FloatArray
-    ) -> tuple[float, float]:
+    def _onset(self, raw: FloatArray, table: FloatArray, bins: FloatArray) -> tuple[float, float]:
         """Return earliest and latest of the confidence set: flat prior over onsets, ends
         weighted as in the chosen form."""
         flat = np.where(np.isfinite(table), raw, -np.inf)

@@ -255,9 +255,7 @@ class State:
                 column = conjunction_within(self.evidence, parent.column, parent.level, other)
                 prior = parent.log_prior + np.log(_CONJUNCTION_PRIOR / max(len(singles) - 1, 1))
                 unknown = np.tile(parent.unknown, (len(column.names), 1))
-                plan = make_plan(
-                    self.evidence, self.noise, column, unknown, options, float(prior)
-                )
+                plan = make_plan(self.evidence, self.noise, column, unknown, options, float(prior))
                 if plan is None or len(plan.active) < 2:
                     continue
                 scores = scan(plan, y).score

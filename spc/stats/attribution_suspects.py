@@ -81,14 +81,14 @@ def suspects_of(
     ]
     aliases += [level for level in near if level not in aliases]
     own = level_of(found.candidate)
-    suspects = [_suspect(state, found, found.candidate, found.score, residual, calibration, aliases)]
+    suspects = [
+        _suspect(state, found, found.candidate, found.score, residual, calibration, aliases)
+    ]
     suspects[0] = replace(suspects[0], p_adjusted=calibration.p_value(found.strength))
     for candidate, profile in rivals:
         if level_of(candidate) in aliases or len(suspects) > _SUSPECTS:
             continue
-        suspects.append(
-            _suspect(state, found, candidate, profile.score, residual, calibration, [])
-        )
+        suspects.append(_suspect(state, found, candidate, profile.score, residual, calibration, []))
     ruled = [
         _ruled_out(state, found, candidate, profile, residual)
         for candidate, profile in rivals
@@ -207,12 +207,8 @@ def _separations(state: State, found: Found, own: Level, alias: Level) -> list[S
         pairs = np.unique(np.stack([one.codes[use], two.codes[use]]), axis=1)
         if all(len(np.unique(row)) == pairs.shape[1] for row in pairs):
             return []
-    out = []
-    for keep, other in ((own, alias), (alias, own)):
-        found = _separation(state, keep, other)
-        if found is not None:
-            out.append(found)
-    return out
+    both = (_separation(state, own, alias), _separation(state, alias, own))
+    return [experiment for experiment in both if experiment is not None]
 
 
 def _separation(state: State, keep: Level, other: Level) -> Separation | None:

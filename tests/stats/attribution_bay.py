@@ -217,7 +217,7 @@ class _Maker:
 
     @staticmethod
     def is_score(data: dict[str, np.ndarray]) -> np.ndarray:
-        names = np.array([[s for s in c] + [""] * (8 - len(c)) for c in CHARACTERISTICS])
+        names = np.array([list(c) + [""] * (8 - len(c)) for c in CHARACTERISTICS])
         name = names[data["characteristic"], data["statistic"]]
         return np.isin(name, list(SCORES)) | (name == "residual")
 
@@ -264,7 +264,9 @@ class _Maker:
         base = ~monitoring
         count = np.maximum(np.bincount(series[base], minlength=m), 1)
         center = np.bincount(series[base], value[base], m) / count
-        points = np.maximum(np.array([len(np.unique(point[base & (series == s)])) for s in range(m)]), 1)
+        points = np.maximum(
+            np.array([len(np.unique(point[base & (series == s)])) for s in range(m)]), 1
+        )
         claimed = rng.chisquare(bay.variance_df, m) / bay.variance_df
         lot = np.where(score, 0.0, 1.0) * claimed
         own = np.where(score, 1.0, 0.6) * claimed
