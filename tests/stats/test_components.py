@@ -77,7 +77,7 @@ def one_stream(readings: Readings, with_tool: bool = False) -> Components:
     return nested_components(summary, tool=by_wafer if with_tool else None)
 
 
-@pytest.mark.parametrize("seed", [1, 2, 3])
+@pytest.mark.parametrize("seed", [1, 2])
 @pytest.mark.parametrize("with_tool", [False, True])
 def test_dense_maximisation_finds_nothing_better(seed: int, with_tool: bool) -> None:
     rng = np.random.default_rng(seed)
@@ -312,7 +312,7 @@ def test_shift_scale_and_order(seed: int, shift: float, scale: float, flip: bool
     np.testing.assert_allclose(mixed.variances, plain.variances, atol=digits)
 
 
-@settings(max_examples=15, deadline=None)
+@settings(max_examples=8, deadline=None)
 @given(seed=st.integers(0, 10**6))
 def test_batch_equals_one_by_one(seed: int) -> None:
     rng = np.random.default_rng(seed)
