@@ -36,7 +36,8 @@ class PointGroups:
 
     def total(self, per_wafer: FloatArray) -> FloatArray:
         """Sum over the wafers of each point."""
-        return np.bincount(self.of_wafer, weights=per_wafer, minlength=self.n)
+        total = np.bincount(self.of_wafer, weights=per_wafer, minlength=self.n)
+        return np.asarray(total, np.float64)
 
 
 def group_points(wafers: pd.DataFrame, point: str) -> PointGroups:

@@ -69,8 +69,9 @@ def limits_of(
     ones = np.ones_like(bias)
     serial = SerialEffect(np.zeros_like(bias), bias, ones, ones, ones)
     center = np.array([one["center"] for one in found], float)[of_point]
+    options = LimitOptions(serial=serial)
     found_limits = mean_limits(
-        components, sizes.n_wafers, sites, stream=of_point, center=center, serial=serial
+        components, sizes.n_wafers, sites, stream=of_point, center=center, options=options
     )
     off = value - found_limits.center
     still = found_limits.sigma <= 0

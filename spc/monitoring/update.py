@@ -81,6 +81,11 @@ class Update:
 
     def run(self, one: Characteristic, work: Work) -> Updated:
         """Bring one characteristic up to date."""
+        # Names stay plain Python text: Arrow text costs more to make than it saves here.
+        with pd.option_context("future.infer_string", False):
+            return self._run(one, work)
+
+    def _run(self, one: Characteristic, work: Work) -> Updated:
         known = series.stream_ids(self._connection, one.name)
         if work.everything:
             series.clear(self._connection, known.values())

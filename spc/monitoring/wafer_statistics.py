@@ -88,10 +88,11 @@ def site_spread(wafers: Wafers, at: SignatureAt) -> WaferStatistics:
     )
     share = np.where(judged, share / np.maximum(n, 1), 0.0)
     factor = np.where(member, 1.0 - share, 1.0 + share)
-    df: FloatArray = np.maximum(n - 1.0, 0.0)
+    df = np.maximum(n - 1.0, 0.0)
     bare = wafers.table["n_sites"].to_numpy() * (n == 0)  # wafers kept as sums alone
     squares = np.where(bare > 0, wafers.table["squares"].to_numpy(), squares / factor)
-    return WaferStatistics(squares, np.where(bare > 0, np.maximum(bare - 1.0, 0.0), df))
+    freedom = np.where(bare > 0, np.maximum(bare - 1.0, 0.0), df)
+    return WaferStatistics(np.asarray(squares, np.float64), freedom)
 
 
 def _provisional(wafers: Wafers, fresh: BoolArray) -> tuple[FloatArray, FloatArray]:

@@ -7,7 +7,7 @@ from dataclasses import dataclass
 from datetime import datetime
 from typing import Any
 
-from sqlalchemy import Connection, Row, func, select, update
+from sqlalchemy import Connection, Row, Select, func, select, update
 
 from spc.records.contexts import chunks
 from spc.records.stamps import to_us
@@ -53,7 +53,7 @@ def of_characteristic(
         .where(streams.c.characteristic == characteristic, baselines.c.status.in_(list(statuses)))
         .order_by(baselines.c.stream_id, baselines.c.id)
     )
-    return list(connection.execute(query).all())
+    return [*connection.execute(query).all()]
 
 
 def one(connection: Connection, number: int) -> Row[Any] | None:
@@ -64,6 +64,7 @@ def one(connection: Connection, number: int) -> Row[Any] | None:
 def add(connection: Connection, new: NewSet) -> int:
     """Keep a new set; returns its id."""
     result = connection.execute(baselines.insert().values(**new.__dict__))
+    assert result.inserted_primary_key is not None  # an insert of one row has its key
     return int(result.inserted_primary_key[0])
 
 
@@ -85,7 +86,7 @@ def set_from(connection: Connection, number: int, from_us: int) -> None:
 
 def decided_by_hand(connection: Connection, engine: str) -> list[Row[Any]]:
     """Approved and withdrawn sets that `engine` did not make: id, stream, status, from, name."""
-    query = (
+    query: Select[Any] = (
         select(
             baselines.c.id,
             baselines.c.stream_id,

@@ -97,7 +97,7 @@ def changed_lots(connection: Connection, seen: Marker, now: Marker) -> Changed:
             parts.append(select(*columns).where(table.c.id > last_id, at <= now.as_of_us))
         if now.as_of_us > seen.as_of_us and last_id:
             parts.append(select(*columns).where(at > seen.as_of_us, at <= now.as_of_us))
-        rows = connection.execute(union(*parts)) if parts else []
+        rows = connection.execute(union(*parts)).all() if parts else []
         found.append(frozenset(tuple(row) for row in rows))
     return Changed(found[0], found[1])
 

@@ -26,7 +26,13 @@ from spc.records.tables import points, streams, wafer_results
 
 POINT_COLUMNS = tuple(c.name for c in points.columns)
 WAFER_RESULT_COLUMNS = tuple(c.name for c in wafer_results.columns)
-TAIL_COLUMNS = ("stream_id", "statistic", "lot", "layer", "wafer", "at_us") + (
+TAIL_COLUMNS = (
+    "stream_id",
+    "statistic",
+    "lot",
+    "layer",
+    "wafer",
+    "at_us",
     "baseline_id",
     "phase",
     "z",
