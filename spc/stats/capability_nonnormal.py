@@ -25,7 +25,7 @@ from scipy import special, stats
 
 from spc.stats.capability import Capability, StudyOptions, verdicts
 from spc.stats.capability_indices import Array, SpecLimits
-from spc.stats.distributions import FAMILIES, Family, covariance, maximum_likelihood
+from spc.stats.distributions import FAMILIES, Family, Law, covariance, maximum_likelihood
 
 DEFAULT_FAMILIES: tuple[str, ...] = tuple(FAMILIES)
 _TAIL = float(special.ndtr(-3.0))  # 0.00134990: the exact 3-sigma tail, not the rounded 0.00135
@@ -35,7 +35,7 @@ _TAIL = float(special.ndtr(-3.0))  # 0.00134990: the exact 3-sigma tail, not the
 class DistributionFit:
     """A fitted law.
 
-    name : family. theta : its parameters (see `spc.stats.distributions`). law : frozen scipy law.
+    name : family. theta : its parameters (see `spc.stats.distributions`). law : its ppf, cdf, sf.
     log_likelihood, aic : of the sample as independent readings, and counted as effective ones.
     anderson_darling, p_value : of the test of fit; ``fits`` is p_value >= the level asked for.
     tried : family -> aic of all that were tried (NaN where it failed or cannot apply).
@@ -44,7 +44,7 @@ class DistributionFit:
 
     name: str
     theta: Array
-    law: Any
+    law: Law
     log_likelihood: float
     aic: float
     anderson_darling: float

@@ -13,7 +13,7 @@ from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
-from numpy.typing import NDArray
+from numpy.typing import ArrayLike, NDArray
 from scipy import optimize, special, stats
 
 Array = NDArray[np.float64]
@@ -22,19 +22,53 @@ _HALF_LOG_2PI = 0.9189385332046727
 
 
 @dataclass(frozen=True)
+class Law:
+    """A distribution with its parameters: scipy's functions without the cost of freezing it."""
+
+    distribution: Any
+    shape: tuple[float, ...]
+    scale: float
+    location: float = 0.0
+
+    def _call(self, function: str, at: ArrayLike) -> Array:
+        method = getattr(self.distribution, function)
+        return np.asarray(method(at, *self.shape, loc=self.location, scale=self.scale))
+
+    def pdf(self, x: ArrayLike) -> Array:
+        return self._call("pdf", x)
+
+    def logpdf(self, x: ArrayLike) -> Array:
+        return self._call("logpdf", x)
+
+    def cdf(self, x: ArrayLike) -> Array:
+        return self._call("cdf", x)
+
+    def sf(self, x: ArrayLike) -> Array:
+        return self._call("sf", x)
+
+    def ppf(self, p: ArrayLike) -> Array:
+        return self._call("ppf", p)
+
+    def isf(self, p: ArrayLike) -> Array:
+        return self._call("isf", p)
+
+
+@dataclass(frozen=True)
 class Family:
-    """log_density(x, theta) -> (n,); law(theta) -> frozen scipy distribution; start(x) -> theta.
+    """log_density(x, theta) -> (n,); law(theta) -> Law; start(x) -> theta.
 
     positive : lives on positive values only. closed : ``start`` is the maximum already.
+    slope(x, theta) : (k,) mean gradient of the log density, for the families that are searched.
     """
 
     name: str
     n_parameters: int
     log_density: Callable[[Array, Array], Array]
-    law: Callable[[Array], Any]
+    law: Callable[[Array], Law]
     start: Callable[[Array], Array]
     positive: bool = False
     closed: bool = False
+    slope: Callable[[Array, Array], Array] | None = None
 
 
 def _normal(z: Array) -> Array:
@@ -86,6 +120,31 @@ def _johnson_log(x: Array, t: Array) -> Array:
     return np.asarray(
         _normal(t[0] + np.exp(t[1]) * np.arcsinh(z)) + t[1] - t[3] - 0.5 * np.log1p(z**2)
     )
+
+
+def _folded_slope(x: Array, t: Array) -> Array:
+    s2 = np.exp(2 * t[1])
+    pull = x * np.tanh(x * t[0] / s2)
+    to_scale = -1 + (x**2 + t[0] ** 2 - 2 * t[0] * pull) / s2
+    return np.array([((pull - t[0]) / s2).mean(), to_scale.mean()])
+
+
+def _skew_slope(x: Array, t: Array) -> Array:
+    scale = np.exp(t[1])
+    z = (x - t[0]) / scale
+    mills = np.exp(_normal(t[2] * z) - special.log_ndtr(t[2] * z))
+    to_place = (z - t[2] * mills) / scale
+    to_scale = z**2 - t[2] * z * mills - 1
+    return np.array([to_place.mean(), to_scale.mean(), (z * mills).mean()])
+
+
+def _johnson_slope(x: Array, t: Array) -> Array:
+    b, scale = np.exp(t[1]), np.exp(t[3])
+    z = (x - t[2]) / scale
+    y = np.arcsinh(z)
+    w = t[0] + b * y
+    fall = w * b / np.sqrt(1 + z**2) + z / (1 + z**2)
+    return np.array([-w.mean(), (1 - w * b * y).mean(), fall.mean() / scale, (z * fall).mean() - 1])
 
 
 def _two(x: Array) -> Array:
@@ -152,13 +211,19 @@ FAMILIES: dict[str, Family] = {
     f.name: f
     for f in (
         Family(
-            "normal", 2, _normal_log, lambda t: stats.norm(t[0], np.exp(t[1])), _two, False, True
+            "normal",
+            2,
+            _normal_log,
+            lambda t: Law(stats.norm, (), np.exp(t[1]), t[0]),
+            _two,
+            False,
+            True,
         ),
         Family(
             "lognormal",
             2,
             _lognormal_log,
-            lambda t: stats.lognorm(np.exp(t[1]), scale=np.exp(t[0])),
+            lambda t: Law(stats.lognorm, (np.exp(t[1]),), np.exp(t[0])),
             lambda x: _two(np.log(x)),
             True,
             True,
@@ -167,7 +232,7 @@ FAMILIES: dict[str, Family] = {
             "gamma",
             2,
             _gamma_log,
-            lambda t: stats.gamma(np.exp(t[0]), scale=np.exp(t[1])),
+            lambda t: Law(stats.gamma, (np.exp(t[0]),), np.exp(t[1])),
             _gamma_start,
             True,
             True,
@@ -176,7 +241,7 @@ FAMILIES: dict[str, Family] = {
             "weibull",
             2,
             _weibull_log,
-            lambda t: stats.weibull_min(np.exp(t[0]), scale=np.exp(t[1])),
+            lambda t: Law(stats.weibull_min, (np.exp(t[0]),), np.exp(t[1])),
             _weibull_start,
             True,
             True,
@@ -185,7 +250,7 @@ FAMILIES: dict[str, Family] = {
             "half-normal",
             1,
             _half_normal_log,
-            lambda t: stats.halfnorm(scale=np.exp(t[0])),
+            lambda t: Law(stats.halfnorm, (), np.exp(t[0])),
             lambda x: np.array([0.5 * np.log(np.mean(x**2))]),
             True,
             True,
@@ -194,7 +259,7 @@ FAMILIES: dict[str, Family] = {
             "rayleigh",
             1,
             _rayleigh_log,
-            lambda t: stats.rayleigh(scale=np.exp(t[0])),
+            lambda t: Law(stats.rayleigh, (), np.exp(t[0])),
             lambda x: np.array([0.5 * np.log(np.mean(x**2) / 2)]),
             True,
             True,
@@ -203,23 +268,26 @@ FAMILIES: dict[str, Family] = {
             "folded-normal",
             2,
             _folded_log,
-            lambda t: stats.foldnorm(abs(t[0]) / np.exp(t[1]), scale=np.exp(t[1])),
+            lambda t: Law(stats.foldnorm, (abs(t[0]) / np.exp(t[1]),), np.exp(t[1])),
             _folded_start,
             True,
+            slope=_folded_slope,
         ),
         Family(
             "skew-normal",
             3,
             _skew_log,
-            lambda t: stats.skewnorm(t[2], loc=t[0], scale=np.exp(t[1])),
+            lambda t: Law(stats.skewnorm, (t[2],), np.exp(t[1]), t[0]),
             _skew_start,
+            slope=_skew_slope,
         ),
         Family(
             "johnson-su",
             4,
             _johnson_log,
-            lambda t: stats.johnsonsu(t[0], np.exp(t[1]), loc=t[2], scale=np.exp(t[3])),
+            lambda t: Law(stats.johnsonsu, (t[0], np.exp(t[1])), np.exp(t[3]), t[2]),
             _johnson_start,
+            slope=_johnson_slope,
         ),
     )
 }
@@ -237,13 +305,18 @@ def maximum_likelihood(family: Family, x: Array) -> tuple[Array, float]:
     unit = x.std()
     z = (x - shift) / unit
 
-    def cost(theta: Array) -> float:
+    def cost(theta: Array) -> tuple[float, Array]:
         with np.errstate(all="ignore"):
             value = -float(family.log_density(z, theta).mean())
-        # A wall far out keeps the search off limits where a parameter runs away.
-        return (value if np.isfinite(value) else 1e6) + 1e-9 * float(np.sum(theta**2))
+            slope = np.zeros_like(theta) if family.slope is None else -family.slope(z, theta)
+        if not (np.isfinite(value) and np.isfinite(slope).all()):
+            return 1e6, np.zeros_like(theta)
+        # A faint pull to 0 keeps the search from following a parameter that runs away.
+        return value + 1e-9 * float(theta @ theta), slope + 2e-9 * theta
 
-    found = optimize.minimize(cost, family.start(z), method="BFGS", options={"gtol": 1e-8})
+    found = optimize.minimize(
+        cost, family.start(z), method="BFGS", jac=True, options={"gtol": 1e-7, "maxiter": 100}
+    )
     theta = np.asarray(found.x, float)
     if not np.isfinite(theta).all() or np.abs(theta).max() > 50:
         return np.full(family.n_parameters, np.nan), float("nan")

@@ -44,6 +44,19 @@ def test_log_density_is_that_of_scipys_law(name: str) -> None:
     )
 
 
+@pytest.mark.parametrize("name", ["folded-normal", "skew-normal", "johnson-su"])
+def test_slopes_are_those_of_the_log_density(name: str) -> None:
+    family = FAMILIES[name]
+    x = LAWS[name].rvs(30, random_state=4)
+    theta = family.start(x)
+    assert family.slope is not None
+    for k, got in enumerate(family.slope(x, theta)):
+        step = np.zeros(theta.size)
+        step[k] = 1e-5
+        rise = family.log_density(x, theta + step) - family.log_density(x, theta - step)
+        assert got == pytest.approx(rise.mean() / 2e-5, rel=1e-5, abs=1e-7)
+
+
 @pytest.mark.parametrize("name", list(LAWS))
 def test_maximum_likelihood_beats_the_truth_and_scipys_search(name: str) -> None:
     law = LAWS[name]
@@ -122,15 +135,15 @@ def test_interval_of_the_percentile_index_covers() -> None:
     rng = np.random.default_rng(9)
     spec = SpecLimits(8.0, 60.0)
     true = percentile_indices(stats.lognorm(0.3, scale=20), spec)
-    hits, ppm_hits, runs = 0, 0, 300
+    hits, ppm_hits, runs = 0, 0, 200
     for _ in range(runs):
         x = rng.lognormal(np.log(20), 0.3, 100)
         fit = fit_distribution(x, ("lognormal",))
         interval = percentile_intervals(fit, x, spec)
         hits += interval.ppk[0] < true.ppk < interval.ppk[1]
         ppm_hits += interval.ppm[0] < true.ppm_expected < interval.ppm[1]
-    assert 0.91 < hits / runs < 0.98
-    assert 0.91 < ppm_hits / runs < 0.98
+    assert 0.90 < hits / runs < 0.985
+    assert 0.90 < ppm_hits / runs < 0.985
 
 
 def test_covariance_of_a_normal_law_is_the_known_one() -> None:
