@@ -219,7 +219,7 @@ def chart_label(series: ChartSeries) -> str:
         "chart.label",
         name=series_name(series.characteristic, series.statistic),
         points=plural("n.points", len(series.points), count=count(len(series.points))),
-        hits=plural("n.hits", hits, count=count(hits)),
+        hits=plural("n.hits", hits, count=count(hits)) if hits else text("n.hits.none"),
         first=quantity(series.points[0].value, series.unit) if series.points else "",
         last=quantity(series.points[-1].value, series.unit) if series.points else "",
     )

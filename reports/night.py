@@ -7,7 +7,16 @@ from typing import Any
 
 from reports.model import ChartPoint, ChartSeries, ExcursionCard, FeedNotice, NightPage
 from reports.numbers import LocalClock, count, decimals_for, number, unit_name
-from reports.pages import Figure, link, map_figure, overlay_figure, page, time_figure
+from reports.pages import (
+    Figure,
+    TimeLook,
+    link,
+    map_figure,
+    newest,
+    overlay_figure,
+    page,
+    time_figure,
+)
 from reports.sentences import (
     clock_of,
     forecast_sentence,
@@ -20,6 +29,7 @@ from reports.tables import Cell, Column, Row, Table, name_cell, number_cell, tim
 from reports.texts import plural, shown, text
 
 _POINTS_SHOWN = 8
+_POINTS_A_PAGE = 2400  # a point weighs about a kilobyte in the page, drawn twice and listed
 
 
 def ranked(cards: tuple[ExcursionCard, ...]) -> tuple[ExcursionCard, ...]:
@@ -100,15 +110,17 @@ def _card(
     found = card.excursion
     name = f"e{found.id}"
     pictures = []
+    chart = None
     if card.chart and card.chart.points:
-        pictures.append(time_figure(f"{name}-chart", card.chart, view.edition))
+        share = max(_POINTS_A_PAGE // len(view.cards), 40)
+        look = TimeLook(most_points=min(share, 200))
+        chart = newest(card.chart, look.most_points)
+        pictures.append(time_figure(f"{name}-chart", card.chart, view.edition, look)[0])
     if card.wafer_map and card.wafer_map.sites:
         pictures.append(map_figure(f"{name}-map", card.wafer_map))
     if card.overlay and card.overlay.panels:
         pictures.append(overlay_figure(f"{name}-overlay", card.overlay))
-    shown_points, all_points = (
-        _tables(card.chart, name, clock) if card.chart and card.chart.points else (None, None)
-    )
+    shown_points, all_points = _tables(chart, name, clock) if chart else (None, None)
     return CardView(
         anchor=name,
         number=found.id,
@@ -178,9 +190,9 @@ def points_table(
 
 def recent_points(series: ChartSeries, name: str, clock: LocalClock, most: int) -> Table:
     """The points that matter, newest first: those since it began and those that broke a rule."""
-    newest = tuple(reversed(series.points))
+    points = tuple(reversed(series.points))
     onset = series.onset
-    own = [p for p in newest if p.rules or (onset and p.at >= onset.earliest)] or list(newest)
+    own = [p for p in points if p.rules or (onset and p.at >= onset.earliest)] or list(points)
     few = tuple(own[:most])
     caption = plural("night.points", len(few), count=len(few), all=len(own))
     return points_table(series, few, f"{name}-points", caption, clock)
@@ -188,11 +200,11 @@ def recent_points(series: ChartSeries, name: str, clock: LocalClock, most: int) 
 
 def _tables(series: ChartSeries, name: str, clock: LocalClock) -> tuple[Table, Table]:
     """The points that matter, and all of them."""
-    newest = tuple(reversed(series.points))
-    everything = plural("night.all_points", len(newest), count=count(len(newest)))
+    points = tuple(reversed(series.points))
+    everything = plural("night.all_points", len(points), count=count(len(points)))
     return (
         recent_points(series, name, clock, _POINTS_SHOWN),
-        points_table(series, newest, f"{name}-all", everything, clock),
+        points_table(series, points, f"{name}-all", everything, clock),
     )
 
 

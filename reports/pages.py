@@ -9,7 +9,7 @@ from __future__ import annotations
 import base64
 import hashlib
 from collections.abc import Callable, Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import cache
 from pathlib import Path
 from typing import Any
@@ -23,6 +23,7 @@ from reports.model import BayEvent, ChartSeries, Edition, OverlayVectors, WaferM
 from reports.numbers import LocalClock
 from reports.style import HEAD_FONT, TEXT_FONT, css_variables
 from reports.texts import LANGUAGE, plural, shown, text
+from reports.time_axis import TimeAxis
 
 TEMPLATES = Path(__file__).with_name("templates")
 Spec = dict[str, Any]
@@ -63,6 +64,7 @@ class Figure:
     narrow: Markup
     events: tuple[tuple[str, str], ...] = ()
     key: str = ""
+    note: str = ""
 
 
 def drawn(name: str, label: str, wide: Spec, narrow: Spec | None = None) -> Figure:
@@ -74,19 +76,41 @@ def drawn(name: str, label: str, wide: Spec, narrow: Spec | None = None) -> Figu
     return Figure(name, label, broad, small)
 
 
+@dataclass(frozen=True)
+class TimeLook:
+    """How a chart over time stands in a page: its two sizes, its axis, and how many points."""
+
+    wide: figures.Size = figures.WIDE
+    narrow: figures.Size = figures.NARROW
+    axis: TimeAxis | None = None
+    most_points: int = 200
+
+
 def time_figure(
-    name: str,
-    series: ChartSeries,
-    edition: Edition,
-    sizes: tuple[figures.Size, figures.Size] = (figures.WIDE, figures.NARROW),
-    axis: Any = None,
-) -> Figure:
-    """The control chart of a series with the words of its events."""
-    label = figures.chart_label(series)
-    wide, narrow = (figures.control_chart(series, edition, size, axis) for size in sizes)
+    name: str, series: ChartSeries, edition: Edition, look: TimeLook = TimeLook()
+) -> tuple[Figure, Spec]:
+    """The control chart of a series with the words of its events, and the spec it is made of.
+
+    Of a long series the newest points are drawn, and the key says so.
+    """
+    recent = newest(series, look.most_points)
+    label = figures.chart_label(recent)
+    wide = figures.control_chart(recent, edition, look.wide, look.axis)
+    narrow = figures.control_chart(recent, edition, look.narrow, look.axis)
     made = drawn(name, label, wide, narrow)
-    events = series_events(series, LocalClock(edition.zone, edition.as_of))
-    return Figure(made.name, label, made.wide, made.narrow, events, text("chart.key"))
+    events = series_events(recent, LocalClock(edition.zone, edition.as_of))
+    note = ""
+    if len(recent.points) < len(series.points):
+        note = text("chart.newest", count=len(recent.points), all=len(series.points))
+    figure = Figure(name, label, made.wide, made.narrow, events, text("chart.key"), note)
+    return figure, wide
+
+
+def newest(series: ChartSeries, most: int) -> ChartSeries:
+    """The series with its newest points only."""
+    if len(series.points) <= most:
+        return series
+    return replace(series, points=series.points[-most:])
 
 
 def series_events(series: ChartSeries, clock: LocalClock) -> tuple[tuple[str, str], ...]:

@@ -4,7 +4,15 @@ from __future__ import annotations
 
 import re
 
-from reports.model import Context, Excursion, ExcursionStream, Level, NightPage, Suspect
+from reports.model import (
+    Context,
+    Excursion,
+    ExcursionStream,
+    Level,
+    LevelEffect,
+    NightPage,
+    Suspect,
+)
 from reports.numbers import (
     LocalClock,
     count,
@@ -62,7 +70,7 @@ def factor_words(factor: str) -> str:
     return shown(re.sub(r"[._]+", " ", factor).replace("+", " + "))
 
 
-def level_words(level: Level | Suspect) -> str:
+def level_words(level: Level | Suspect | LevelEffect) -> str:
     """`resist batch R-12`, or `tool TRK2, module CUP1` for joined factors."""
     factors, levels = level.factor.split("+"), level.level.split("+")
     if len(factors) != len(levels):

@@ -9,9 +9,12 @@
       return s.getClientRects().length > 0;
     });
     if (!drawn.length) return [];
-    return Array.prototype.slice.call(drawn[0].querySelectorAll("[data-say]")).sort(function (a, b) {
+    return Array.prototype.slice.call(drawn[0].querySelectorAll("[data-say],.mark-symbol path[aria-label]")).sort(function (a, b) {
       return a.getBoundingClientRect().left - b.getBoundingClientRect().left;
     });
+  }
+  function words_of(mark) {
+    return mark.getAttribute("data-say") || mark.getAttribute("aria-label");
   }
   function show(fig, mark) {
     hide(fig);
@@ -20,7 +23,7 @@
     var tip = document.createElement("div");
     tip.className = "tip";
     tip.setAttribute("aria-hidden", "true");
-    tip.textContent = mark.getAttribute("data-say");
+    tip.textContent = words_of(mark);
     fig.appendChild(tip);
     var box = fig.getBoundingClientRect(), at = mark.getBoundingClientRect();
     var left = at.left - box.left + at.width / 2 - tip.offsetWidth / 2;
@@ -57,7 +60,7 @@
       if (!all.length) return;
       event.preventDefault();
       show(fig, all[at]);
-      if (say) say.textContent = all[at].getAttribute("data-say");
+      if (say) say.textContent = words_of(all[at]);
     });
   });
 
