@@ -81,28 +81,23 @@ class Update:
 
     def run(self, one: Characteristic, work: Work) -> Updated:
         """Bring one characteristic up to date."""
-        # Names stay plain Python text: Arrow text costs more to make than it saves here.
-        with pd.option_context("future.infer_string", False):
-            return self._run(one, work)
-
-    def _run(self, one: Characteristic, work: Work) -> Updated:
         known = series.stream_ids(self._connection, one.name)
         if work.everything:
             series.clear(self._connection, known.values())
         lots = None if work.everything else sorted(work.lots)
-        wafers, ids = self._read(one, lots)
+        wafers, ids = self.read(one, lots)
         known = series.stream_ids(self._connection, one.name)
         old = self._old_results(known, work)
         changes = self._changes(one, wafers, ids, old, work)
         if changes.anew and not work.everything:
-            wafers, ids = self._read(one, self._lots_of(changes, sorted(work.lots)))
+            wafers, ids = self.read(one, self._lots_of(changes, sorted(work.lots)))
         result = Updated(notes=list(wafers.notes))
         self._make(one, _needed(wafers, ids, changes), ids, changes, result)
         return result
 
     # ---- reading ---------------------------------------------------------------------------
 
-    def _read(self, one: Characteristic, lots: list[str] | None) -> tuple[Wafers, IntArray]:
+    def read(self, one: Characteristic, lots: list[str] | None) -> tuple[Wafers, IntArray]:
         """Wafers of lots (None: all), and the id of each of their streams."""
         layer = one.where.get("layer")
         frame = measurement_rows(

@@ -119,3 +119,11 @@ def spans(connection: Connection, stream_ids: Iterable[int], status: str) -> dic
         rows = connection.execute(query.group_by(baselines.c.stream_id))
         found |= {int(stream): int(us) for stream, us in rows}
     return found
+
+
+def stream_of(connection: Connection, stream_id: int) -> tuple[str, str]:
+    """Characteristic and context (JSON) of a stream."""
+    row = connection.execute(
+        select(streams.c.characteristic, streams.c.context).where(streams.c.id == stream_id)
+    ).one()
+    return row.characteristic, row.context

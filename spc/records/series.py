@@ -203,3 +203,20 @@ def points_from(
             some = {"b_stream": stream, "b_statistic": statistic, "b_first": first}
             rows += connection.execute(query, some | {"b_lowest": lowest}).all()
     return pd.DataFrame([tuple(row) for row in rows], columns=list(TAIL_COLUMNS))
+
+
+def lots_between(
+    connection: Connection, ids: Iterable[int], first_us: int | None, last_us: int | None
+) -> list[str]:
+    """Lots of streams with a wafer in a span of time (us, both ends in; None: open)."""
+    t = wafer_results.c
+    found: set[str] = set()
+    for part in chunks(sorted(set(ids))):
+        query = select(t.lot).distinct().where(t.stream_id.in_(part))
+        if first_us is not None:
+            query = query.where(t.at_us >= first_us)
+        if last_us is not None:
+            # The point of a lot stands at its last wafer; a lot that began before is in the span.
+            query = query.where(t.at_us <= last_us)
+        found |= set(connection.scalars(query))
+    return sorted(found)
