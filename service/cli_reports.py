@@ -2,10 +2,9 @@
 
 from __future__ import annotations
 
-import csv
 import sys
 from pathlib import Path
-from typing import TYPE_CHECKING, Annotated, Any
+from typing import TYPE_CHECKING, Annotated
 
 import typer
 
@@ -46,7 +45,7 @@ def points(
     as_json: JsonOption = False,
 ) -> None:
     """List the plotted points with their limits and rule hits, as of the last pass."""
-    from spc.monitoring.series import points_json
+    from spc.monitoring.series import points_csv, points_json
     from spc.records.sessions import reading
 
     if as_csv and as_json:
@@ -60,26 +59,9 @@ def points(
     if statistic is not None:
         rows = [row for row in rows if row["statistic"] == statistic]
     if as_csv:
-        _write_csv(rows)
+        sys.stdout.write(points_csv(rows))
     else:
         print_json(rows)
-
-
-def _write_csv(rows: list[dict[str, Any]]) -> None:
-    contexts = sorted({key for row in rows for key in row["context"]})
-    plain = [key for key in (rows[0] if rows else {}) if key not in ("context", "rules")]
-    writer = csv.writer(sys.stdout, lineterminator="\n")
-    writer.writerow([*plain, *contexts, "rules"])
-    for row in rows:
-        cells = [row[key] for key in plain] + [row["context"].get(key) for key in contexts]
-        writer.writerow([_safe(cell) for cell in cells] + [" ".join(row["rules"])])
-
-
-def _safe(cell: object) -> object:
-    """Text that a spreadsheet would run as a formula gets an apostrophe in front."""
-    if isinstance(cell, str) and cell[:1] in ("=", "+", "-", "@", "\t", "\r"):
-        return "'" + cell
-    return "" if cell is None else cell
 
 
 def investigate(

@@ -122,7 +122,14 @@ def split(
         tier=known.tier,
         pattern=known.pattern,
         as_of=hand.at,
-        payload={**known.payload, "streams": stays},
+        payload={
+            **known.payload,
+            "streams": stays,
+            "split_out": [
+                *known.payload.get("split_out", []),
+                *(findings.stream_key(s) for s in gone),
+            ],
+        },
     )
     _record(connection, number, hand, "split", text, {"into": new})
     _record(connection, new, hand, "split", text, {"from": number})

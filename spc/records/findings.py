@@ -14,6 +14,8 @@ from spc.records import actions as action_records
 from spc.records.stamps import from_us, iso, to_us
 from spc.records.tables import excursion_history, excursions
 
+# What only the triage of the next night needs.
+PRIVATE = frozenset({"engine", "split_out"})
 STATUSES = ("open", "contained", "closed")
 
 
@@ -37,12 +39,21 @@ class Excursion:
 
 
 def listed(
-    connection: Connection, *, statuses: Iterable[str] | None = None, merged: bool = False
+    connection: Connection,
+    *,
+    statuses: Iterable[str] | None = None,
+    merged: bool = False,
+    until: datetime | None = None,
 ) -> list[Excursion]:
-    """Excursions, newest first; those merged into another one only on request."""
+    """Excursions, newest first; those merged into another one only on request.
+
+    `until` leaves out what was opened by a pass of a later clock.
+    """
     query = select(excursions).order_by(excursions.c.opened_us.desc(), excursions.c.id.desc())
     if statuses is not None:
         query = query.where(excursions.c.status.in_(tuple(statuses)))
+    if until is not None:
+        query = query.where(excursions.c.opened_us <= to_us(until))
     if not merged:
         query = query.where(excursions.c.merged_into.is_(None))
     return [_excursion(row) for row in connection.execute(query)]
@@ -160,7 +171,8 @@ def as_contract(excursion: Excursion, zone: tzinfo) -> dict[str, Any]:
         "updated_at": iso(excursion.updated_us, zone),
         "pattern": excursion.pattern,
     }
-    return {**head, **_stamped(excursion.payload, zone)}
+    public = {k: v for k, v in excursion.payload.items() if k not in PRIVATE}
+    return {**head, **_stamped(public, zone)}
 
 
 def actions_on(connection: Connection, number: int, zone: tzinfo) -> list[dict[str, Any]]:
@@ -180,6 +192,12 @@ def actions_on(connection: Connection, number: int, zone: tzinfo) -> list[dict[s
 def subject(number: int) -> str:
     """Name of an excursion in the record of actions."""
     return f"excursion:{number}"
+
+
+def stream_key(stream: dict[str, Any], *, statistic: bool = True) -> str:
+    """Text that names a stream of a payload, with or without its statistic."""
+    parts = [stream["characteristic"], json.dumps(stream["context"], sort_keys=True)]
+    return "|".join([*parts, stream["statistic"]] if statistic else parts)
 
 
 def _stamped(value: Any, zone: tzinfo) -> Any:

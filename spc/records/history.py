@@ -1,0 +1,121 @@
+"""What triage looks back on: points, wafers and process stamps of a span of time."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from typing import Any
+
+import pandas as pd
+from sqlalchemy import Connection, or_, select
+
+from spc.records.contexts import chunks
+from spc.records.tables import bay_events, points, process_log, streams, wafer_results
+
+_POINT_NAMES = (
+    "stream_id",
+    "statistic",
+    "lot",
+    "layer",
+    "wafer",
+    "at_us",
+    "measured_us",
+    "processed_us",
+    "value",
+    "n_wafers",
+    "n_sites",
+    "effective_sites",
+    "df",
+    "baseline_id",
+    "phase",
+    "center",
+    "lower_limit",
+    "upper_limit",
+    "sigma",
+    "z",
+    "rules",
+)
+_WAFER_NAMES = (
+    "stream_id",
+    "lot",
+    "layer",
+    "wafer",
+    "at_us",
+    "measured_us",
+    "processed_us",
+    "context_id",
+    "step_context_id",
+    "n_sites",
+    "mean",
+    "sum_squares",
+    "df",
+    "statistics",
+    "out_of_spec_sites",
+)
+
+
+def all_streams(connection: Connection) -> pd.DataFrame:
+    """Every stream: stream_id, characteristic, context (JSON)."""
+    names = ("stream_id", "characteristic", "context")
+    query = select(streams.c.id, streams.c.characteristic, streams.c.context)
+    rows = [tuple(row) for row in connection.execute(query.order_by(streams.c.id))]
+    return pd.DataFrame(rows, columns=list(names))
+
+
+def points_since(connection: Connection, since_us: int) -> pd.DataFrame:
+    """Points with limits from a stamp on, and all baseline points (there are few a stream).
+
+    Sorted by stream, statistic, at_us, lot, layer, wafer.
+    """
+    query = select(*(points.c[name] for name in _POINT_NAMES)).where(
+        points.c.baseline_id.is_not(None),
+        or_(points.c.at_us >= since_us, points.c.phase == "baseline"),
+    )
+    rows = [tuple(row) for row in connection.execute(query)]
+    frame = pd.DataFrame(rows, columns=list(_POINT_NAMES))
+    keys = ["stream_id", "statistic", "at_us", "lot", "layer", "wafer"]
+    return frame.sort_values(keys, ignore_index=True)
+
+
+def wafers_of(connection: Connection, stream_ids: Sequence[int], since_us: int) -> pd.DataFrame:
+    """Wafer results of streams from a stamp on."""
+    rows: list[Any] = []
+    for part in chunks(sorted(set(map(int, stream_ids)))):
+        query = select(*(wafer_results.c[name] for name in _WAFER_NAMES)).where(
+            wafer_results.c.stream_id.in_(part), wafer_results.c.at_us >= since_us
+        )
+        rows += [tuple(row) for row in connection.execute(query)]
+    return pd.DataFrame(rows, columns=list(_WAFER_NAMES))
+
+
+def step_stamps(
+    connection: Connection, wafers: pd.DataFrame, first_us: int, as_of_us: int
+) -> pd.DataFrame:
+    """When each step of the log worked on wafers (lot, wafer, layer).
+
+    Returns lot, wafer, layer, context_id, processed_us of every log row of these wafers.
+    """
+    log = process_log.c
+    names = ("lot", "wafer", "layer", "context_id", "processed_us")
+    numbers = sorted(wafers["wafer"].unique())
+    rows: list[Any] = []
+    for part in chunks(sorted(wafers["lot"].unique())):
+        query = select(*(log[name] for name in names)).where(
+            log.lot.in_(part), log.processed_us >= first_us, log.processed_us <= as_of_us
+        )
+        if len(numbers) <= 50:
+            query = query.where(log.wafer.in_(numbers))
+        rows += [tuple(row) for row in connection.execute(query)]
+    return pd.DataFrame(rows, columns=list(names))
+
+
+def events_between(
+    connection: Connection, first_us: int, last_us: int
+) -> list[tuple[int, str, str | None, str | None, str | None]]:
+    """Bay events of a span: at_us, kind, tool, module, text; oldest first."""
+    event = bay_events.c
+    query = (
+        select(event.at_us, event.kind, event.tool, event.module, event.text)
+        .where(event.at_us >= first_us, event.at_us <= last_us)
+        .order_by(event.at_us, event.id)
+    )
+    return [(r[0], r[1], r[2], r[3], r[4]) for r in connection.execute(query)]
