@@ -231,7 +231,7 @@ def test_in_control_score_is_standard_normal(n_sites: int, n_lots: int) -> None:
     rng = np.random.default_rng(n_sites)
     x, y = spiral(n_sites)
     scores, own = [], []
-    for _ in range(60):
+    for _ in range(30):
         maps, codes = lots(rng, n_lots, x, y)
         reference = map_reference(maps, x, y, RADIUS, groups=codes)
         own.append(map_distance(reference, maps, groups=codes, baseline=True).z)
@@ -250,7 +250,7 @@ def test_lot_of_another_size_keeps_the_promise() -> None:
     rng = np.random.default_rng(8)
     x, y = spiral(13)
     z = []
-    for _ in range(60):
+    for _ in range(30):
         maps, codes = lots(rng, 25, x, y, 3)
         reference = map_reference(maps, x, y, RADIUS, groups=codes)
         maps, codes = lots(rng, 60, x, y, 1)
@@ -286,7 +286,7 @@ def test_missing_sites_and_missing_wafers() -> None:
     rng = np.random.default_rng(4)
     x, y = spiral(13)
     z = []
-    for _ in range(40):
+    for _ in range(25):
         maps, codes = lots(rng, 30, x, y, 1)
         maps[rng.random(maps.shape) < 0.05] = np.nan
         reference = map_reference(maps, x, y, RADIUS, groups=codes)
@@ -304,7 +304,7 @@ def test_sites_without_coordinates() -> None:
     rng = np.random.default_rng(9)
     signature = np.array([0.0, 2, -1, 4, 1, 1, -3])
     z = []
-    for _ in range(60):
+    for _ in range(30):
         reference = site_reference(signature + rng.normal(size=(25, 7)) + rng.normal(size=(25, 1)))
         z.append(site_distance(reference, signature + 5 + rng.normal(size=(40, 7))).z)
     assert abs(np.concatenate(z).mean()) < 0.1
