@@ -16,7 +16,7 @@ import numpy as np
 from spc.stats.attribution_candidates import Column, Offsets
 from spc.stats.attribution_evidence import AttributionOptions, Evidence, FloatArray
 from spc.stats.attribution_noise import Noise
-from spc.stats.attribution_search import Plan, scan
+from spc.stats.attribution_search import Plan, scan, series_scores
 
 _ANCHOR = 20
 _LAGS = 12
@@ -60,7 +60,8 @@ def calibrate(
     pooled = []
     for _ in range(draws):
         y = noise.whiten(noise.clip(sampler.draw(rng, root)))
-        pooled += [scan(plan, y).score for plan in plans]
+        whole = series_scores(evidence, y)
+        pooled += [scan(plan, y, whole).score for plan in plans]
     scores = np.sort(np.concatenate(pooled))[::-1] if pooled else np.empty(0)
     return Calibration(scores[np.isfinite(scores)], draws)
 

@@ -23,7 +23,8 @@ from spc.stats.attribution_evidence import (
 )
 from spc.stats.attribution_noise import Noise, ar1_inflation
 from spc.stats.attribution_profile import Shape
-from spc.stats.attribution_windows import inclusion, offset_model
+from spc.stats.attribution_search import series_scores
+from spc.stats.attribution_windows import Cross, inclusion, offset_model
 
 _PASSES = 4
 
@@ -101,16 +102,17 @@ def fit_effect(
     points = sums(family[on], share[level_cells][on], n_families)
     wide = 2.0 if shape.lot >= 0 else 1.0
     tau2 = (wide * options.prior_sigmas * noise.sigma[families]) ** 2
-    terms = model.terms(i_raw, cross, points, tau2)
+    center = sums(family, model.tells * x, n_families)
+    terms = model.terms(Cross(i_raw, cross, center, points), tau2)
     net = np.maximum(terms.info, 1e-300)
-    full = sums(family, info[level_cells], n_families)
     amplitude = np.zeros(n_families)
     held = np.zeros(len(residual))
     for _ in range(_PASSES):
         held[level_cells] = amplitude[family] * x
-        y = noise.whiten(held + noise.clip(residual - held))[level_cells]
-        total = sums(family, y, n_families) * model.full / np.maximum(full, 1e-300)
-        score = sums(family, y * x, n_families) * terms.scale - terms.pull * total
+        whole = noise.whiten(held + noise.clip(residual - held))
+        y = whole[level_cells]
+        total = model.total(sums(family, y, n_families), series_scores(evidence, whole))
+        score = terms.net_score(sums(family, y * x, n_families), total)
         amplitude = np.where(terms.info > 0, score / net, 0.0)
     gain = terms.log_bayes(sums(family, y * x, n_families), total)
     log_pi = inclusion(evidence, families, np.array([0]))

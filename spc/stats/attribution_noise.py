@@ -15,6 +15,7 @@ from a few dozen baseline points (variance, autocorrelation) is shrunk towards i
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 
@@ -34,7 +35,9 @@ class Noise:
     believes, in unit. Point arrays: `point_factor`. Group arrays: `group_factor`. Family arrays:
     `sigma` (typical sigma of a plotted point, unit), `kappa` (part of the lot variance that is
     shared by the streams of a lot), `correlation` (F, F) of lots between families.
-    Series arrays: `phi`, `center` (variance of the baseline centre). `many` are the cells of
+    Series arrays: `phi`, `center` (variance of the baseline centre), `series_q` and
+    `series_points` (precision and points of the monitored cells); `shared_series` and `shared_q`
+    list the series of each group and their precision in it, from `shared_start`. `many` are the cells of
     points with several cells, sorted by point; `many_first`, `many_size` index those points.
     """
 
@@ -53,6 +56,11 @@ class Noise:
     correlation: FloatArray
     phi: FloatArray
     center: FloatArray
+    series_q: FloatArray
+    series_points: FloatArray
+    shared_start: IntArray
+    shared_series: IntArray
+    shared_q: FloatArray
     many: IntArray
     many_first: IntArray
     many_size: IntArray
@@ -87,6 +95,26 @@ class Noise:
         info[cells] -= self.q[cells] * self.group_factor[group] * qx
         share[cells] = part
         return info, share
+
+    def center_information(
+        self, cells: IntArray, pair: IntArray, owner: IntArray, member: IntArray
+    ) -> FloatArray:
+        """Return what each of some cells tells of the centre of its pair's series, 1/unit^2.
+
+        `pair` (k,) pair of each cell; `owner`, `member` list the series of each pair, sorted. The
+        sum over a window is x'V^-1 1, the ones standing on all cells of the pair's series: series
+        of the pair that share the lot make it tell less.
+        """
+        m = len(self.phi)
+        first = self.shared_start[self.group[cells]]
+        count = self.shared_start[self.group[cells] + 1] - first
+        row = np.repeat(np.arange(len(cells)), count)
+        entry = np.arange(len(row)) - np.repeat(np.cumsum(count) - count, count) + first[row]
+        wanted = pair[row] * m + self.shared_series[entry]
+        known = owner * m + member
+        at = np.minimum(np.searchsorted(known, wanted), len(known) - 1)
+        together = sums(row, self.shared_q[entry] * (known[at] == wanted), len(cells))
+        return self.q[cells] * (1.0 - self.group_factor[self.group[cells]] * together)
 
     def clip(self, residual: FloatArray) -> FloatArray:
         """Return the residual with wild values brought in, (n,).
@@ -173,7 +201,26 @@ def estimate_noise(evidence: Evidence, residual: FloatArray) -> Noise:
         many=many,
         many_first=many_first,
         many_size=many_size,
+        **_series_tables(evidence, points.code, group, q),
     )
+
+
+def _series_tables(
+    evidence: Evidence, point: IntArray, group: IntArray, q: FloatArray
+) -> dict[str, Any]:
+    """Return what the noise keeps of series: totals of the monitored cells, and which series
+    share a lot (the entries of each group)."""
+    m = len(evidence.family)
+    on = evidence.monitoring.astype(float)
+    share = on / np.bincount(point)[point]
+    keys, entry = np.unique(group * m + evidence.series, return_inverse=True)
+    return {
+        "series_q": sums(evidence.series, q * on, m),
+        "series_points": sums(evidence.series, share, m),
+        "shared_start": np.searchsorted(keys // m, np.arange(int(group.max(initial=-1)) + 2)),
+        "shared_series": keys % m,
+        "shared_q": sums(entry, q),
+    }
 
 
 @dataclass(frozen=True)

@@ -23,7 +23,15 @@ from spc.stats.attribution_evidence import (
     sums,
 )
 from spc.stats.attribution_noise import Noise
-from spc.stats.attribution_windows import OffsetModel, inclusion, new_cells, offset_model
+from spc.stats.attribution_search import series_scores
+from spc.stats.attribution_windows import (
+    Cross,
+    Normal,
+    OffsetModel,
+    inclusion,
+    new_cells,
+    offset_model,
+)
 
 _MAX_BINS = 64
 _NEAR = 12
@@ -103,8 +111,10 @@ class _Look:
     y: FloatArray
     info: FloatArray
     share: FloatArray
+    whole: FloatArray
     time: FloatArray
     model: OffsetModel
+    series_score: FloatArray
     log_pi: FloatArray
     tau2: FloatArray
     lot: IntArray
@@ -125,7 +135,9 @@ class _Look:
         level = column.codes[cells[0]]
         return cls(
             events=events, event=event, family=family, y=y[cells], info=info, share=share,
+            whole=model.tells,
             time=(seconds - events[-1]) / DAY, model=model,
+            series_score=series_scores(evidence, y),
             log_pi=inclusion(evidence, families, np.array([0])),
             tau2=(options.prior_sigmas * noise.sigma[families]) ** 2,
             lot=evidence.lot[cells], new=new_cells(evidence, options)[cells], options=options,
@@ -147,10 +159,11 @@ class _Look:
 
         s0, s1 = table(self.y), table(self.y * self.time)
         i0, i1, i2 = (table(self.info * self.time**p) for p in range(3))
+        e0, e1 = (table(self.whole * self.time**p) for p in range(2))
         points = table(self.share)
         start = (self.events[bins] - self.origin) / DAY
         ends = np.append(start[1:], 1.0 / 24.0)
-        total = s0[:, 0] * self.model.full / np.maximum(i0[:, 0], 1e-300)
+        total = self.model.total(s0[:, 0], self.series_score)
 
         # Only windows that hold something new: (start bin, end bin) pairs, flat.
         fresh = sums(at, self.new, k)[::-1].cumsum()[::-1]
@@ -161,16 +174,18 @@ class _Look:
             return out
 
         t0 = start[a]
-        w_i0, w_i1, w_points = window(i0), window(i1), np.maximum(window(points), 0.0)
+        w_i0, w_i1, w_e0 = window(i0), window(i1), window(e0)
+        w_points = np.maximum(window(points), 0.0)
         w_s0 = window(s0)
         reach = np.maximum(ends[b] - t0, 1.0 / 24.0)
         step = self.model.terms(
-            np.maximum(w_i0, 0.0), w_i0, w_points, self.tau2[:, None]
-        ).log_bayes(w_s0, total[:, None])  # fmt: skip
+            Cross(np.maximum(w_i0, 0.0), w_i0, w_e0, w_points), self.tau2[:, None]
+        ).log_bayes(w_s0, total)  # fmt: skip
         info = np.maximum(window(i2) - 2.0 * t0 * w_i1 + t0**2 * w_i0, 0.0)
         ramp = self.model.terms(
-            info, w_i1 - t0 * w_i0, w_points, self.tau2[:, None] / reach**2
-        ).log_bayes(window(s1) - t0 * w_s0, total[:, None])  # fmt: skip
+            Cross(info, w_i1 - t0 * w_i0, window(e1) - t0 * w_e0, w_points),
+            self.tau2[:, None] / reach**2,
+        ).log_bayes(window(s1) - t0 * w_s0, total)  # fmt: skip
         raw_step, raw_ramp = np.full((k, k), -np.inf), np.full((k, k), -np.inf)
         raw_step[a, b] = self._over_families(step)
         raw_ramp[a, b] = self._over_families(ramp)
@@ -192,7 +207,7 @@ class _Look:
         out: FloatArray = np.logaddexp(np.log1p(-np.exp(pi)), pi + b).sum(0)
         return out
 
-    def _lots(self, total: FloatArray) -> tuple[FloatArray, FloatArray]:
+    def _lots(self, total: Normal) -> tuple[FloatArray, FloatArray]:
         lots, entry = np.unique(self.lot, return_inverse=True)
         n_families = len(self.log_pi)
         key = self.family * len(lots) + entry
@@ -201,10 +216,11 @@ class _Look:
             return sums(key, weight, n_families * len(lots)).reshape(n_families, -1)
 
         info = table(self.info)
-        terms = self.model.terms(info, info, table(self.share), 4.0 * self.tau2[:, None])
+        cross = Cross(info, info, table(self.whole), table(self.share))
+        terms = self.model.terms(cross, 4.0 * self.tau2[:, None])
         fresh = sums(entry, self.new) > 0
         prior = np.where(fresh, -np.log(max(int(fresh.sum()), 1)), -np.inf)
-        return self._over_families(terms.log_bayes(table(self.y), total[:, None])), prior
+        return self._over_families(terms.log_bayes(table(self.y), total)), prior
 
     def _priors(self, k: int) -> tuple[FloatArray, FloatArray, FloatArray]:
         """Log priors of open steps, open ramps (k,) and closed windows (k, k)."""

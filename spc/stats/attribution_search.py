@@ -30,8 +30,10 @@ from spc.stats.attribution_evidence import (
     IntArray,
     sums,
 )
-from spc.stats.attribution_noise import Noise, ar1_inflation
+from spc.stats.attribution_noise import Noise
 from spc.stats.attribution_windows import (
+    Normal,
+    OffsetModel,
     WindowBuilder,
     Windows,
     graded_bins,
@@ -63,7 +65,7 @@ class Plan:
     edges: FloatArray
     log_pi: FloatArray
     log_not: FloatArray
-    full_scale: FloatArray
+    model: OffsetModel
     windows: tuple[Windows, ...]
     lot_cells: IntArray
     lot_pair: IntArray
@@ -83,14 +85,18 @@ class Best:
     where: IntArray
 
 
-def scan(plan: Plan, y: FloatArray) -> Best:
-    """Score every window of every level of a column; `y` (n,) whitened residuals."""
+def scan(plan: Plan, y: FloatArray, series_score: FloatArray) -> Best:
+    """Score every window of every level of a column.
+
+    `y` (n,) whitened residuals, `series_score` (m,) their sums over the monitored cells of each
+    series (see `series_scores`).
+    """
     n_pairs, n_bins = len(plan.family), plan.edges.shape[1]
     own = y[plan.cells]
     key = plan.pair * n_bins + plan.bin
     c0 = suffix_sums(sums(key, own, n_pairs * n_bins).reshape(n_pairs, n_bins))
     c1 = suffix_sums(sums(key, own * plan.time, n_pairs * n_bins).reshape(n_pairs, n_bins))
-    total = c0[:, 0] * plan.full_scale
+    total = plan.model.total(c0[:, 0], series_score)
     n_levels = len(plan.active)
     score = np.full(n_levels, -np.inf)
     kind = np.zeros(n_levels, dtype=np.int64)
@@ -108,7 +114,7 @@ def scan(plan: Plan, y: FloatArray) -> Best:
             else:
                 begin, stop = windows.first, windows.first + windows.prior.shape[1]
                 s = c0[:, begin:stop] - c0[:, begin + windows.width : stop + windows.width]
-            b = windows.terms.log_bayes(s, total[:, None])
+            b = windows.terms.log_bayes(s, total)
             b = np.logaddexp(plan.log_not[:, None], plan.log_pi[:, None] + b)
             table = np.add.reduceat(b, plan.start, axis=0) + windows.prior
             at = table.argmax(1)
@@ -122,7 +128,7 @@ def scan(plan: Plan, y: FloatArray) -> Best:
 
 
 def _scan_lots(
-    plan: Plan, windows: Windows, own: FloatArray, total: FloatArray
+    plan: Plan, windows: Windows, own: FloatArray, total: Normal
 ) -> tuple[FloatArray, IntArray]:
     """Score each (level, lot) alone; returns the best per level and its entry."""
     n_levels = len(plan.active)
@@ -131,7 +137,7 @@ def _scan_lots(
     if not len(plan.lot_start):
         return best, at
     s = sums(plan.lot_pair, own[plan.lot_cells], len(plan.lot_owner))
-    b = windows.terms.log_bayes(s, total[plan.lot_owner])
+    b = windows.terms.log_bayes(s, total.rows(plan.lot_owner))
     b = np.logaddexp(plan.log_not[plan.lot_owner], plan.log_pi[plan.lot_owner] + b)
     value = np.add.reduceat(b, plan.lot_start) + windows.prior
     order = np.lexsort((-value, plan.lot_level))
@@ -139,6 +145,11 @@ def _scan_lots(
     at[levels] = order[first]
     best[levels] = value[order[first]]
     return best, at
+
+
+def series_scores(evidence: Evidence, y: FloatArray) -> FloatArray:
+    """Return the sums of the whitened residuals over each series' monitored cells, shape (m,)."""
+    return sums(evidence.series, np.where(evidence.monitoring, y, 0.0), len(evidence.family))
 
 
 def make_plan(
@@ -187,9 +198,7 @@ def make_plan(
     return Plan(
         column=column, cells=cells, pair=pair, bin=bins, time=time, active=active, start=start,
         family=keys % n_families, edges=edges, log_pi=log_pi, log_not=np.log1p(-np.exp(log_pi)),
-        full_scale=1.0 / ar1_inflation(
-            sums(pair, share[cells]) / model.series, model.phi
-        ),
+        model=model,
         windows=windows, lot_cells=lots[0], lot_pair=lots[1], lot_owner=lots[2],
         lot_start=lots[3], lot_code=lots[4], lot_level=lots[5],
     )  # fmt: skip

@@ -24,7 +24,7 @@ from spc.stats.attribution_evidence import (
 from spc.stats.attribution_fit import Fit, fit_effect, pattern_of
 from spc.stats.attribution_noise import Noise, estimate_noise
 from spc.stats.attribution_profile import Profile, profile_level
-from spc.stats.attribution_search import Plan, make_plan, scan
+from spc.stats.attribution_search import Plan, make_plan, scan, series_scores
 
 ALIAS = 0.97
 _KEEP = 8
@@ -115,9 +115,10 @@ class State:
         levels that share monitored cells with the mask.
         """
         y = self.whitened(residual)
+        whole = series_scores(self.evidence, y)
         out: list[Candidate] = []
         for plan in self.plans if fresh else self.all_plans:
-            best = scan(plan, y)
+            best = scan(plan, y, whole)
             allowed = np.isfinite(best.score)
             if touching is not None:
                 near = np.zeros(len(plan.column.names), dtype=bool)
@@ -132,6 +133,7 @@ class State:
     def strength(self, candidate: Candidate, residual: FloatArray, fresh: bool) -> float:
         """Return the coarse score of one level, the statistic that the null calibrates."""
         y = self.whitened(residual)
+        whole = series_scores(self.evidence, y)
         plans = self.plans if fresh else self.all_plans
         plan = next((p for p in plans if p.column is candidate.column), None)
         if plan is None:
@@ -144,7 +146,7 @@ class State:
             if plan is None:
                 return -np.inf
         at = np.flatnonzero(plan.active == candidate.level)
-        return float(scan(plan, y).score[at[0]]) if len(at) else -np.inf
+        return float(scan(plan, y, whole).score[at[0]]) if len(at) else -np.inf
 
     def candidate(self, column: Column, level: int, score: float = -np.inf) -> Candidate:
         """Return a level of one of the bay's columns as a candidate."""
@@ -207,7 +209,8 @@ class State:
             candidate = self.candidate(column, int(np.bincount(known).argmax()))
             shape = found.profile.shape
             pattern = pattern_of(column, candidate.level, shape, self.evidence)
-            if jaccard(found.fit.cells, np.flatnonzero(pattern)) < 0.5:
+            theirs = np.isin(self.evidence.cell_family, found.fit.families) & (pattern != 0.0)
+            if jaccard(found.fit.cells, np.flatnonzero(theirs)) < 0.5:
                 continue
             profile = self.look(candidate, y, fresh)
             if profile is None or profile.gain < found.profile.gain / 2.0:
@@ -244,6 +247,7 @@ class State:
     ) -> list[Candidate]:
         """Return conjunctions that score at least as well as their single parent level."""
         out: list[Candidate] = []
+        whole = series_scores(self.evidence, y)
         options = self.options if fresh else replace(self.options, since=None)
         singles = [c for c in self.columns if len(c.factors) == 1 and c.twin_of < 0]
         for parent in parents:
@@ -258,7 +262,7 @@ class State:
                 plan = make_plan(self.evidence, self.noise, column, unknown, options, float(prior))
                 if plan is None or len(plan.active) < 2:
                     continue
-                scores = scan(plan, y).score
+                scores = scan(plan, y, whole).score
                 i = int(scores.argmax())
                 if scores[i] > parent.score:
                     inner = float(prior - np.log(len(plan.active)))

@@ -23,46 +23,113 @@ _TINY = 1e-300
 
 
 @dataclass(frozen=True)
+class Normal:
+    """How far the normal level of each pair is off, (P,): as far as the centres of its series tell
+    (`center`) and as far as its own usual offset tells (`own`). See `OffsetModel.total`."""
+
+    center: FloatArray
+    own: FloatArray
+
+    def rows(self, pairs: IntArray) -> Normal:
+        """Return the pairs' values for given rows."""
+        return Normal(self.center[pairs], self.own[pairs])
+
+
+@dataclass(frozen=True)
 class Terms:
     """What a window needs to turn its score sum into a log Bayes factor; arrays of one shape.
 
-    `scale` 1/AR(1) inflation, `pull` share of the level's total score that the uncertain offset
-    takes away, `gain` 1/(2 (I + 1/tau^2)), `cost` log(1 + I tau^2)/2, `info` I.
+    `scale` 1/AR(1) inflation, `center` and `own` what a unit of either normal level adds to the
+    score (`own` None: no usual offsets), `gain` 1/(2 (I + 1/tau^2)), `cost` log(1 + I tau^2)/2,
+    `info` I.
     """
 
     scale: FloatArray
-    pull: FloatArray
+    center: FloatArray
+    own: FloatArray | None
     gain: FloatArray
     cost: FloatArray
     info: FloatArray
 
-    def log_bayes(self, score: FloatArray, total: FloatArray) -> FloatArray:
-        """Return log BF_f from the raw score sums and the level's (inflated) total score."""
-        return self.gain * (score * self.scale - self.pull * total) ** 2 - self.cost
+    def net_score(self, score: FloatArray, normal: Normal) -> FloatArray:
+        """Return the score with the normal level projected out."""
+        shape = (len(score),) + (1,) * (score.ndim - 1)
+        out = score * self.scale - self.center * normal.center.reshape(shape)
+        if self.own is not None:
+            out -= self.own * normal.own.reshape(shape)
+        return out
+
+    def log_bayes(self, score: FloatArray, normal: Normal) -> FloatArray:
+        """Return log BF_f from the raw score sums and `OffsetModel.total`."""
+        return self.gain * self.net_score(score, normal) ** 2 - self.cost
+
+
+@dataclass(frozen=True)
+class Cross:
+    """Raw sums of windows: `info` x'V^-1 x, `own` x'V^-1 1 over the level's own cells, `center`
+    x'V^-1 1 over all cells of the series, `points` plotted points."""
+
+    info: FloatArray
+    own: FloatArray
+    center: FloatArray
+    points: FloatArray
 
 
 @dataclass(frozen=True)
 class OffsetModel:
-    """Per (level, family) pair: `variance` of the unknown offset, `full` AR-scaled information of
-    all its monitored cells, `phi`, `series` (how many series), all of one shape (P,)."""
+    """What is not known of the normal level of each (level, family) pair, arrays (P,).
 
-    variance: FloatArray
-    full: FloatArray
+    Two random offsets are projected out of every window, one after the other: the error of the
+    baseline centres, on which all monitored cells of the pair's series tell, and the unknown part
+    of the level's own usual offset, on which only the level's cells tell. `center` and `own` are
+    c / (1 + c A) of the two (A the information on it), `cross` the information that the level's
+    cells share with the centres, `tells` (k,) what each of them tells on the centres. `phi` autocorrelation, `series` how many series, `scale` and
+    `series_scale` 1/AR(1) inflation of the level's and of its series' totals; `owner`, `member`
+    list the series of each pair.
+    """
+
+    center: FloatArray
+    own: FloatArray
+    cross: FloatArray
+    tells: FloatArray
     phi: FloatArray
     series: FloatArray
+    scale: FloatArray
+    series_scale: FloatArray
+    owner: IntArray
+    member: IntArray
 
-    def terms(
-        self, info: FloatArray, cross: FloatArray, points: FloatArray, prior: FloatArray
-    ) -> Terms:
-        """Return the terms of windows (P, ...): raw information x'V^-1 x, cross x'V^-1 1, points
-        in the window, and the prior variance of the amplitude."""
-        shape = (len(self.phi),) + (1,) * (np.ndim(info) - 1)
-        phi, series = self.phi.reshape(shape), self.series.reshape(shape)
-        scale = 1.0 / ar1_inflation(points / series, phi)
-        c = (self.variance / (1.0 + self.variance * self.full)).reshape(shape)
-        cross = cross * scale
-        net = np.maximum(info * scale - c * cross**2, 0.0)
-        return Terms(scale, c * cross, 0.5 / (net + 1.0 / prior), 0.5 * np.log1p(net * prior), net)
+    def total(self, level_score: FloatArray, series_score: FloatArray) -> Normal:
+        """Return what the normal level is off by, from the raw scores of each pair (P,) and of
+        all monitored cells of each series (m,)."""
+        whole = self.center * self.series_scale
+        whole = whole * sums(self.owner, series_score[self.member], len(self.phi))
+        own = self.own * (level_score * self.scale - self.cross * whole)
+        return Normal(whole - self.center * self.cross * own, own)
+
+    def terms(self, sums_: Cross, prior: FloatArray, pairs: IntArray | None = None) -> Terms:
+        """Return the terms of windows (P, ...) for a prior variance of the amplitude; `pairs` if
+        the rows are not all pairs in order."""
+        rows = slice(None) if pairs is None else pairs
+        shape = (len(sums_.info),) + (1,) * (np.ndim(sums_.info) - 1)
+
+        def by_row(values: FloatArray) -> FloatArray:
+            out: FloatArray = values[rows].reshape(shape)
+            return out
+
+        points = sums_.points / by_row(self.series)
+        scale = 1.0 / ar1_inflation(points, by_row(self.phi))
+        center = sums_.center * scale
+        net = sums_.info * scale - by_row(self.center) * center**2
+        own = None
+        if self.own.any():
+            own = sums_.own * scale
+            shared = own - by_row(self.center * self.cross) * center
+            net = net - by_row(self.own) * shared**2
+        net = np.maximum(net, 0.01 * sums_.info * scale)
+        return Terms(
+            scale, center, own, 0.5 / (net + 1.0 / prior), 0.5 * np.log1p(net * prior), net
+        )
 
 
 @dataclass(frozen=True)
@@ -132,10 +199,10 @@ def offset_model(
     evidence: Evidence, noise: Noise, cells: IntArray, pair: IntArray, info: FloatArray,
     share: FloatArray, unknown: FloatArray,
 ) -> OffsetModel:  # fmt: skip
-    """Return the offset model of the (level, family) pairs of some cells.
+    """Return the offset model of the (level, family) pairs of some cells (see `OffsetModel`).
 
-    The offset of a pair is the unknown part of its level's usual offset plus the error of the
-    baseline centres of its series, which share the lots' common part.
+    `unknown` (P,) variance of the unknown usual offset. The centres' errors of the series of a
+    pair share the lots' common part.
     """
     n_pairs = int(pair.max(initial=-1)) + 1
     m = len(evidence.family)
@@ -149,10 +216,23 @@ def offset_model(
     own = sums(owner, a**2 * center, n_pairs) / a_pair**2
     mean = sums(owner, a * center, n_pairs) / a_pair
     kappa = sums(owner, a * noise.kappa[evidence.family[series]], n_pairs) / a_pair
-    variance = unknown + kappa * mean + (1.0 - kappa) * own
-    points = sums(pair, share, n_pairs)
-    full = a_pair / ar1_inflation(points / n_series, phi)
-    return OffsetModel(variance, full, phi, n_series.astype(float))
+    variance = kappa * mean + (1.0 - kappa) * own
+    scale = 1.0 / ar1_inflation(sums(pair, share, n_pairs) / n_series, phi)
+    points = sums(owner, noise.series_points[series], n_pairs)
+    series_scale = 1.0 / ar1_inflation(points / n_series, phi)
+    tells = noise.center_information(cells, pair, owner, series)
+    told = sums(pair, tells, n_pairs)
+    # All cells of the series tell as much as the level's, in proportion to their precision.
+    whole = told * sums(owner, noise.series_q[series], n_pairs)
+    whole *= series_scale / np.maximum(sums(pair, noise.q[cells], n_pairs), _TINY)
+    cross = told * scale
+    f = variance / (1.0 + variance * whole)
+    left = np.maximum(a_pair * scale - f * cross**2, 0.0)
+    return OffsetModel(
+        center=f, own=unknown / (1.0 + unknown * left), cross=cross, tells=tells, phi=phi,
+        series=n_series.astype(np.float64), scale=scale, series_scale=series_scale, owner=owner,
+        member=series,
+    )  # fmt: skip
 
 
 def suffix_sums(table: FloatArray) -> FloatArray:
@@ -185,18 +265,16 @@ class WindowBuilder:
     def build(self) -> tuple[tuple[Windows, ...], tuple[IntArray, ...]]:
         n_bins = self.edges.shape[1]
         tau2 = (self.options.prior_sigmas * self.noise.sigma[self.family]) ** 2
-        i0, i1, i2, points = (
-            suffix_sums(self._table(w))
-            for w in (self.info, self.info * self.time, self.info * self.time**2, self.share)
-        )
+        whole = self.model.tells
+        weights = (self.info, self.info * self.time, self.info * self.time**2, whole)
+        i0, i1, i2, e0 = (suffix_sums(self._table(w)) for w in weights)
+        e1, points = (suffix_sums(self._table(w)) for w in (whole * self.time, self.share))
         sizes = np.diff(np.append(self.start, len(self.family)))
         t0 = np.repeat(np.where(np.isfinite(self.edges), self.edges, 0.0), sizes, axis=0)
-        reach = self._reach()
-        ramp_prior = tau2[:, None] / np.repeat(reach, sizes, axis=0) ** 2
-        step = self.model.terms(i0, i0, points, tau2[:, None])
-        ramp = self.model.terms(
-            np.maximum(i2 - 2.0 * t0 * i1 + t0**2 * i0, 0.0), i1 - t0 * i0, points, ramp_prior
-        )
+        ramp_prior = tau2[:, None] / np.repeat(self._reach(), sizes, axis=0) ** 2
+        step = self.model.terms(Cross(i0, i0, e0, points), tau2[:, None])
+        square = np.maximum(i2 - 2.0 * t0 * i1 + t0**2 * i0, 0.0)
+        ramp = self.model.terms(Cross(square, i1 - t0 * i0, e1 - t0 * e0, points), ramp_prior)
         onset = self._onset_prior()
         out = [
             Windows("step", step, self._add(onset[0], "step")),
@@ -209,20 +287,19 @@ class WindowBuilder:
             if not len(some):
                 continue
             begin, stop = int(some[0]), int(some[-1]) + 1
-            i = i0[:, begin:stop] - i0[:, begin + width : stop + width]
-            p = points[:, begin:stop] - points[:, begin + width : stop + width]
+            i, e, p = (
+                t[:, begin:stop] - t[:, begin + width : stop + width] for t in (i0, e0, points)
+            )
             prior = np.where(allowed[:, begin:stop], -np.log(count)[:, None], -np.inf)
-            terms = self.model.terms(i, i, p, tau2[:, None])
+            terms = self.model.terms(Cross(i, i, e, p), tau2[:, None])
             out.append(Windows("window", terms, self._add(prior, "window"), width, begin))
         lots = self._lots()
         some, entry, pair_of_lot, lot_level = lots[0], lots[1], lots[2], lots[5]
         info = sums(entry, self.info[some], len(pair_of_lot))
         number = sums(entry, self.share[some], len(pair_of_lot))
-        model = OffsetModel(
-            self.model.variance[pair_of_lot], self.model.full[pair_of_lot],
-            self.model.phi[pair_of_lot], self.model.series[pair_of_lot],
-        )  # fmt: skip
-        terms = model.terms(info, info, number, 4.0 * tau2[pair_of_lot])
+        e = sums(entry, whole[some], len(pair_of_lot))
+        cross = Cross(info, info, e, number)
+        terms = self.model.terms(cross, 4.0 * tau2[pair_of_lot], pair_of_lot)
         prior = -np.log(np.maximum(np.bincount(lot_level), 1))[lot_level]
         out.append(Windows("lot", terms, self._add(prior, "lot")))
         return tuple(out), lots
