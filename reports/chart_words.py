@@ -64,7 +64,7 @@ def broken_rules(alt: Any, frame: Frame, places: Sequence[float]) -> list[Any]:
         groups.setdefault(i, []).append(rule)
     charts: list[Any] = []
     used: list[float] = []
-    for i, rules in sorted(groups.items())[:3]:
+    for i, rules in sorted(groups.items())[: 3 if frame.size.height > 150 else 1]:
         point = frame.series.points[i]
         at = (places[i] - frame.axis.start) / (frame.axis.end - frame.axis.start)
         above = point.center is not None and point.value >= point.center

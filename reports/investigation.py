@@ -8,7 +8,7 @@ from typing import Any
 from markupsafe import Markup
 
 from reports import figures, investigation_tables, render
-from reports.live import live_spec
+from reports.live import MARGINS, live_spec
 from reports.model import ChartSeries, Excursion, Magnitude
 from reports.model_pages import InvestigationPage, TrimAdvice
 from reports.numbers import (
@@ -195,6 +195,7 @@ def _charts(view: InvestigationPage) -> tuple[list[ChartView], Markup | None]:
         "from": axis.start,
         "to": axis.end,
         "onset": around,
+        "margins": MARGINS["left"] + MARGINS["right"],
         "words": text("zoom.shown"),
     }
     return charts, Markup(render.live_json(steering))

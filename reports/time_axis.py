@@ -63,13 +63,14 @@ class TimeAxis:
         return text(key, weekday=weekday, day=local.day, month=month)
 
     def live_label(self) -> str:
-        """Vega expression of a label at any zoom: the clock, or at midnight weekday and day."""
+        """Vega expression of a label at any zoom: weekday and clock, at midnight the date."""
         shift = "+".join(f"(datum.value<{at:.0f}?{delta:.0f}:0)" for at, delta in self._changes())
-        v = f"(datum.value+{shift})" if shift else "+datum.value"
+        v = f"(toNumber(datum.value)+{shift})" if shift else "toNumber(datum.value)"
         days = ",".join(f"'{text(f'weekday.short.{n or 7}')}'" for n in range(7))
         months = ",".join(f"'{text(f'month.short.{n}')}'" for n in range(1, 13))
-        day = f"[{days}][utcday({v})]+' '+utcdate({v})+' '+[{months}][utcmonth({v})]"
-        return f"utchours({v})||utcminutes({v})?utcFormat({v},'%H:%M'):{day}"
+        weekday = f"[{days}][utcday({v})]+' '"
+        date = f"utcdate({v})+' '+[{months}][utcmonth({v})]"
+        return f"{weekday}+(utchours({v})||utcminutes({v})?utcFormat({v},'%H:%M'):{date})"
 
     def _changes(self) -> list[tuple[float, float]]:
         """Where the zone's offset changes inside the axis, and by how much labels before differ."""

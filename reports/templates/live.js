@@ -4,9 +4,15 @@
   var source = document.getElementById("live");
   if (!source || !window.vegaEmbed) return;
   var live = JSON.parse(source.textContent), views = null, ready = null;
-  var whole = [live.from, live.to], now = whole.slice();
+  var places = [], whole = [live.from, live.to], now = whole.slice();
   var status = document.getElementById("zoom-status");
 
+  function plot(place) {
+    return Math.max(120, place.clientWidth - live.margins);
+  }
+  window.addEventListener("resize", function () {
+    places.forEach(function (place, i) { views[i].width(plot(place)).runAsync(); });
+  });
   function start() {
     if (ready) return ready;
     views = [];
@@ -14,6 +20,7 @@
       var fig = document.getElementById(chart.id), place = document.createElement("div");
       place.className = "live";
       fig.appendChild(place);
+      chart.spec.width = plot(place);
       return window.vegaEmbed(place, chart.spec, {
         mode: "vega-lite", renderer: "svg", actions: false, ast: true, tooltip: false, defaultStyle: false
       }).then(function (result) {
@@ -21,6 +28,7 @@
           if (child !== place && !child.classList.contains("tip")) child.hidden = true;
         });
         views.push(result.view);
+        places.push(place);
         drag(fig, place, result.view);
       });
     }));

@@ -9,7 +9,12 @@
       return s.getClientRects().length > 0;
     });
     if (!drawn.length) return [];
-    return Array.prototype.slice.call(drawn[0].querySelectorAll("[data-say],.mark-symbol path[aria-label]")).sort(function (a, b) {
+    var ground = drawn[0].closest(".live") && drawn[0].querySelector(".background");
+    var box = ground ? ground.getBoundingClientRect() : null;
+    return Array.prototype.filter.call(drawn[0].querySelectorAll("[data-say],.mark-symbol path[aria-label]"), function (m) {
+      var r = m.getBoundingClientRect(), x = r.left + r.width / 2;
+      return !box || (x >= box.left && x <= box.right);
+    }).sort(function (a, b) {
       return a.getBoundingClientRect().left - b.getBoundingClientRect().left;
     });
   }

@@ -4,15 +4,28 @@ from __future__ import annotations
 
 from datetime import timedelta
 
+import numpy as np
+
 from reports.model import Forecast, Level, LevelEffect, Magnitude, Suspect
 from reports.model_pages import (
     BehindPoint,
+    Bin,
+    CapabilityRow,
+    CurvePoint,
     ExperimentArm,
     HandAction,
+    IndexEntry,
+    IndexPage,
     InvestigationPage,
+    MonthExcursion,
+    MonthIndex,
     PastCause,
+    ReviewChange,
+    ReviewDecision,
+    ReviewPage,
     RuledOut,
     SeparatingExperiment,
+    ToolGap,
     TrimAdvice,
 )
 from tests.reports.samples import (
@@ -97,3 +110,87 @@ def investigation(names: tuple[str, ...] = (), n_streams: int = 9) -> Investigat
         trim=TrimAdvice("Spin speed", "rpm", 2000.0, 1980.3, 1972.1, 1988.6, 1200.0, 4800.0),
         cd_change=Magnitude(-1.9, -3.1, -0.7, "nm"),
     )  # fmt: skip
+
+
+def capability_row(
+    name: str, context: dict[str, str], seed: int, center: float = 1200.0, sd: float = 4.2
+) -> CapabilityRow:
+    """A row of the review; the last month is the one reviewed."""
+    rng = np.random.default_rng(seed)
+    spec = 24.0 if center > 1000 else 8.0
+    pp = spec / (3 * sd)
+    ppk = pp - abs(float(rng.normal(0, 0.05)))
+    edges = np.linspace(center - 1.1 * spec, center + 1.1 * spec, 27)
+    width = float(edges[1] - edges[0])
+    middles = (edges[:-1] + edges[1:]) / 2
+    density = np.exp(-0.5 * ((middles - center) / sd) ** 2) / (sd * np.sqrt(2 * np.pi))
+    n = 4212
+    histogram = tuple(
+        Bin(float(a), float(a) + width, int(rng.poisson(n * width * d)))
+        for a, d in zip(edges[:-1], density, strict=True)
+    )
+    fine = np.linspace(edges[0], edges[-1], 121)
+    curve = tuple(
+        CurvePoint(
+            float(x),
+            float(n * width * np.exp(-0.5 * ((x - center) / sd) ** 2) / (sd * np.sqrt(2 * np.pi))),
+        )
+        for x in fine
+    )
+    history = tuple(
+        MonthIndex(
+            f"{2025 + (m + 10) // 12}-{(m + 10) % 12 + 1:02d}", ppk + 0.2, ppk, ppk + 0.4,
+            ppk + 0.08 * float(np.sin(m)), ppk - 0.2, ppk + 0.2, m != 4, 100 + m,
+        )
+        for m in range(12)
+    )  # fmt: skip
+    return CapabilityRow(
+        name, context, "2026-10", "nm", 108, 324, n, center + 0.4, sd, 0.8 * sd,
+        {"lot": 0.4 * sd**2, "wafer": 0.1 * sd**2, "site": 0.5 * sd**2},
+        pp * 1.25, ppk * 1.25, pp, ppk, ppk * 0.98,
+        {k: (v - 0.15, v + 0.15) for k, v in
+         (("cp", pp * 1.25), ("cpk", ppk * 1.25), ("pp", pp), ("ppk", ppk), ("cpm", ppk * 0.98))},
+        0.93, 0.0, "normal", seed % 3 != 0, (41,) if seed % 3 == 0 else (), center,
+        center - spec, center + spec, 0.06, histogram, curve, history,
+    )  # fmt: skip
+
+
+def review(names: tuple[str, ...] = ()) -> ReviewPage:
+    """October of the invented bay: two characteristics and their streams."""
+    first = names[0] if names else "M1 resist thickness"
+    tools = names[1:4] if names else ("TRK1", "TRK2", "TRK3")
+    rows = [capability_row(first, {}, 2)]
+    rows += [capability_row(first, {"tool": t}, 3 + i) for i, t in enumerate(tools)]
+    rows += [capability_row("M1 CD", {}, 6, 400.0, 2.4)]
+    rows += [capability_row("M1 CD", {"tool": t}, 7 + i, 400.0, 2.3) for i, t in enumerate(tools)]
+    return ReviewPage(
+        edition=EDITION, month="2026-10", rows=tuple(rows),
+        gaps=(ToolGap(first, tools[0], 1.98, tools[1], 1.61, 0.37, 0.12, 0.62),),
+        changes=(ReviewChange("M1 CD", {}, "ppk", 1.41, 1.11),),
+        decisions=(
+            ReviewDecision("below-goal", "M1 CD", {}, 1.11, 0.96, 1.26, 1.33,
+                           "Centre the dose or widen the spec."),
+            ReviewDecision("unstable", first, {"tool": tools[1]}, detail="See excursion 41."),
+            ReviewDecision("gauge", "M1 CD", {}, 0.31),
+        ),
+        excursions=(MonthExcursion(excursion(), names[4] if names else "nozzle drip",
+                                   "excursions/41.html"),
+                    MonthExcursion(excursion(42, pattern="spread"))),
+        goal=1.33, xlsx_href="2026-10.xlsx",
+    )  # fmt: skip
+
+
+def index(names: tuple[str, ...] = ()) -> IndexPage:
+    """A reports folder with some nights, excursions and a review."""
+    headline = names[0] if names else "TRK2 CUP1 M1 resist thickness −5.9 nm since Tue 22:40"
+    nights = tuple(
+        IndexEntry("night", f"nights/2026-11-{6 - i:02d}.html", at(i), headline, i % 3, i % 2)
+        for i in range(5)
+    )
+    found = (
+        IndexEntry("excursion", "excursions/41.html", at(0), headline, 1, 0, "open", 41),
+        IndexEntry("excursion", "excursions/37.html", at(4), "TRK1 M1 CD", 0, 1, "contained", 37),
+        IndexEntry("excursion", "excursions/12.html", at(120), "TRK1 M1 CD", 1, 0, "closed", 12),
+    )
+    month = IndexEntry("review", "reviews/2026-10.html", at(3), "3 decisions", month="2026-10")
+    return IndexPage(EDITION, (*nights, *found, month))
