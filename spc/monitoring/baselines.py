@@ -11,7 +11,6 @@ from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
-import pandas as pd
 from numpy.typing import NDArray
 from sqlalchemy import Connection
 
@@ -23,6 +22,7 @@ from spc.monitoring.serial import add_autocorrelation
 from spc.monitoring.wafers import Wafers, subset
 from spc.monitoring.work import ENGINE
 from spc.records import limits
+from spc.records.columns import Columns, order_of
 from spc.records.stamps import from_us
 
 IntArray = NDArray[np.int64]
@@ -43,13 +43,12 @@ def in_force(connection: Connection, stream_ids: Iterable[int]) -> list[LimitSet
     return [limit_set(row) for row in rows]
 
 
-def of_points(
-    connection: Connection, points: pd.DataFrame, known: Sequence[LimitSet]
-) -> list[LimitSet]:
+def of_points(connection: Connection, points: Columns, known: Sequence[LimitSet]) -> list[LimitSet]:
     """Sets that some points name and that are not among the known ones."""
-    if points.empty:
+    named = points["baseline_id"]
+    ids = set(named[np.isfinite(named)].astype(int).tolist()) - {one.id for one in known}
+    if not ids:
         return []
-    ids = set(points["baseline_id"].dropna().astype(int)) - {one.id for one in known}
     return [limit_set(row) for row in limits.by_ids(connection, ids)]
 
 
@@ -118,13 +117,14 @@ class Maker:
         self, wafers: Wafers, groups: PointGroups, ids: IntArray, streams: frozenset[int]
     ) -> dict[int, limits.NewSet]:
         table = groups.table
-        stream = table["stream"].to_numpy(np.int64)
+        stream = table["stream"]
         count = np.bincount(stream, minlength=len(ids))
         enough = (count >= self.characteristic.baseline_points) & np.isin(ids, list(streams))
-        order = table.assign(turn=np.arange(len(table))).sort_values(["stream", *_ORDER])
-        rank = order.groupby("stream").cumcount().to_numpy()
+        order = order_of([table[name] for name in ("stream", *_ORDER)])
+        start = np.cumsum(count) - count
+        rank = np.arange(len(table)) - start[stream[order]]
         first = np.zeros(len(table), bool)
-        first[order["turn"].to_numpy()[rank < self.characteristic.baseline_points]] = True
+        first[order[rank < self.characteristic.baseline_points]] = True
         chosen = first & enough[stream]
         if not chosen.any():
             return {}
@@ -154,10 +154,10 @@ class Maker:
         `chosen` marks the points of the baselines.
         """
         part = subset(wafers, chosen[groups.of_wafer])
-        codes, dense = np.unique(part.table["stream"].to_numpy(np.int64), return_inverse=True)
+        codes, dense = np.unique(part.table["stream"], return_inverse=True)
         part = Wafers(
             tuple(wafers.keys[c] for c in codes),
-            part.table.assign(stream=dense),
+            part.table.having(stream=dense.astype(np.int64)),
             part.wafer,
             part.place,
             part.value,
@@ -172,9 +172,9 @@ class Maker:
         )
         drafts = estimate(base)
         add_autocorrelation(base, drafts)
-        span = base.groups.table.groupby("stream")["at_us"].agg(["min", "max", "count"])
-        spans = {
-            int(codes[s]): (int(low), int(high), int(n))
-            for s, (low, high, n) in zip(span.index, span.to_numpy(), strict=True)
-        }
+        at, stream = base.groups.table["at_us"], base.stream
+        start = np.searchsorted(stream, np.arange(codes.size))
+        low, high = np.minimum.reduceat(at, start), np.maximum.reduceat(at, start)
+        count = np.bincount(stream)
+        spans = {int(c): (int(low[s]), int(high[s]), int(count[s])) for s, c in enumerate(codes)}
         return {int(codes[s]): payload_text(one) for s, one in enumerate(drafts)}, spans

@@ -26,6 +26,7 @@ from spc.monitoring.wafer_statistics import (
     site_spread,
 )
 from spc.monitoring.wafers import Wafers
+from spc.records.columns import order_of, starts_of_groups
 from spc.stats.components import Components, WaferSummary, nested_components, site_signatures
 from spc.stats.grouping import centred_sums
 from spc.stats.homogeneity import bartlett_p
@@ -72,16 +73,14 @@ class Baseline:
     @property
     def stream(self) -> IntArray:
         """Stream of each point."""
-        return self.groups.table["stream"].to_numpy(np.int64)
+        return self.groups.table["stream"]
 
     @property
     def lot(self) -> IntArray:
         """Lot code of each wafer, unique over streams and layers."""
         t = self.wafers.table
-        keys = [t[name].to_numpy(object) for name in ("stream", "lot", "layer")]
-        new = np.ones(len(t), bool)
-        new[1:] = np.any([k[1:] != k[:-1] for k in keys], axis=0)
-        return np.asarray(np.cumsum(new) - 1, np.int64)
+        keys = [t[name] for name in ("stream", "lot", "layer")]
+        return np.asarray(np.cumsum(starts_of_groups(keys)) - 1, np.int64)
 
 
 def estimate(base: Baseline) -> list[dict[str, Any]]:
@@ -104,9 +103,9 @@ def _scalar(base: Baseline, draft: Draft) -> tuple[BoolArray, WaferStatistics]:
     """Signature and components without the wild points, which are found on the way."""
     groups, table = base.groups, base.wafers.table
     keep = np.ones(groups.n, bool)
-    mean = groups.total(table["mean"].to_numpy(np.float64)) / groups.table["n_wafers"].to_numpy()
-    wafers_of = groups.table["n_wafers"].to_numpy(np.float64)
-    sites_of = groups.table["effective_sites"].to_numpy(np.float64)
+    mean = groups.total(table["mean"]) / groups.table["n_wafers"]
+    wafers_of = groups.table["n_wafers"]
+    sites_of = groups.table["effective_sites"]
     wild: list[tuple[str, FloatArray, Any]] = []
     for _ in range(WILD_PASSES):
         at, components, found = _fit(base, keep)
@@ -152,7 +151,7 @@ def _fit(base: Baseline, keep: BoolArray) -> tuple[SignatureAt, Components, Wafe
     """Signature and components of the points kept, and the spreads of all wafers under them."""
     wafers, n = base.wafers, base.n_streams
     keep_wafer = keep[base.groups.of_wafer]
-    stream = wafers.table["stream"].to_numpy(np.int64)
+    stream = wafers.table["stream"]
     keys = place_keys(wafers.places)
     number = {key: i for i, key in enumerate(dict.fromkeys(keys))}
     code_of = np.array([number[key] for key in keys], np.int64)
@@ -196,9 +195,9 @@ def _reduced(wafers: Wafers, at: SignatureAt) -> tuple[IntArray, FloatArray, Flo
     bare = sites == 0  # kept as sums alone: the signature is still in them
     table = wafers.table
     return (
-        np.where(bare, table["n_sites"].to_numpy(np.int64), sites),
-        np.where(bare, table["mean"].to_numpy(np.float64), mean),
-        np.where(bare, table["squares"].to_numpy(np.float64), squares),
+        np.where(bare, table["n_sites"], sites),
+        np.where(bare, table["mean"], mean),
+        np.where(bare, table["squares"], squares),
     )
 
 
@@ -218,7 +217,7 @@ def _kept_components(components: Components, s: int) -> dict[str, Any]:
 def _terms(base: Baseline, draft: Draft, found: WaferStatistics, keep: BoolArray) -> None:
     """Map and overlay terms: means with one value a wafer, each with its own wild points."""
     groups = base.groups
-    stream = base.wafers.table["stream"].to_numpy(np.int64)
+    stream = base.wafers.table["stream"]
     for statistic in base.characteristic.charted:
         if statistic not in found.terms:
             continue
@@ -257,9 +256,9 @@ def _spreads(base: Baseline, draft: Draft, found: WaferStatistics, keep: BoolArr
     for statistic in base.characteristic.charted:
         if kind_of(statistic) != "spread":
             continue
-        rows = values[(values["statistic"] == statistic) & (values["df"] > 0)]
-        point = rows["point"].to_numpy(np.int64)
-        sd, df = rows["value"].to_numpy(np.float64), rows["df"].to_numpy(np.float64)
+        rows = values.take((values["statistic"] == statistic) & (values["df"] > 0))
+        point = rows["point"]
+        sd, df = rows["value"], rows["df"]
         if statistic != "within-wafer" and point.size:  # those were judged with the means
             judged = robust_spread_baseline(sd, df, stream=base.stream[point])
             whole = np.full(base.groups.n, np.nan)
@@ -302,13 +301,13 @@ def _list_wild(
     """Name the wild points of one statistic; `excluded` says what they are kept out of."""
     reason = dict(zip(points.tolist(), judged.reason, strict=True))
     table = base.groups.table
-    at_us = table["at_us"].to_numpy(np.int64)
+    at_us = table["at_us"]
     for point in out.tolist():
         draft.wild[int(base.stream[point])].append(
             {
-                "lot": str(table.at[point, "lot"]),
-                "layer": str(table.at[point, "layer"]),
-                "wafer": str(table.at[point, "wafer"]),
+                "lot": str(table["lot"][point]),
+                "layer": str(table["layer"][point]),
+                "wafer": str(table["wafer"][point]),
                 "at_us": int(at_us[point]),
                 "statistic": statistic,
                 "value": rounded(float(value[point])),
@@ -324,7 +323,7 @@ def _maps(base: Baseline, draft: Draft, keep: BoolArray) -> list[Any]:
     if "map-distance" not in base.characteristic.charted:
         return out
     wafers = base.wafers
-    stream = wafers.table["stream"].to_numpy(np.int64)
+    stream = wafers.table["stream"]
     keys = place_keys(wafers.places)
     use = keep[base.groups.of_wafer]
     reading_stream = np.where(use, stream, -1)[wafers.wafer]
@@ -360,16 +359,16 @@ def _maps(base: Baseline, draft: Draft, keep: BoolArray) -> list[Any]:
 
 def _payloads(base: Baseline, draft: Draft) -> list[dict[str, Any]]:
     table = base.groups.table
-    members = table.sort_values(["stream", "at_us", "lot", "layer", "wafer"])
-    keys = members[["lot", "layer", "wafer"]].to_numpy(object)
-    stream = members["stream"].to_numpy(np.int64)
+    members = table.take(order_of([table[n] for n in ("stream", "at_us", "lot", "layer", "wafer")]))
+    keys = [list(row) for row in members.rows(("lot", "layer", "wafer"))]
+    bounds = np.searchsorted(members["stream"], np.arange(base.n_streams + 1)).tolist()
     out = []
     for s in range(base.n_streams):
         signature = sorted(draft.signature[s].items(), key=lambda item: repr(item[0]))
         out.append(
             {
                 "version": 1,
-                "members": [[str(v) for v in key] for key in keys[stream == s]],
+                "members": keys[bounds[s] : bounds[s + 1]],
                 "wild": sorted(
                     draft.wild[s], key=lambda w: (w["at_us"], w["lot"], w["wafer"], w["statistic"])
                 ),

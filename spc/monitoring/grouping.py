@@ -5,13 +5,12 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
-import pandas as pd
 from numpy.typing import NDArray
+
+from spc.records.columns import Columns, starts_of_groups, text
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
-
-POINT_KEYS = ["stream", "lot", "layer", "point_wafer"]
 
 
 @dataclass(frozen=True)
@@ -27,7 +26,7 @@ class PointGroups:
     """
 
     of_wafer: IntArray
-    table: pd.DataFrame
+    table: Columns
 
     @property
     def n(self) -> int:
@@ -40,7 +39,7 @@ class PointGroups:
         return np.asarray(total, np.float64)
 
 
-def group_points(wafers: pd.DataFrame, point: str) -> PointGroups:
+def group_points(wafers: Columns, point: str) -> PointGroups:
     """Group wafers (sorted by stream, lot, layer, wafer) into points.
 
     Parameters
@@ -48,29 +47,28 @@ def group_points(wafers: pd.DataFrame, point: str) -> PointGroups:
     wafers : with columns stream, lot, layer, wafer, at_us, measured_us, processed_us, n_sites.
     point : ``lot`` or ``wafer``.
     """
-    n = len(wafers)
-    keys = [wafers[name].to_numpy(object) for name in ("stream", "lot", "layer")]
-    if point == "wafer":
-        keys.append(wafers["wafer"].to_numpy(object))
-    new = np.ones(n, bool)
-    if n:
-        new[1:] = np.any([key[1:] != key[:-1] for key in keys], axis=0)
+    keys = ["stream", "lot", "layer", *(["wafer"] if point == "wafer" else [])]
+    new = starts_of_groups([wafers[name] for name in keys])
     of_wafer = np.asarray(np.cumsum(new) - 1, np.int64)
     first = np.flatnonzero(new)
     size = first.size
-    sites = wafers["n_sites"].to_numpy(np.float64)
+    sites = wafers["n_sites"].astype(np.float64)
     count = np.bincount(of_wafer, minlength=size)
     inverse = np.bincount(of_wafer, weights=1.0 / np.maximum(sites, 1), minlength=size)
-    processed = wafers["processed_us"].to_numpy(np.float64)
-    table = wafers.iloc[first][["stream", "lot", "layer"]].reset_index(drop=True)
-    table["wafer"] = wafers["wafer"].to_numpy(object)[first] if point == "wafer" else ""
-    table["at_us"] = _largest(wafers["at_us"].to_numpy(np.int64), first)
-    table["measured_us"] = _largest(wafers["measured_us"].to_numpy(np.int64), first)
+    processed = wafers["processed_us"]
     latest = _largest(np.where(np.isnan(processed), -1.0, processed), first)
-    table["processed_us"] = np.where(latest < 0, np.nan, latest)
-    table["n_wafers"] = count
-    table["n_sites"] = np.bincount(of_wafer, weights=sites, minlength=size).astype(np.int64)
-    table["effective_sites"] = count**2 / np.maximum(inverse, 1e-300)
+    table = Columns(
+        {
+            **{name: wafers[name][first] for name in ("stream", "lot", "layer")},
+            "wafer": wafers["wafer"][first] if point == "wafer" else text("", size),
+            "at_us": _largest(wafers["at_us"], first),
+            "measured_us": _largest(wafers["measured_us"], first),
+            "processed_us": np.where(latest < 0, np.nan, latest),
+            "n_wafers": count,
+            "n_sites": np.bincount(of_wafer, weights=sites, minlength=size).astype(np.int64),
+            "effective_sites": count**2 / np.maximum(inverse, 1e-300),
+        }
+    )
     return PointGroups(of_wafer, table)
 
 

@@ -25,6 +25,7 @@ from spc.monitoring.point_limits import PointSizes, limits_of
 from spc.monitoring.update import Update
 from spc.records import actions, evaluations, limits, series
 from spc.records.actions import Action
+from spc.records.columns import order_of
 from spc.records.stamps import iso, to_us
 
 FEWEST_POINTS = 5
@@ -71,7 +72,7 @@ def propose(
     wafers, ids = update.read(one, lots)
     groups = group_points(wafers.table, one.point)
     chosen = _chosen(one, groups, np.isin(ids, list(wanted)), window)
-    counts = np.bincount(groups.table["stream"].to_numpy(np.int64)[chosen], minlength=len(ids))
+    counts = np.bincount(groups.table["stream"][chosen], minlength=len(ids))
     for code in np.flatnonzero(np.isin(ids, list(wanted))):
         if counts[code] < FEWEST_POINTS:
             raise NotPossibleError(
@@ -118,14 +119,14 @@ def _keep(
 def _chosen(one: Characteristic, groups: PointGroups, wanted: Any, window: Window) -> Any:
     """Points of the wanted streams in the window."""
     table = groups.table
-    stream, at = (table[name].to_numpy(np.int64) for name in ("stream", "at_us"))
+    stream, at = (table[name] for name in ("stream", "at_us"))
     chosen = wanted[stream]
     if window.first is not None:
         chosen = chosen & (at >= to_us(window.first))
     if window.last is not None:
         chosen = chosen & (at <= to_us(window.last))
     if window.first is None:
-        order = np.lexsort((table["lot"].to_numpy(str), at, stream))[::-1]
+        order = order_of([stream, at, table["lot"]])[::-1]
         order = order[chosen[order]]
         rank = np.zeros(len(table), np.int64)
         start = np.r_[True, stream[order][1:] != stream[order][:-1]] if order.size else []
@@ -263,15 +264,15 @@ def _usual_limits(one: Characteristic, found: LimitSet) -> list[dict[str, Any]]:
         sizes = PointSizes(wafers * one_point, wafers * sites * one_point, df * one_point)
         if name == "map-distance":
             continue  # its limit follows the sites of each point alone
-        row = limits_of(name, np.zeros(1), sizes, [entry], np.zeros(1, np.int64)).iloc[0]
+        row = limits_of(name, np.zeros(1), sizes, [entry], np.zeros(1, np.int64))
         out.append(
             {
                 "statistic": name,
                 "unit": one.unit_of(name),
-                "center": _number(row["center"]),
-                "lower_limit": _number(row["lower_limit"]),
-                "upper_limit": _number(row["upper_limit"]),
-                "sigma": _number(row["sigma"]),
+                "center": _number(row["center"][0]),
+                "lower_limit": _number(row["lower_limit"][0]),
+                "upper_limit": _number(row["upper_limit"][0]),
+                "sigma": _number(row["sigma"][0]),
                 "n_wafers": wafers,
                 "phi": entry.get("phi"),
                 "correlated": bool(entry.get("correlated")),

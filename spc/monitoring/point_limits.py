@@ -7,7 +7,6 @@ from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
-import pandas as pd
 from numpy.typing import NDArray
 
 from spc.monitoring.limit_sets import LimitSet, kind_of
@@ -46,7 +45,7 @@ def limits_of(
     sizes: PointSizes,
     found: Sequence[Mapping[str, Any]],
     of_point: IntArray,
-) -> pd.DataFrame:
+) -> dict[str, FloatArray]:
     """Limits and z of points of one statistic.
 
     Parameters
@@ -57,7 +56,7 @@ def limits_of(
 
     Returns
     -------
-    DataFrame with columns LIMIT_COLUMNS. A distance gets its z from elsewhere (NaN here).
+    Arrays (n,) by the names of LIMIT_COLUMNS. A distance gets its z from elsewhere (NaN here).
     """
     if statistic == "map-distance":
         return _distance_limits(value, sizes)
@@ -117,7 +116,7 @@ def _spread_limits(
     sizes: PointSizes,
     found: Sequence[Mapping[str, Any]],
     of_point: IntArray,
-) -> pd.DataFrame:
+) -> dict[str, FloatArray]:
     df_sigma = np.array([one["df_sigma"] or np.inf for one in found], float)[of_point]
     sigma = np.array([one["sigma"] or 0.0 for one in found], float)[of_point]
     if statistic == "wafer-to-wafer":
@@ -137,7 +136,7 @@ def _spread_limits(
     return _frame(limits.center, limits.lower, limits.upper, limits.sigma, z)
 
 
-def _distance_limits(value: FloatArray, sizes: PointSizes) -> pd.DataFrame:
+def _distance_limits(value: FloatArray, sizes: PointSizes) -> dict[str, FloatArray]:
     df = np.maximum(sizes.df, 1.0)
     none = np.full(value.shape, np.nan)
     return _frame(
@@ -147,9 +146,9 @@ def _distance_limits(value: FloatArray, sizes: PointSizes) -> pd.DataFrame:
 
 def _frame(
     center: FloatArray, lower: FloatArray, upper: FloatArray, sigma: FloatArray, z: FloatArray
-) -> pd.DataFrame:
+) -> dict[str, FloatArray]:
     columns = (center, lower, upper, sigma, np.clip(z, -SCORE_LIMIT, SCORE_LIMIT))
-    return pd.DataFrame(dict(zip(LIMIT_COLUMNS, columns, strict=True)))
+    return dict(zip(LIMIT_COLUMNS, columns, strict=True))
 
 
 def assign_sets(stream_id: IntArray, at_us: IntArray, sets: Sequence[LimitSet]) -> IntArray:
@@ -163,9 +162,11 @@ def assign_sets(stream_id: IntArray, at_us: IntArray, sets: Sequence[LimitSet]) 
     by_stream: dict[int, list[int]] = {}
     for index in order:
         by_stream.setdefault(sets[index].stream_id, []).append(index)
-    groups: dict[int, IntArray] = dict(pd.Series(stream_id).groupby(stream_id).indices)  # type: ignore[arg-type]
+    order_of_points = np.argsort(stream_id, kind="stable")
+    streams, start = np.unique(stream_id[order_of_points], return_index=True)
+    mine_of = dict(zip(streams.tolist(), np.split(order_of_points, start[1:]), strict=True))
     for stream, candidates in by_stream.items():
-        mine = groups.get(stream)
+        mine = mine_of.get(stream)
         if mine is None:
             continue
         for index in candidates:

@@ -6,7 +6,6 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
-import pandas as pd
 from numpy.typing import NDArray
 
 from config.control_plan import Characteristic
@@ -23,6 +22,7 @@ from spc.monitoring.wafer_statistics import (
     site_spread,
 )
 from spc.monitoring.wafers import Wafers
+from spc.records.columns import Columns, codes_of, joined, text
 from spc.stats.overlay import OVERLAY_TERMS
 from spc.stats.wafer_map import map_distance
 
@@ -52,16 +52,17 @@ def assignment(groups: PointGroups, sets: Sequence[LimitSet], of_point: IntArray
     """Phase and membership of points whose sets are known."""
     n = groups.n
     member, baseline = np.zeros(n, bool), of_point < 0
-    at = groups.table["at_us"].to_numpy(np.int64)
+    at = groups.table["at_us"]
     if len(sets):
         has = of_point >= 0
         first = np.array([one.first_us for one in sets], np.int64)[of_point]
         last = np.array([one.last_us for one in sets], np.int64)[of_point]
         inside = has & (at >= first) & (at <= last)
         baseline |= inside
-        keys = groups.table[["lot", "layer", "wafer"]].to_numpy(object)
-        for i in np.flatnonzero(inside):
-            member[i] = tuple(keys[i]) in sets[of_point[i]].participants
+        where = np.flatnonzero(inside)
+        keys = groups.table.take(where).rows(("lot", "layer", "wafer"))
+        for i, key in zip(where.tolist(), keys, strict=True):
+            member[i] = key in sets[of_point[i]].participants
     return Assignment(sets, of_point, member, baseline)
 
 
@@ -91,9 +92,9 @@ def wafer_statistics(
 
 def point_values(
     wafers: Wafers, groups: PointGroups, found: WaferStatistics, characteristic: Characteristic
-) -> pd.DataFrame:
+) -> Columns:
     """Values of all points but map distances, one row a point and statistic (VALUE_COLUMNS)."""
-    mean = wafers.table["mean"].to_numpy(np.float64)
+    mean = wafers.table["mean"]
     parts = []
     for statistic in characteristic.charted:
         if statistic == "mean":
@@ -107,28 +108,27 @@ def point_values(
             parts.append(_wafer_to_wafer(groups, mean))
         elif statistic in OVERLAY_TERMS or statistic in MAP_TERMS:
             parts.append(_of_terms(groups, statistic, found.terms[statistic]))
-    if not parts:
-        return pd.DataFrame(columns=list(VALUE_COLUMNS))
-    return pd.concat(parts, ignore_index=True)
+    nothing = np.full(groups.n, np.nan)
+    return joined(parts or [_rows(groups, "", nothing, nothing)])
 
 
-def _rows(groups: PointGroups, statistic: str, value: FloatArray, df: FloatArray) -> pd.DataFrame:
+def _rows(groups: PointGroups, statistic: str, value: FloatArray, df: FloatArray) -> Columns:
     at = np.flatnonzero(np.isfinite(value))
     table = groups.table
-    return pd.DataFrame(
+    return Columns(
         {
             "point": at,
-            "statistic": statistic,
+            "statistic": text(statistic, at.size),
             "value": value[at],
-            "n_wafers": table["n_wafers"].to_numpy()[at],
-            "n_sites": table["n_sites"].to_numpy()[at],
-            "effective_sites": table["effective_sites"].to_numpy()[at],
+            "n_wafers": table["n_wafers"][at],
+            "n_sites": table["n_sites"][at],
+            "effective_sites": table["effective_sites"][at],
             "df": df[at],
         }
     )
 
 
-def _of_terms(groups: PointGroups, statistic: str, per_wafer: FloatArray) -> pd.DataFrame:
+def _of_terms(groups: PointGroups, statistic: str, per_wafer: FloatArray) -> Columns:
     """Mean over the wafers of a point that have the term; sizes are those wafers'."""
     there = np.isfinite(per_wafer)
     n = groups.total(there.astype(float))
@@ -137,12 +137,11 @@ def _of_terms(groups: PointGroups, statistic: str, per_wafer: FloatArray) -> pd.
     off = np.where(there, per_wafer - np.nan_to_num(value)[groups.of_wafer], 0.0)
     value = value + groups.total(off) / np.where(n > 0, n, np.nan)
     rows = _rows(groups, statistic, value, np.maximum(n - 1.0, 0.0))
-    rows["n_wafers"] = n[rows["point"].to_numpy()].astype(np.int64)
-    return rows
+    return rows.having(n_wafers=n[rows["point"]].astype(np.int64))
 
 
-def _wafer_to_wafer(groups: PointGroups, mean: FloatArray) -> pd.DataFrame:
-    n = groups.table["n_wafers"].to_numpy(np.float64)
+def _wafer_to_wafer(groups: PointGroups, mean: FloatArray) -> Columns:
+    n = groups.table["n_wafers"].astype(np.float64)
     center = groups.total(mean) / n
     squares = groups.total((mean - center[groups.of_wafer]) ** 2)
     value = np.sqrt(squares / np.where(n > 1, n - 1.0, np.nan))
@@ -151,7 +150,7 @@ def _wafer_to_wafer(groups: PointGroups, mean: FloatArray) -> pd.DataFrame:
 
 def map_distances(
     wafers: Wafers, groups: PointGroups, assigned: Assignment
-) -> tuple[pd.DataFrame, FloatArray]:
+) -> tuple[Columns, FloatArray]:
     """Map distances of points whose set has a map reference, and their normal scores.
 
     The second result has one score a row of the first.
@@ -177,7 +176,7 @@ def map_distances(
             found = map_distance(reference, maps, groups=local, baseline=baseline)
             value[points], df[points], z[points] = found.distance, found.df, found.z
     distances = _rows(groups, "map-distance", value, df)
-    return distances, z[distances["point"].to_numpy(np.int64)]
+    return distances, z[distances["point"]]
 
 
 def _columns(
@@ -207,33 +206,28 @@ def _map_rows(
     return maps
 
 
-def with_limits(values: pd.DataFrame, assigned: Assignment, z: FloatArray) -> pd.DataFrame:
+def with_limits(values: Columns, assigned: Assignment, z: FloatArray) -> Columns:
     """Add the limits, z, phase and set of each row of point values.
 
     `z` holds the score of rows whose law is not that of their limits (map distances), else NaN.
     """
-    point = values["point"].to_numpy(np.int64)
+    point = values["point"]
     set_of = assigned.of_point[point]
-    out = values.copy()
-    for name in LIMIT_COLUMNS:
-        out[name] = np.nan
-    statistics = values["statistic"].to_numpy(object)
-    for statistic in dict.fromkeys(statistics):
+    out = {name: np.full(len(values), np.nan) for name in LIMIT_COLUMNS}
+    kinds, names = codes_of(values["statistic"])
+    for code, statistic in enumerate(names):
         found = [one.statistic(statistic) for one in assigned.sets]
         known = np.array([one is not None for one in found] + [False], bool)
-        rows = np.flatnonzero((statistics == statistic) & known[set_of])
+        rows = np.flatnonzero((kinds == code) & known[set_of])
         if not rows.size:
             continue
         used, of_point = np.unique(set_of[rows], return_inverse=True)
         sizes = PointSizes(
-            *(
-                values[name].to_numpy(np.float64)[rows]
-                for name in ("n_wafers", "effective_sites", "df")
-            )
+            *(values[n][rows].astype(np.float64) for n in ("n_wafers", "effective_sites", "df"))
         )
         limits = limits_of(
             statistic,
-            values["value"].to_numpy(np.float64)[rows],
+            values["value"][rows],
             sizes,
             [entry for i in used if (entry := found[i]) is not None],
             of_point,
@@ -241,8 +235,7 @@ def with_limits(values: pd.DataFrame, assigned: Assignment, z: FloatArray) -> pd
         if kind_of(statistic) == "distance":
             limits["z"] = z[rows]
         for name in LIMIT_COLUMNS:
-            out.iloc[rows, out.columns.get_loc(name)] = limits[name].to_numpy()  # type: ignore[index]
+            out[name][rows] = limits[name]
     ids = np.array([one.id for one in assigned.sets] + [-1], np.int64)
-    out["baseline_id"] = ids[set_of]
-    out["phase"] = np.where(assigned.baseline[point], "baseline", "monitoring")
-    return out
+    phase = np.where(assigned.baseline[point], "baseline", "monitoring").astype(object)
+    return values.having(**out, baseline_id=ids[set_of], phase=phase)

@@ -5,6 +5,7 @@ from __future__ import annotations
 from typing import Any
 
 import numpy as np
+from numpy.typing import NDArray
 
 from spc.monitoring.estimates import Baseline
 from spc.monitoring.limit_sets import AUTOMATIC, LimitSet, kind_of, rounded
@@ -15,6 +16,7 @@ from spc.monitoring.points import (
     wafer_statistics,
     with_limits,
 )
+from spc.records.columns import Columns, codes_of, order_of
 from spc.stats.autocorrelation import ar1_baseline, lag1
 
 # Two-sided, so that each bound by itself is a 99 % one.
@@ -27,7 +29,7 @@ def add_autocorrelation(base: Baseline, payloads: list[dict[str, Any]]) -> None:
     Where phi is surely positive the spread of the baseline points about their own mean is too
     small for the sigma of a point; `variance_bias` is by how much (the limits divide by it).
     """
-    at = base.groups.table["at_us"].to_numpy(np.int64)
+    at = base.groups.table["at_us"]
     stream = base.stream
     sets = [
         LimitSet(
@@ -57,31 +59,21 @@ def add_autocorrelation(base: Baseline, payloads: list[dict[str, Any]]) -> None:
             _add(base, payloads, with_limits(rows, assigned, scores))
 
 
-def _add(base: Baseline, payloads: list[dict[str, Any]], points: Any) -> None:
+def _add(base: Baseline, payloads: list[dict[str, Any]], points: Columns) -> None:
     table = base.groups.table
-    wild = [
-        {(w["lot"], w["layer"], w["wafer"], name) for w in one["wild"] for name in _kept_from(w)}
-        for one in payloads
-    ]
-    point = points["point"].to_numpy(np.int64)
-    points = points.assign(stream=base.stream[point])
-    for name in ("lot", "layer", "wafer", "at_us"):
-        points[name] = table[name].to_numpy()[point]
-    points = points.sort_values(["stream", "at_us", "lot", "layer", "wafer"])
-    for statistic, rows in points.groupby("statistic", sort=False):
-        keys = rows[["stream", "lot", "layer", "wafer"]].itertuples(index=False)
-        good = np.array(
-            [
-                not ({(lot, layer, wafer, statistic), (lot, layer, wafer, "all")} & wild[s])
-                for s, lot, layer, wafer in keys
-            ],
-            bool,
-        )
-        good &= np.isfinite(rows["z"].to_numpy(np.float64))
-        if not good.any():
-            continue
-        stream = rows["stream"].to_numpy(np.int64)[good]
-        found = lag1(rows["z"].to_numpy(np.float64)[good], stream=stream, confidence=CONFIDENCE)
+    point = points["point"]
+    names = ("lot", "layer", "wafer", "at_us")
+    points = points.having(
+        stream=base.stream[point], **{name: table[name][point] for name in names}
+    )
+    keys = ("statistic", "stream", "at_us", "lot", "layer", "wafer")
+    points = points.take(order_of([points[key] for key in keys]))
+    points = points.take(np.isfinite(points["z"]) & ~_wild(payloads, points))
+    kinds, statistics = codes_of(points["statistic"])
+    for code, statistic in enumerate(statistics):
+        rows = points.take(kinds == code)
+        stream = rows["stream"]
+        found = lag1(rows["z"], stream=stream, confidence=CONFIDENCE)
         for s in np.unique(stream):
             entry = payloads[s]["statistics"].get(statistic)
             if entry is None or not np.isfinite(found.phi[s]):
@@ -92,10 +84,19 @@ def _add(base: Baseline, payloads: list[dict[str, Any]], points: Any) -> None:
             entry["phi_high"] = rounded(float(found.high[s]))
             entry["correlated"] = correlated
             entry["n"] = int(found.n[s])
-            if correlated and kind_of(str(statistic)) == "mean":
+            if correlated and kind_of(statistic) == "mean":
                 effect = ar1_baseline(float(found.phi[s]), int(found.n[s]))
                 entry["variance_bias"] = rounded(float(effect.variance_bias[0]))
 
 
-def _kept_from(wild: dict[str, Any]) -> tuple[str, ...]:
-    return (wild["excluded"],)
+def _wild(payloads: list[dict[str, Any]], points: Columns) -> NDArray[np.bool_]:
+    """Points that the estimates of their statistic do not stand on."""
+    wild = {
+        (s, w["lot"], w["layer"], w["wafer"], w["excluded"])
+        for s, one in enumerate(payloads)
+        for w in one["wild"]
+    }
+    if not wild:
+        return np.zeros(len(points), bool)
+    rows = points.rows(("stream", "lot", "layer", "wafer", "statistic"))
+    return np.array([row in wild or (*row[:4], "all") in wild for row in rows], bool)

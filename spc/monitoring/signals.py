@@ -11,10 +11,10 @@ from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 
 import numpy as np
-import pandas as pd
 from numpy.typing import NDArray
 
 from spc.monitoring.limit_sets import kind_of
+from spc.records.columns import Columns, codes_of, starts_of_groups
 from spc.stats.autocorrelation import residual_chart
 from spc.stats.rules import evaluate, first_of_run, parse_rules
 
@@ -50,23 +50,18 @@ class Series:
         return np.asarray(table[..., self.row, self.column])
 
 
-def series_of(frame: pd.DataFrame) -> Series:
+def series_of(frame: Columns) -> Series:
     """Rectangle of points that are sorted by ORDER."""
-    n = len(frame)
-    new = np.ones(n, bool)
-    stream = frame["stream_id"].to_numpy(np.int64)
-    statistic = frame["statistic"].to_numpy(object)
-    if n:
-        new[1:] = (stream[1:] != stream[:-1]) | (statistic[1:] != statistic[:-1])
+    new = starts_of_groups([frame[name] for name in SERIES])
     row = np.asarray(np.cumsum(new) - 1, np.int64)
     start = np.flatnonzero(new)
-    column = np.arange(n) - start[row] if n else np.zeros(0, np.int64)
+    column = np.arange(len(frame)) - start[row] if len(frame) else np.zeros(0, np.int64)
     longest = int(column.max(initial=-1)) + 1
     return Series(row, column, (start.size, longest))
 
 
 def rule_hits(
-    frame: pd.DataFrame, rules: Sequence[str], phi: Mapping[tuple[int, str], float]
+    frame: Columns, rules: Sequence[str], phi: Mapping[tuple[int, str], float]
 ) -> NDArray[np.object_]:
     """Names of the rules that each point completes, joined by commas.
 
@@ -78,16 +73,17 @@ def rule_hits(
     """
     names = np.full(len(frame), "", dtype=object)
     chosen = parse_rules(rules)
-    z = frame["z"].to_numpy(np.float64)
+    z = frame["z"]
     judged = np.flatnonzero(np.isfinite(z))
     if not judged.size or not chosen:
         return names
-    part = frame.iloc[judged]
+    part = frame.take(judged)
     series, z = series_of(part), z[judged]
-    segment = part["baseline_id"].to_numpy(np.float64).astype(np.int64)
+    segment = part["baseline_id"].astype(np.int64)
     free = _residuals(part, series, z, segment, phi)
-    monitoring = part["phase"].to_numpy(object) == "monitoring"
-    above_only = np.array([kind_of(s) == "distance" for s in part["statistic"]], bool)
+    monitoring = part["phase"] == "monitoring"
+    kinds, statistics = codes_of(part["statistic"])
+    above_only = np.array([kind_of(s) == "distance" for s in statistics], bool)[kinds]
     codes = series.fill(segment, -1)
     hits = np.zeros((len(chosen), judged.size), bool)
     for values, wanted in ((z, True), (free, False)):
@@ -108,7 +104,7 @@ def rule_hits(
 
 
 def _residuals(
-    part: pd.DataFrame,
+    part: Columns,
     series: Series,
     z: FloatArray,
     segment: IntArray,
@@ -117,7 +113,7 @@ def _residuals(
     """z, or the one-step residuals of series whose autocorrelation is surely positive."""
     if not phi:
         return z
-    pairs = zip(segment.tolist(), part["statistic"], strict=True)
+    pairs = zip(segment.tolist(), part["statistic"].tolist(), strict=True)
     lean = np.array([phi.get(pair, 0.0) for pair in pairs], float)
     if not lean.any():
         return z
@@ -125,7 +121,7 @@ def _residuals(
     return residual_chart(z, 0.0, lean, stream=runs.ravel().astype(np.int64)).z
 
 
-def first_signals(frame: pd.DataFrame) -> BoolArray:
+def first_signals(frame: Columns) -> BoolArray:
     """Points at which a rule begins to signal: later points of the same run are the same event.
 
     Parameters
@@ -134,14 +130,14 @@ def first_signals(frame: pd.DataFrame) -> BoolArray:
     """
     n = len(frame)
     out = np.zeros(n, bool)
-    judged = np.flatnonzero(np.isfinite(frame["z"].to_numpy(np.float64)))
+    judged = np.flatnonzero(np.isfinite(frame["z"]))
     if not judged.size:
         return out
-    part = frame.iloc[judged]
+    part = frame.take(judged)
     series = series_of(part)
-    codes = series.fill(part["baseline_id"].to_numpy(np.float64).astype(np.int64), -1)
+    codes = series.fill(part["baseline_id"].astype(np.int64), -1)
     there = series.fill(np.ones(judged.size, bool), False)
-    listed = [set(text.split(",")) - {""} for text in part["rules"]]
+    listed = [set(text.split(",")) - {""} for text in part["rules"].tolist()]
     for name in sorted(set().union(*listed)):
         marks = series.fill(np.array([name in one for one in listed], bool), False)
         out[judged] |= series.take(first_of_run(marks, codes, there))

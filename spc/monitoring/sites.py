@@ -9,9 +9,9 @@ from collections.abc import Mapping
 from dataclasses import dataclass
 
 import numpy as np
-import pandas as pd
 from numpy.typing import NDArray
 
+from spc.records.columns import Columns, starts_of_groups
 from spc.records.measurements import Layout
 
 FloatArray = NDArray[np.float64]
@@ -48,7 +48,7 @@ class SiteReadings:
     places: Places
 
 
-def current_sites(frame: pd.DataFrame, layouts: Mapping[int, Layout]) -> SiteReadings:
+def current_sites(frame: Columns, layouts: Mapping[int, Layout]) -> SiteReadings:
     """Latest reading of each site of each (parameter, lot, layer, wafer).
 
     Parameters
@@ -61,9 +61,9 @@ def current_sites(frame: pd.DataFrame, layouts: Mapping[int, Layout]) -> SiteRea
     ValueError
         Where the packed values do not fit their layout (the database was damaged).
     """
-    with_sites = np.flatnonzero(frame["site_values"].notna().to_numpy())
-    packed = frame["site_values"].to_numpy()[with_sites]
-    layout_ids = frame["layout_id"].to_numpy(np.int64)[with_sites]
+    with_sites = np.flatnonzero(frame["site_values"] != None)  # noqa: E711
+    packed = frame["site_values"][with_sites]
+    layout_ids = frame["layout_id"][with_sites]
     unique_layouts, layout = np.unique(layout_ids, return_inverse=True)
     places, starts, codes = _places([layouts[int(i)] for i in unique_layouts])
     lengths = np.diff(np.append(starts, codes.size))[layout]
@@ -84,12 +84,9 @@ def current_sites(frame: pd.DataFrame, layouts: Mapping[int, Layout]) -> SiteRea
     return SiteReadings(row[kept], place[kept], value[kept], places)
 
 
-def _wafer_codes(frame: pd.DataFrame) -> IntArray:
+def _wafer_codes(frame: Columns) -> IntArray:
     """Code of (parameter, lot, layer, wafer) of each row; equal keys are neighbours."""
-    columns = [frame[name].to_numpy(object) for name in ("lot", "layer", "wafer", "parameter")]
-    new = np.ones(len(frame), dtype=bool)
-    if len(frame):
-        new[1:] = np.any([column[1:] != column[:-1] for column in columns], axis=0)
+    new = starts_of_groups([frame[name] for name in ("lot", "layer", "wafer", "parameter")])
     return np.asarray(np.cumsum(new) - 1, dtype=np.int64)
 
 

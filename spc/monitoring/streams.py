@@ -15,10 +15,10 @@ from collections.abc import Mapping
 from dataclasses import dataclass
 
 import numpy as np
-import pandas as pd
 from numpy.typing import NDArray
 
 from config.control_plan import Characteristic
+from spc.records.columns import Columns, codes_of, row_codes
 from spc.records.contexts import ContextStore
 
 FloatArray = NDArray[np.float64]
@@ -51,7 +51,7 @@ class Placed:
 
 
 def place_in_streams(
-    rows: pd.DataFrame, log: pd.DataFrame, contexts: ContextStore, characteristic: Characteristic
+    rows: Columns, log: Columns, contexts: ContextStore, characteristic: Characteristic
 ) -> Placed:
     """Find the stream, the process stamp and the contexts of measurements.
 
@@ -60,10 +60,10 @@ def place_in_streams(
     rows : measurements (lot, layer, wafer, measured_us, processed_us, context_id).
     log : process log of at least their lots.
     """
-    contexts.load(rows["context_id"].unique())
-    contexts.load(log["context_id"].unique())
+    contexts.load(np.unique(rows["context_id"]).tolist())
+    contexts.load(np.unique(log["context_id"]).tolist())
     found = _log_of(rows, log, contexts)
-    own = rows["context_id"].to_numpy(np.int64)
+    own = rows["context_id"]
     pairs, pair_of = np.unique(np.column_stack([own, found.context]), axis=0, return_inverse=True)
     others, others_of = np.unique(found.others, axis=0, return_inverse=True)
     effective = [_effective(contexts, int(mine), int(logged)) for mine, logged in pairs]
@@ -76,7 +76,7 @@ def place_in_streams(
     code = {key: i for i, key in enumerate(names)}
     stream = np.array([-1 if k is None else code[k] for k in keys], np.int64)[both_of.ravel()]
     taken = stream >= 0
-    processed = rows["processed_us"].to_numpy(np.float64)
+    processed = rows["processed_us"]
     processed = np.where(np.isnan(processed), found.processed, processed)
     return Placed(
         names,
@@ -104,37 +104,57 @@ class _LogOf:
     others: IntArray  # (n, k) contexts of the other steps in front, 0 padded
 
 
-def _log_of(rows: pd.DataFrame, log: pd.DataFrame, contexts: ContextStore) -> _LogOf:
+def _log_of(rows: Columns, log: Columns, contexts: ContextStore) -> _LogOf:
     n = len(rows)
-    left = rows[["lot", "wafer", "layer", "measured_us", "processed_us", "context_id"]].copy()
-    left["row"] = np.arange(n)
-    pairs = left.merge(log, on=["lot", "wafer"], suffixes=("", "_log"))
-    layer, layer_log = pairs["layer"].to_numpy(object), pairs["layer_log"].to_numpy(object)
-    pairs = pairs[(layer == layer_log) | (layer == "") | (layer_log == "")]
-    pairs = pairs.sort_values(["row", "processed_us_log", "id"], ignore_index=True)
-    if pairs.empty:
+    pairs = _pairs(rows, log)
+    if not len(pairs):
         return _LogOf(np.zeros(n, np.int64), np.full(n, np.nan), np.zeros((n, 1), np.int64))
-    row = pairs["row"].to_numpy(np.int64)
+    row = pairs["row"]
     step = _step_codes(pairs, contexts)
     chosen = _chosen(pairs, row, step, _agreeing(pairs, contexts), n)
     context, processed = np.zeros(n, np.int64), np.full(n, np.nan)
     own_step = np.full(n, -1, np.int64)
     has = chosen >= 0
-    log_context = pairs["context_id_log"].to_numpy(np.int64)
+    log_context = pairs["context_id_log"]
     context[has] = log_context[chosen[has]]
-    processed[has] = pairs["processed_us_log"].to_numpy(np.float64)[chosen[has]]
+    processed[has] = pairs["processed_us_log"][chosen[has]]
     own_step[has] = step[chosen[has]]
-    front = pairs["processed_us_log"].to_numpy() <= pairs["measured_us"].to_numpy()
+    front = pairs["processed_us_log"] <= pairs["measured_us"]
     front &= step != own_step[row]
     return _LogOf(context, processed, _padded(row[front], step[front], log_context[front], n))
 
 
-def _step_codes(pairs: pd.DataFrame, contexts: ContextStore) -> IntArray:
+def _pairs(rows: Columns, log: Columns) -> Columns:
+    """Measurements (`row`) with each log row of their wafer and layer, in the order of time."""
+    n = len(rows)
+    wafer = row_codes([np.concatenate([rows[name], log[name]]) for name in ("lot", "wafer")])
+    mine, logged = wafer[:n], wafer[n:]
+    order = np.argsort(logged, kind="stable")
+    low = np.searchsorted(logged[order], mine, side="left")
+    count = np.searchsorted(logged[order], mine, side="right") - low
+    row = np.repeat(np.arange(n), count)
+    turn = np.arange(row.size) - np.repeat(np.cumsum(count) - count, count)
+    at = order[np.repeat(low, count) + turn]
+    layer, layer_log = rows["layer"][row], log["layer"][at]
+    fits = (layer == layer_log) | (layer == "") | (layer_log == "")
+    row, at = row[fits], at[fits]
+    order = np.lexsort((log["id"][at], log["processed_us"][at], row))
+    row, at = row[order], at[order]
+    arrays = {name: rows[name][row] for name in ("measured_us", "processed_us", "context_id")}
+    for name in ("tool", "module", "step"):
+        arrays[name] = log[name][at]
+    for name in ("processed_us", "context_id"):
+        arrays[f"{name}_log"] = log[name][at]
+    return Columns({"row": row, **arrays})
+
+
+def _step_codes(pairs: Columns, contexts: ContextStore) -> IntArray:
     """Code of the step of each log row: its name, else its recipe, else its tool."""
-    ids, of = np.unique(pairs["context_id_log"].to_numpy(np.int64), return_inverse=True)
+    ids, of = np.unique(pairs["context_id_log"], return_inverse=True)
     columns = [contexts.columns(int(i)) for i in ids]
-    names = np.array([step_name(one) or "\x00" + one.get("tool", "") for one in columns], object)
-    return np.unique(names.astype(str), return_inverse=True)[1].astype(np.int64)[of]
+    names = np.empty(len(columns), dtype=object)
+    names[:] = [step_name(one) or "\x00" + one.get("tool", "") for one in columns]
+    return codes_of(names)[0][of]
 
 
 def step_name(columns: Mapping[str, str]) -> str:
@@ -142,14 +162,14 @@ def step_name(columns: Mapping[str, str]) -> str:
     return columns.get("step") or columns.get("recipe") or ""
 
 
-def _agreeing(pairs: pd.DataFrame, contexts: ContextStore) -> BoolArray:
+def _agreeing(pairs: Columns, contexts: ContextStore) -> BoolArray:
     """Whether a log row agrees with all that the reading says of where it was processed."""
-    ids, of = np.unique(pairs["context_id"].to_numpy(np.int64), return_inverse=True)
+    ids, of = np.unique(pairs["context_id"], return_inverse=True)
     columns = [contexts.columns(int(i)) for i in ids]
     agrees = np.ones(len(pairs), bool)
     for name in ("tool", "module", "step"):
         said = np.array([one.get(name, "") for one in columns], object)[of]
-        logged = pairs[name].to_numpy(object)
+        logged = pairs[name]
         unknown = said == ""
         if name != "tool":  # a log row always has its tool
             unknown |= logged == ""
@@ -157,15 +177,13 @@ def _agreeing(pairs: pd.DataFrame, contexts: ContextStore) -> BoolArray:
     return agrees
 
 
-def _chosen(
-    pairs: pd.DataFrame, row: IntArray, step: IntArray, agrees: BoolArray, n: int
-) -> IntArray:
+def _chosen(pairs: Columns, row: IntArray, step: IntArray, agrees: BoolArray, n: int) -> IntArray:
     """Position of the log row that belongs to each measurement, -1 for none."""
-    processed = pairs["processed_us"].to_numpy(np.float64)
-    logged = pairs["processed_us_log"].to_numpy(np.float64)
+    processed = pairs["processed_us"]
+    logged = pairs["processed_us_log"]
     candidate = agrees.copy()
     # The reading's own process stamp, then the order in time, tell passes of a step apart.
-    for better in (processed == logged, logged <= pairs["measured_us"].to_numpy(np.float64)):
+    for better in (processed == logged, logged <= pairs["measured_us"]):
         some = np.bincount(row, weights=candidate & better, minlength=n) > 0
         candidate &= better | ~some[row]
     at = np.flatnonzero(candidate)

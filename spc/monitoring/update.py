@@ -5,7 +5,6 @@ from __future__ import annotations
 from dataclasses import dataclass, field
 
 import numpy as np
-import pandas as pd
 from numpy.typing import NDArray
 from sqlalchemy import Connection
 
@@ -26,6 +25,7 @@ from spc.monitoring.wafer_statistics import WaferStatistics
 from spc.monitoring.wafers import Stores, Wafers, build_wafers, subset
 from spc.monitoring.work import Work
 from spc.records import series
+from spc.records.columns import Columns, joined, order_of, row_codes, text
 from spc.records.contexts import ContextStore
 from spc.records.measurements import LayoutStore, Marker, log_rows, measurement_rows
 from spc.records.tables import points as points_table
@@ -66,7 +66,7 @@ class _Changes:
     anew : streams of which every point is made again.
     """
 
-    groups: pd.DataFrame
+    groups: Columns
     anew: frozenset[int]
 
 
@@ -88,6 +88,8 @@ class Update:
         wafers, ids = self.read(one, lots)
         known = series.stream_ids(self._connection, one.name)
         old = self._old_results(known, work)
+        if not (len(wafers.table) or len(old) or work.hand):
+            return Updated(notes=list(wafers.notes))
         changes = self._changes(one, wafers, ids, old, work)
         if changes.anew and not work.everything:
             wafers, ids = self.read(one, self._lots_of(changes, sorted(work.lots)))
@@ -107,7 +109,7 @@ class Update:
             layers=None if layer is None else [layer, ""],
             lots=lots,
         )
-        log = log_rows(self._connection, self._now.as_of_us, sorted(set(frame["lot"])))
+        log = log_rows(self._connection, self._now.as_of_us, sorted(set(frame["lot"].tolist())))
         wafers = build_wafers(frame, log, self._stores, one)
         known = series.stream_ids(self._connection, one.name)
         new = [key for key in wafers.keys if key not in known]
@@ -116,18 +118,18 @@ class Update:
             known = series.stream_ids(self._connection, one.name)
         return wafers, np.array([known[key] for key in wafers.keys], np.int64)
 
-    def _old_results(self, known: dict[str, int], work: Work) -> pd.DataFrame:
+    def _old_results(self, known: dict[str, int], work: Work) -> Columns:
         ids = [] if work.everything else list(known.values())
         return series.wafer_results_of(self._connection, ids, sorted(work.lots))
 
     def _lots_of(self, changes: _Changes, lots: list[str]) -> list[str]:
-        more = series.wafer_results_of(self._connection, changes.anew)["lot"]
+        more = series.lots_between(self._connection, changes.anew, None, None)
         return sorted(set(lots) | set(more))
 
     # ---- what to make again ----------------------------------------------------------------
 
     def _changes(
-        self, one: Characteristic, wafers: Wafers, ids: IntArray, old: pd.DataFrame, work: Work
+        self, one: Characteristic, wafers: Wafers, ids: IntArray, old: Columns, work: Work
     ) -> _Changes:
         new = _with_ids(wafers, ids)
         groups = _changed_groups(new, old)
@@ -151,144 +153,136 @@ class Update:
         groups = group_points(wafers.table, one.point)
         made = baselines.Maker(self._connection, one, self._radius, self._now.as_of_us)
         result.new_baselines = made.renew(wafers, groups, ids, changes.anew)
-        stream_id = ids[groups.table["stream"].to_numpy(np.int64)]
+        stream_id = ids[groups.table["stream"]]
         concerned = set(stream_id.tolist()) | changes.anew
         sets = baselines.in_force(self._connection, concerned)
-        at = groups.table["at_us"].to_numpy(np.int64)
-        assigned = assignment(groups, sets, assign_sets(stream_id, at, sets))
+        assigned = assignment(groups, sets, assign_sets(stream_id, groups.table["at_us"], sets))
         found = wafer_statistics(wafers, groups, assigned, one, self._radius)
         values = point_values(wafers, groups, found, one)
         scores = np.full(len(values), np.nan)
         if "map-distance" in one.charted:
             distances, z = map_distances(wafers, groups, assigned)
-            if len(distances):
-                values = pd.concat([values, distances], ignore_index=True)
-                scores = np.append(scores, z)
+            values, scores = joined([values, distances]), np.append(scores, z)
         points = _point_rows(groups, stream_id, with_limits(values, assigned, scores))
-        self._clear(changes)
-        self._signal(one, points, sets, changes, result)
+        self._clear(one, changes)
+        points = self._signal(one, points, sets, changes, result)
         series.insert(self._connection, points_table, points)
         results = _wafer_rows(one, wafers, ids, found)
         series.insert(self._connection, wafer_results_table, results)
         result.notes += found.notes
 
-    def _clear(self, changes: _Changes) -> None:
+    def _clear(self, one: Characteristic, changes: _Changes) -> None:
         series.clear(self._connection, changes.anew)
-        groups = changes.groups
-        rest = groups[~groups["stream_id"].isin(changes.anew)]
-        series.delete_lots(self._connection, rest)
+        rest = changes.groups.take(~np.isin(changes.groups["stream_id"], list(changes.anew)))
+        series.delete_lots(self._connection, rest, one.charted)
 
     def _signal(
         self,
         one: Characteristic,
-        points: pd.DataFrame,
+        points: Columns,
         sets: list[LimitSet],
         changes: _Changes,
         result: Updated,
-    ) -> None:
-        """Rule hits of the new points (in place) and of the stored ones behind them."""
+    ) -> Columns:
+        """The new points with their rule hits; those of the stored ones behind them are renewed."""
         first = _first_stamps(changes.groups)
         tails = {stream: us for stream, us in first.items() if stream not in changes.anew}
         before = signals.longest_window(one.rules) + 1
         stored = series.points_from(self._connection, one.charted, tails, before)
         sets = sets + baselines.of_points(self._connection, stored, sets)
-        columns = list(stored.columns)
-        both = pd.concat(
-            [part for part in (points[columns], stored) if len(part)] or [points[columns]],
-            ignore_index=True,
-        )
-        both["place"] = np.arange(len(both))
-        both = both.sort_values(signals.ORDER, kind="stable", ignore_index=True)
-        both["baseline_id"] = both["baseline_id"].astype(float)
-        hits = signals.rule_hits(both, one.rules, baselines.surely_correlated(sets))
+        both = joined([points.pick(series.TAIL), stored])
+        order = order_of([both[name] for name in signals.ORDER])
+        correlated = baselines.surely_correlated(sets)
         names = np.empty(len(both), dtype=object)
-        names[both["place"].to_numpy()] = hits
-        n = len(points)
-        points["rules"] = names[:n]
-        later = stored.assign(found=names[n:]) if len(stored) else stored.assign(found="")
-        at = later["stream_id"].map(tails) if len(later) else later["at_us"]
+        names[order] = signals.rule_hits(both.take(order), one.rules, correlated)
+        points, later = points.having(rules=names[: len(points)]), names[len(points) :]
         # Points in front of the first change only lend their z; their own window is not all here.
-        changed = later[(later["at_us"] >= at) & (later["found"] != later["rules"])]
-        series.update_rules(self._connection, changed.assign(rules=changed["found"]))
-        fresh = points.merge(changes.groups[GROUP].drop_duplicates(), on=GROUP)
-        result.points = len(fresh)
-        result.signals = int((fresh["rules"] != "").sum())
-        result.touched = dict(first)
-        for stream in changes.anew - result.touched.keys():
-            mine = points.loc[points["stream_id"] == stream, "at_us"]
-            if len(mine):
-                result.touched[stream] = int(mine.min())
+        at = np.array([tails[stream] for stream in stored["stream_id"].tolist()], np.int64)
+        changed = (stored["at_us"] >= at) & (later != stored["rules"])
+        renewed = stored.having(rules=later).take(changed.astype(bool))
+        series.update_rules(self._connection, renewed)
+        fresh = _among(points, changes.groups)
+        result.points = int(fresh.sum())
+        result.signals = int((points["rules"][fresh] != "").sum())
+        anew = points.take(np.isin(points["stream_id"], list(changes.anew - first.keys())))
+        result.touched = _first_stamps(anew.having(first_us=anew["at_us"])) | first
+        return points
 
 
-def _with_ids(wafers: Wafers, ids: IntArray) -> pd.DataFrame:
-    stream = wafers.table["stream"].to_numpy(np.int64)
-    return wafers.table.assign(stream_id=ids[stream] if len(ids) else stream)
+def _with_ids(wafers: Wafers, ids: IntArray) -> Columns:
+    stream = wafers.table["stream"]
+    return wafers.table.having(stream_id=ids[stream] if len(ids) else stream)
 
 
-def _changed_groups(new: pd.DataFrame, old: pd.DataFrame) -> pd.DataFrame:
+def _changed_groups(new: Columns, old: Columns) -> Columns:
     """Points (stream_id, lot, layer) whose wafers differ, and the first stamp they had or have."""
-    keys = [*GROUP, "wafer"]
-    names = [*keys, *_COMPARED]
-    sides = new[names].merge(
-        old[names], on=keys, how="outer", suffixes=("", "_old"), indicator=True
-    )
-    same = (sides["_merge"] == "both").to_numpy()
+    both = joined([new.pick(series.RESULT), old])
+    wafer = row_codes([both[name] for name in (*GROUP, "wafer")])
+    size = int(wafer.max(initial=-1)) + 1
+    same = np.ones(size, bool)
     for name in _COMPARED:
-        a, b = (sides[n].to_numpy(np.float64, na_value=np.nan) for n in (name, f"{name}_old"))
-        same = same & ((a == b) | (np.isnan(a) & np.isnan(b)))
+        sides = np.full((2, size), np.inf)  # stands for no such wafer
+        sides[0, wafer[: len(new)]], sides[1, wafer[len(new) :]] = new[name], old[name]
+        same &= (sides[0] == sides[1]) | np.isnan(sides).all(axis=0)
     # A point stands at the last of its wafers, old or new, whichever wafer changed: the earliest
     # wafer of the lot is never after it.
-    earliest = sides[["at_us", "at_us_old"]].min(axis=1).astype(np.int64)
-    sides = sides.assign(first_us=earliest, differs=~same)
-    found = sides.groupby(GROUP, as_index=False, sort=True).agg(
-        first_us=("first_us", "min"), differs=("differs", "any")
-    )
-    return found.loc[found["differs"], [*GROUP, "first_us"]].reset_index(drop=True)
+    group = row_codes([both[name] for name in GROUP])
+    count = int(group.max(initial=-1)) + 1
+    first_us = np.full(count, np.iinfo(np.int64).max)
+    np.minimum.at(first_us, group, both["at_us"])
+    differs = np.bincount(group, weights=~same[wafer], minlength=count) > 0
+    example = np.zeros(count, np.int64)
+    example[group] = np.arange(len(both))
+    return both.take(example).pick(GROUP).having(first_us=first_us).take(differs)
 
 
-def _first_stamps(groups: pd.DataFrame) -> dict[int, int]:
-    first = groups.groupby("stream_id")["first_us"].min()
-    return dict(zip(first.index.tolist(), first.tolist(), strict=True))
+def _first_stamps(groups: Columns) -> dict[int, int]:
+    streams, of = np.unique(groups["stream_id"], return_inverse=True)
+    first = np.full(streams.size, np.iinfo(np.int64).max)
+    np.minimum.at(first, of, groups["first_us"])
+    return dict(zip(streams.tolist(), first.tolist(), strict=True))
+
+
+def _among(rows: Columns, groups: Columns) -> BoolArray:
+    """Whether each row belongs to one of the groups."""
+    both = joined([rows.pick(GROUP), groups.pick(GROUP)])
+    code = row_codes([both[name] for name in GROUP])
+    return np.isin(code[: len(rows)], code[len(rows) :])
 
 
 def _needed(wafers: Wafers, ids: IntArray, changes: _Changes) -> Wafers:
     """Only the wafers whose points are made again."""
     table = _with_ids(wafers, ids)
-    wanted = table["stream_id"].isin(changes.anew).to_numpy()
+    wanted = np.isin(table["stream_id"], list(changes.anew))
     if not wanted.all():
-        marks = table[GROUP].merge(changes.groups[GROUP], on=GROUP, how="left", indicator=True)
-        wanted = wanted | (marks["_merge"] == "both").to_numpy()
+        wanted = wanted | _among(table, changes.groups)
     return wafers if wanted.all() else subset(wafers, wanted)
 
 
-def _point_rows(groups: PointGroups, stream_id: IntArray, values: pd.DataFrame) -> pd.DataFrame:
+def _point_rows(groups: PointGroups, stream_id: IntArray, values: Columns) -> Columns:
     """Rows of the table `points`, without rules yet."""
-    point = values["point"].to_numpy(np.int64)
-    table = groups.table
-    rows = pd.DataFrame(
-        {"stream_id": stream_id[point], "statistic": values["statistic"].to_numpy()}
+    point = values["point"]
+    of_point = ("lot", "layer", "wafer", "at_us", "measured_us", "processed_us")
+    of_value = ("statistic", "value", "n_wafers", "n_sites", "effective_sites", "df", "phase")
+    limits = ("center", "lower_limit", "upper_limit", "sigma", "z")
+    ids = values["baseline_id"]
+    return Columns(
+        {
+            "stream_id": stream_id[point],
+            **{name: groups.table[name][point] for name in of_point},
+            **{name: values[name] for name in (*of_value, *limits)},
+            "baseline_id": np.where(ids < 0, np.nan, ids.astype(np.float64)),
+            "rules": text("", len(values)),
+        }
     )
-    for name in ("lot", "layer", "wafer", "at_us", "measured_us", "processed_us"):
-        rows[name] = table[name].to_numpy()[point]
-    for name in ("value", "n_wafers", "n_sites", "effective_sites", "df"):
-        rows[name] = values[name].to_numpy()
-    rows["n_wafers"] = rows["n_wafers"].astype(np.int64)
-    rows["n_sites"] = rows["n_sites"].astype(np.int64)
-    ids = values["baseline_id"].to_numpy(np.float64)
-    rows["baseline_id"] = np.where(ids < 0, np.nan, ids)
-    rows["phase"] = values["phase"].to_numpy(object)
-    for name in ("center", "lower_limit", "upper_limit", "sigma", "z"):
-        rows[name] = values[name].to_numpy(np.float64)
-    rows["rules"] = ""
-    return rows
 
 
 def _wafer_rows(
     one: Characteristic, wafers: Wafers, ids: IntArray, found: WaferStatistics
-) -> pd.DataFrame:
+) -> Columns:
     """Rows of the table `wafer_results`."""
-    table = wafers.table
-    statistics = np.full((len(table), len(one.charted)), np.nan)
+    table = _with_ids(wafers, ids)
+    statistics = np.full((len(table), len(one.charted)), np.nan, dtype="<f8")
     for column, name in enumerate(one.charted):
         if name == "mean":
             statistics[:, column] = table["mean"]
@@ -296,15 +290,8 @@ def _wafer_rows(
             statistics[:, column] = found.sd
         elif name in found.terms:
             statistics[:, column] = found.terms[name]
-    rows = _with_ids(wafers, ids)[[*GROUP, "wafer", "at_us", "measured_us", "processed_us"]]
-    rows = rows.assign(
-        context_id=table["context_id"],
-        step_context_id=table["step_context_id"],
-        n_sites=table["n_sites"],
-        mean=table["mean"],
-        sum_squares=found.squares,
-        df=found.df,
-        statistics=[row.tobytes() for row in statistics.astype("<f8")],
-        out_of_spec_sites=table["out_of_spec_sites"],
+    packed = np.empty(len(table), dtype=object)
+    packed[:] = [row.tobytes() for row in statistics]
+    return table.pick(series.RESULT).having(
+        sum_squares=found.squares, df=found.df, statistics=packed
     )
-    return rows

@@ -89,15 +89,15 @@ def site_spread(wafers: Wafers, at: SignatureAt) -> WaferStatistics:
     share = np.where(judged, share / np.maximum(n, 1), 0.0)
     factor = np.where(member, 1.0 - share, 1.0 + share)
     df = np.maximum(n - 1.0, 0.0)
-    bare = wafers.table["n_sites"].to_numpy() * (n == 0)  # wafers kept as sums alone
-    squares = np.where(bare > 0, wafers.table["squares"].to_numpy(), squares / factor)
+    bare = wafers.table["n_sites"] * (n == 0)  # wafers kept as sums alone
+    squares = np.where(bare > 0, wafers.table["squares"], squares / factor)
     freedom = np.where(bare > 0, np.maximum(bare - 1.0, 0.0), df)
     return WaferStatistics(np.asarray(squares, np.float64), freedom)
 
 
 def _provisional(wafers: Wafers, fresh: BoolArray) -> tuple[FloatArray, FloatArray]:
     """Effect and count at each reading of streams without limits, from these wafers alone."""
-    stream = wafers.table["stream"].to_numpy(np.int64)[wafers.wafer[fresh]]
+    stream = wafers.table["stream"][wafers.wafer[fresh]]
     found = site_signatures(
         stream, wafers.wafer[fresh], wafers.place[fresh], wafers.value[fresh, 0]
     )

@@ -9,13 +9,13 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
-import pandas as pd
 from numpy.typing import NDArray
 
 from config.control_plan import Characteristic
 from config.values import unit_factor
 from spc.monitoring.sites import Places, SiteReadings, current_sites
 from spc.monitoring.streams import Placed, place_in_streams
+from spc.records.columns import Columns, codes_of, order_of, starts_of_groups
 from spc.records.contexts import ContextStore
 from spc.records.measurements import LayoutStore
 
@@ -57,7 +57,7 @@ class Wafers:
     """
 
     keys: tuple[str, ...]
-    table: pd.DataFrame
+    table: Columns
     wafer: IntArray
     place: IntArray
     value: FloatArray
@@ -74,7 +74,7 @@ class Stores:
 
 
 def build_wafers(
-    frame: pd.DataFrame, log: pd.DataFrame, stores: Stores, characteristic: Characteristic
+    frame: Columns, log: Columns, stores: Stores, characteristic: Characteristic
 ) -> Wafers:
     """Wafers of a characteristic from its measurements and the process log of their lots.
 
@@ -82,12 +82,12 @@ def build_wafers(
     ----------
     frame : from `measurement_rows`, with every measurement of the wafers it holds.
     """
-    stores.layouts.load(frame["layout_id"].unique())
+    stores.layouts.load(np.unique(frame["layout_id"]).tolist())
     sites = current_sites(frame, stores.layouts.known)
     factor, notes = _factors(frame, characteristic)
     live = _live_rows(frame, sites) & np.isfinite(factor)
     rows = np.flatnonzero(live)
-    short = frame.iloc[rows].drop(columns=["site_values"]).reset_index(drop=True)
+    short = frame.take(rows)
     placed = place_in_streams(short, log, stores.contexts, characteristic)
     stream = np.full(len(frame), -1, np.int64)
     stream[rows] = placed.stream
@@ -100,17 +100,17 @@ def build_wafers(
     wafer = wafer_of[row]
     axis = np.zeros(row.size, np.int64)
     if characteristic.is_overlay:
-        axis = (frame["parameter"].to_numpy(object)[row] == "overlay_y").astype(np.int64)
+        axis = (frame["parameter"][row] == "overlay_y").astype(np.int64)
     wafer, place, values = _by_axis(wafer, place, value, axis, characteristic.is_overlay)
     bare = _bare_sums(short, of_row, factor[rows], len(table))
     table = _with_sums(table, wafer, values, bare, characteristic)
     return Wafers(placed.keys, table, wafer, place, values, sites.places, notes)
 
 
-def _factors(frame: pd.DataFrame, c: Characteristic) -> tuple[FloatArray, tuple[str, ...]]:
+def _factors(frame: Columns, c: Characteristic) -> tuple[FloatArray, tuple[str, ...]]:
     """Factor of each measurement to the characteristic's unit; NaN where units do not convert."""
-    units, of = np.unique(frame["unit"].to_numpy(str), return_inverse=True)
-    factors = np.array([unit_factor(str(u), c.unit) or np.nan for u in units], float)
+    of, units = codes_of(frame["unit"])
+    factors = np.array([unit_factor(u, c.unit) or np.nan for u in units], float)
     notes = tuple(
         f"{c.name}: readings in {u!r} do not convert to {c.unit!r} and are left out"
         for u, f in zip(units, factors, strict=True)
@@ -119,48 +119,44 @@ def _factors(frame: pd.DataFrame, c: Characteristic) -> tuple[FloatArray, tuple[
     return factors[of], notes
 
 
-def _live_rows(frame: pd.DataFrame, sites: SiteReadings) -> NDArray[np.bool_]:
+def _live_rows(frame: Columns, sites: SiteReadings) -> NDArray[np.bool_]:
     """Measurements with a site that holds, and the newest of a wafer kept as sums alone."""
     live = np.zeros(len(frame), bool)
     live[np.unique(sites.row)] = True
-    bare = frame["site_values"].isna().to_numpy()
+    bare = frame["site_values"] == None  # noqa: E711
     if bare.any():
-        newest = ~frame.duplicated(["lot", "layer", "wafer", "parameter"], keep="last").to_numpy()
-        live |= bare & newest
+        keys = [frame[name] for name in ("lot", "layer", "wafer", "parameter")]
+        newest = np.append(starts_of_groups(keys)[1:], True)  # rows are in the order of time
+        live |= bare.astype(bool) & newest
     return live
 
 
-def _wafer_table(short: pd.DataFrame, placed: Placed) -> tuple[IntArray, pd.DataFrame]:
+def _wafer_table(short: Columns, placed: Placed) -> tuple[IntArray, Columns]:
     """Wafer of each measurement (-1: not taken), and the table of wafers without sums."""
     taken = np.flatnonzero(placed.stream >= 0)
-    part = short.iloc[taken]
-    frame = pd.DataFrame(
+    names = ("lot", "layer", "wafer")
+    table = Columns(
         {
             "stream": placed.stream[taken],
-            "lot": part["lot"].to_numpy(object),
-            "layer": part["layer"].to_numpy(object),
-            "wafer": part["wafer"].to_numpy(object),
-            "measured_us": part["measured_us"].to_numpy(np.int64),
+            **{name: short[name][taken] for name in names},
+            "measured_us": short["measured_us"][taken],
             "processed_us": placed.processed_us[taken],
             "context_id": placed.context_id[taken],
             "step_context_id": placed.step_context_id[taken],
         }
     )
-    keys = ["stream", "lot", "layer", "wafer"]
-    # The newest measurement speaks for the wafer; of two of one stamp (overlay) the last name.
-    order = frame.sort_values([*keys, "measured_us"], kind="stable")
-    code = order.groupby(keys, sort=True).ngroup().to_numpy(np.int64)
+    keys = ["stream", *names]
+    order = order_of([*(table[key] for key in keys), table["measured_us"]])
+    table = table.take(order)
+    new = starts_of_groups([table[key] for key in keys])
     of_row = np.full(len(short), -1, np.int64)
-    of_row[taken[order.index.to_numpy()]] = code
-    # groupby(...).last() would skip missing stamps, which belong to the newest row as well.
-    newest = np.zeros(int(code.max(initial=-1)) + 1, np.int64)
-    newest[code] = np.arange(code.size)
-    table = order.iloc[newest].reset_index(drop=True)
-    processed = table["processed_us"].to_numpy(np.float64)
-    measured = table["measured_us"].to_numpy(np.int64)
+    of_row[taken[order]] = np.cumsum(new) - 1
+    # The newest measurement speaks for the wafer; of two of one stamp (overlay) the last name.
+    newest = np.append(new[1:], True) if len(table) else new
+    table = table.take(newest)
+    processed, measured = table["processed_us"], table["measured_us"]
     at = np.where(np.isnan(processed), measured, np.nan_to_num(processed)).astype(np.int64)
-    table.insert(4, "at_us", at)
-    return of_row, table
+    return of_row, table.having(at_us=at)
 
 
 def _by_axis(
@@ -185,20 +181,19 @@ class _Bare:
     squares: FloatArray
 
 
-def _bare_sums(short: pd.DataFrame, of_row: IntArray, factor: FloatArray, size: int) -> _Bare:
+def _bare_sums(short: Columns, of_row: IntArray, factor: FloatArray, size: int) -> _Bare:
     """Sums of wafers whose site values the retention rule has taken away."""
     n, mean, squares = np.zeros(size, np.int64), np.full(size, np.nan), np.zeros(size)
-    if "site_values" not in short and len(short):
-        at = np.flatnonzero(of_row >= 0)
-        n[of_row[at]] = short["n"].to_numpy(np.int64)[at]
-        mean[of_row[at]] = short["mean"].to_numpy(np.float64)[at] * factor[at]
-        squares[of_row[at]] = short["sum_squares"].to_numpy(np.float64)[at] * factor[at] ** 2
+    at = np.flatnonzero((of_row >= 0) & (short["site_values"] == None))  # noqa: E711
+    n[of_row[at]] = short["n"][at]
+    mean[of_row[at]] = short["mean"][at] * factor[at]
+    squares[of_row[at]] = short["sum_squares"][at] * factor[at] ** 2
     return _Bare(n, mean, squares)
 
 
 def _with_sums(
-    table: pd.DataFrame, wafer: IntArray, values: FloatArray, bare: _Bare, c: Characteristic
-) -> pd.DataFrame:
+    table: Columns, wafer: IntArray, values: FloatArray, bare: _Bare, c: Characteristic
+) -> Columns:
     size = len(table)
     low = -np.inf if c.lower_spec is None else c.lower_spec
     high = np.inf if c.upper_spec is None else c.upper_spec
@@ -212,12 +207,12 @@ def _with_sums(
     mean = mean + np.bincount(wafer, weights=deviation, minlength=size) / some
     squares = np.bincount(wafer, weights=(first - mean[wafer]) ** 2, minlength=size)
     empty = n == 0
-    out = table.copy()
-    out["n_sites"] = np.where(empty, bare.n, n).astype(np.int64)
-    out["mean"] = np.where(empty, bare.mean, mean)
-    out["squares"] = np.where(empty, bare.squares, squares)
-    out["out_of_spec_sites"] = np.bincount(wafer, weights=outside, minlength=size).astype(np.int64)
-    return out[list(WAFER_COLUMNS)]
+    return table.having(
+        n_sites=np.where(empty, bare.n, n).astype(np.int64),
+        mean=np.where(empty, bare.mean, mean),
+        squares=np.where(empty, bare.squares, squares),
+        out_of_spec_sites=np.bincount(wafer, weights=outside, minlength=size).astype(np.int64),
+    ).pick(WAFER_COLUMNS)
 
 
 def subset(wafers: Wafers, wanted: NDArray[np.bool_]) -> Wafers:
@@ -226,7 +221,7 @@ def subset(wafers: Wafers, wanted: NDArray[np.bool_]) -> Wafers:
     sites = wanted[wafers.wafer]
     return Wafers(
         wafers.keys,
-        wafers.table[wanted].reset_index(drop=True),
+        wafers.table.take(wanted),
         number[wafers.wafer[sites]],
         wafers.place[sites],
         wafers.value[sites],

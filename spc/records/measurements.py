@@ -5,46 +5,44 @@ from __future__ import annotations
 import json
 from collections.abc import Iterable, Sequence
 from dataclasses import dataclass, field
-from typing import TYPE_CHECKING, Any
+from typing import Any
 
 from sqlalchemy import Connection, Select, func, select, union
 
+from spc.records.columns import Columns, of_rows, order_of
 from spc.records.contexts import chunks
 from spc.records.tables import layouts, measurements, process_log
-
-if TYPE_CHECKING:
-    import pandas as pd
 
 # More lots than this are read by one walk over the table instead of by their names.
 WHOLE_TABLE = 4000
 
-MEASUREMENT_COLUMNS = (
-    "id",
-    "parameter",
-    "layer",
-    "lot",
-    "wafer",
-    "measured_us",
-    "processed_us",
-    "context_id",
-    "layout_id",
-    "unit",
-    "n",
-    "mean",
-    "sum_squares",
-    "site_values",
-)
-LOG_COLUMNS = (
-    "id",
-    "processed_us",
-    "lot",
-    "wafer",
-    "layer",
-    "step",
-    "tool",
-    "module",
-    "context_id",
-)
+_MEASUREMENT = {
+    "id": "i",
+    "parameter": "o",
+    "layer": "o",
+    "lot": "o",
+    "wafer": "o",
+    "measured_us": "i",
+    "processed_us": "f",
+    "context_id": "i",
+    "layout_id": "i",
+    "unit": "o",
+    "n": "i",
+    "mean": "f",
+    "sum_squares": "f",
+    "site_values": "o",
+}
+_LOG = {
+    "id": "i",
+    "processed_us": "i",
+    "lot": "o",
+    "wafer": "o",
+    "layer": "o",
+    "step": "o",
+    "tool": "o",
+    "module": "o",
+    "context_id": "i",
+}
 
 
 @dataclass(frozen=True)
@@ -109,38 +107,28 @@ def measurement_rows(
     *,
     layers: Sequence[str] | None = None,
     lots: Sequence[str] | None = None,
-) -> pd.DataFrame:
+) -> Columns:
     """Measurements of some parameters up to a stamp, with their packed sites.
 
     `layers` and `lots` narrow it down. Row order: lot, layer, wafer, parameter, stamp, and of one
     stamp the newest row first, so that the row taken in first is the last of its stamp.
     """
-    import pandas as pd
-
     table = measurements.c
-    query = select(*(table[name] for name in MEASUREMENT_COLUMNS)).where(
+    query = select(*(table[name] for name in _MEASUREMENT)).where(
         table.parameter.in_(list(parameters)), table.measured_us <= as_of_us
     )
     if layers is not None:
         query = query.where(table.layer.in_(list(layers)))
-    frame = pd.DataFrame(_of_lots(connection, query, table.lot, lots), columns=MEASUREMENT_COLUMNS)
-    frame = frame.sort_values(
-        ["lot", "layer", "wafer", "parameter", "measured_us", "id"],
-        ascending=[True, True, True, True, True, False],
-        ignore_index=True,
-    )
-    return frame
+    found = of_rows(_of_lots(connection, query, table.lot, lots), _MEASUREMENT)
+    names = ("lot", "layer", "wafer", "parameter", "measured_us")
+    return found.take(order_of([*(found[name] for name in names), -found["id"]]))
 
 
-def log_rows(
-    connection: Connection, as_of_us: int, lots: Sequence[str] | None = None
-) -> pd.DataFrame:
+def log_rows(connection: Connection, as_of_us: int, lots: Sequence[str] | None = None) -> Columns:
     """Process log up to a stamp, of some lots or all."""
-    import pandas as pd
-
     table = process_log.c
-    query = select(*(table[name] for name in LOG_COLUMNS)).where(table.processed_us <= as_of_us)
-    return pd.DataFrame(_of_lots(connection, query, table.lot, lots), columns=LOG_COLUMNS)
+    query = select(*(table[name] for name in _LOG)).where(table.processed_us <= as_of_us)
+    return of_rows(_of_lots(connection, query, table.lot, lots), _LOG)
 
 
 def _of_lots(

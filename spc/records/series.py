@@ -6,12 +6,11 @@ from collections.abc import Iterable, Mapping, Sequence
 from typing import Any
 
 import numpy as np
-import pandas as pd
+from numpy.typing import NDArray
 from sqlalchemy import (
     BigInteger,
     Connection,
     Integer,
-    Select,
     Table,
     bindparam,
     delete,
@@ -21,23 +20,37 @@ from sqlalchemy import (
 )
 
 from spc.records.bulk import insert_rows
+from spc.records.columns import Columns, of_rows
 from spc.records.contexts import chunks
 from spc.records.tables import points, streams, wafer_results
 
-POINT_COLUMNS = tuple(c.name for c in points.columns)
-WAFER_RESULT_COLUMNS = tuple(c.name for c in wafer_results.columns)
-TAIL_COLUMNS = (
-    "stream_id",
-    "statistic",
-    "lot",
-    "layer",
-    "wafer",
-    "at_us",
-    "baseline_id",
-    "phase",
-    "z",
-    "rules",
-)
+# Columns read back, with their kinds (see `spc.records.columns.of_rows`).
+RESULT = {
+    "stream_id": "i",
+    "lot": "o",
+    "layer": "o",
+    "wafer": "o",
+    "at_us": "i",
+    "measured_us": "i",
+    "processed_us": "f",
+    "context_id": "i",
+    "step_context_id": "i",
+    "n_sites": "i",
+    "mean": "f",
+    "out_of_spec_sites": "i",
+}
+TAIL = {
+    "stream_id": "i",
+    "statistic": "o",
+    "lot": "o",
+    "layer": "o",
+    "wafer": "o",
+    "at_us": "i",
+    "baseline_id": "f",
+    "phase": "o",
+    "z": "f",
+    "rules": "o",
+}
 POINT_KEY = ["stream_id", "statistic", "lot", "layer", "wafer"]
 
 
@@ -65,82 +78,54 @@ def clear(connection: Connection, ids: Iterable[int]) -> None:
 
 def wafer_results_of(
     connection: Connection, ids: Iterable[int], lots: Sequence[str] | None = None
-) -> pd.DataFrame:
-    """Wafer results of streams, of some lots or all, without the packed statistics."""
-    columns = [c for c in wafer_results.columns if c.name != "statistics"]
-    query = select(*columns)
-    return _rows(connection, query, wafer_results, (ids, lots), [c.name for c in columns])
-
-
-def points_of(
-    connection: Connection, ids: Iterable[int], lots: Sequence[str] | None = None
-) -> pd.DataFrame:
-    """Points of streams, of some lots or all."""
-    return _rows(connection, select(points), points, (ids, lots), POINT_COLUMNS)
-
-
-def _rows(
-    connection: Connection,
-    query: Select[Any],
-    table: Any,
-    of: tuple[Iterable[int], Sequence[str] | None],
-    names: Sequence[str],
-) -> pd.DataFrame:
-    ids, lots = sorted(set(of[0])), of[1]
+) -> Columns:
+    """Wafer results (RESULT) of streams, of some lots or all."""
+    t = wafer_results.c
+    query = select(*(t[name] for name in RESULT))
     rows: list[Any] = []
-    for part in chunks(ids):
-        narrowed = query.where(table.c.stream_id.in_(part))
+    for part in chunks(sorted(set(ids))):
+        narrowed = query.where(t.stream_id.in_(part))
         if lots is None:
             rows += connection.execute(narrowed).all()
             continue
         for some in chunks(sorted(set(lots))):
-            rows += connection.execute(narrowed.where(table.c.lot.in_(some))).all()
-    return pd.DataFrame([tuple(row) for row in rows], columns=list(names))
+            rows += connection.execute(narrowed.where(t.lot.in_(some))).all()
+    return of_rows(rows, RESULT)
 
 
-def delete_lots(connection: Connection, keys: pd.DataFrame) -> None:
-    """Take away the results of (stream_id, lot, layer), which are about to be written anew."""
-    if keys.empty:
-        return
+def delete_lots(connection: Connection, keys: Columns, statistics: Sequence[str]) -> None:
+    """Take away the results of (stream_id, lot, layer), which are about to be written anew.
+
+    `statistics` are those that the streams have; named so that the primary key is walked.
+    """
     rows = [
-        {"b_stream": int(s), "b_lot": lot, "b_layer": layer}
-        for s, lot, layer in keys[["stream_id", "lot", "layer"]].itertuples(index=False)
+        {"b_stream": stream, "b_lot": lot, "b_layer": layer}
+        for stream, lot, layer in keys.rows(("stream_id", "lot", "layer"))
     ]
+    if not rows:
+        return
     for table in (points, wafer_results):
         statement = delete(table).where(
             table.c.stream_id == bindparam("b_stream"),
             table.c.lot == bindparam("b_lot"),
             table.c.layer == bindparam("b_layer"),
         )
+        some = rows
         if table is points:
-            # All statistics are named so that the primary key is walked, not the whole stream.
             statement = statement.where(points.c.statistic == bindparam("b_statistic"))
-            names = _statistics(connection, keys["stream_id"].unique())
-            some = [row | {"b_statistic": name} for row in rows for name in names]
-            if some:
-                connection.execute(statement, some)
-        else:
-            connection.execute(statement, rows)
+            some = [row | {"b_statistic": name} for row in rows for name in statistics]
+        connection.execute(statement, some)
 
 
-def _statistics(connection: Connection, ids: Iterable[int]) -> list[str]:
-    names: set[str] = set()
-    for part in chunks([int(i) for i in ids]):
-        query = select(points.c.statistic).distinct().where(points.c.stream_id.in_(part))
-        names |= set(connection.scalars(query))
-    return sorted(names)
-
-
-def insert(connection: Connection, table: Table, frame: pd.DataFrame) -> None:
-    """Insert a frame whose columns are those of the table; NaN becomes null."""
-    names = [str(name) for name in frame.columns]
+def insert(connection: Connection, table: Table, frame: Columns) -> None:
+    """Insert a table whose columns are those of the database's; NaN becomes null."""
+    names = list(frame)
     columns = [_values(frame[name], table.c[name].type) for name in names]
     if len(frame):
         insert_rows(connection, table, names, zip(*columns, strict=True))
 
 
-def _values(column: pd.Series, kind: object) -> list[Any]:
-    values = column.to_numpy()
+def _values(values: NDArray[Any], kind: object) -> list[Any]:
     if values.dtype.kind != "f":
         return list(values.tolist())
     whole = isinstance(kind, (Integer, BigInteger))
@@ -151,25 +136,23 @@ def _values(column: pd.Series, kind: object) -> list[Any]:
     return list(out.tolist())
 
 
-def update_rules(connection: Connection, frame: pd.DataFrame) -> None:
+def update_rules(connection: Connection, frame: Columns) -> None:
     """Set the rule names of points that are stored already."""
-    if frame.empty:
-        return
     statement = (
         update(points)
         .where(*(points.c[name] == bindparam(f"b_{name}") for name in POINT_KEY))
         .values(rules=bindparam("b_rules"))
     )
-    rows = [
-        {f"b_{name}": value for name, value in zip([*POINT_KEY, "rules"], row, strict=True)}
-        for row in frame[[*POINT_KEY, "rules"]].itertuples(index=False)
-    ]
-    connection.execute(statement, rows)
+    names = [*POINT_KEY, "rules"]
+    keys = [f"b_{name}" for name in names]
+    rows = [dict(zip(keys, row, strict=True)) for row in frame.rows(names)]
+    if rows:
+        connection.execute(statement, rows)
 
 
 def points_from(
     connection: Connection, statistics: Sequence[str], first_us: Mapping[int, int], before: int
-) -> pd.DataFrame:
+) -> Columns:
     """Points of streams from a stamp on, and the `before` points in front of it.
 
     Parameters
@@ -179,7 +162,7 @@ def points_from(
     before : points in front, of every statistic by itself.
     """
     rows: list[Any] = []
-    columns = [points.c[name] for name in TAIL_COLUMNS]
+    columns = [points.c[name] for name in TAIL]
     reach = (
         select(points.c.at_us)
         .where(
@@ -202,7 +185,7 @@ def points_from(
         for statistic in statistics:
             some = {"b_stream": stream, "b_statistic": statistic, "b_first": first}
             rows += connection.execute(query, some | {"b_lowest": lowest}).all()
-    return pd.DataFrame([tuple(row) for row in rows], columns=list(TAIL_COLUMNS))
+    return of_rows(rows, TAIL)
 
 
 def lots_between(
