@@ -6,7 +6,7 @@ wild point of another statistic out of that statistic's; each is listed with the
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from typing import Any
 
 import numpy as np
@@ -24,6 +24,7 @@ from spc.monitoring.wafer_statistics import (
     add_map_terms,
     overlay_statistics,
     site_spread,
+    without_flyers,
 )
 from spc.monitoring.wafers import Wafers
 from spc.records.columns import order_of, starts_of_groups
@@ -95,7 +96,7 @@ def estimate(base: Baseline) -> list[dict[str, Any]]:
         keep, found = _scalar(base, draft)
     _terms(base, draft, found, keep)
     _spreads(base, draft, found, keep)
-    draft.maps = _maps(base, draft, keep)
+    draft.maps = _maps(base, draft, without_flyers(base.wafers, found), keep)
     return _payloads(base, draft)
 
 
@@ -167,7 +168,8 @@ def _fit(base: Baseline, keep: BoolArray) -> tuple[SignatureAt, Components, Wafe
         effect[fit.stream, fit.site] = fit.effect
         count[fit.stream, fit.site] = fit.count
         lost[: fit.df.size] = fit.df
-    at = SignatureAt(effect[:, code_of], count[:, code_of], stream, keep_wafer)
+    none = np.full(n + 1, np.nan)
+    at = SignatureAt(effect[:, code_of], count[:, code_of], none, stream, keep_wafer)
     sites, mean, squares = _reduced(wafers, at)
     summary = WaferSummary(
         stream[keep_wafer],
@@ -177,7 +179,9 @@ def _fit(base: Baseline, keep: BoolArray) -> tuple[SignatureAt, Components, Wafe
         squares[keep_wafer],
     )
     components = nested_components(summary, site_df_lost=lost[: summary.n_streams])
-    return at, components, site_spread(wafers, at)
+    sigma = none.copy()
+    sigma[: components.site.size] = np.sqrt(np.where(components.site > 0, components.site, np.nan))
+    return at, components, site_spread(wafers, replace(at, sigma=sigma))
 
 
 def _reduced(wafers: Wafers, at: SignatureAt) -> tuple[IntArray, FloatArray, FloatArray]:
@@ -317,12 +321,11 @@ def _list_wild(
         )
 
 
-def _maps(base: Baseline, draft: Draft, keep: BoolArray) -> list[Any]:
+def _maps(base: Baseline, draft: Draft, wafers: Wafers, keep: BoolArray) -> list[Any]:
     """Map reference of each stream, None where it has none (the notes say why)."""
     out: list[Any] = [None] * base.n_streams
     if "map-distance" not in base.characteristic.charted:
         return out
-    wafers = base.wafers
     stream = wafers.table["stream"]
     keys = place_keys(wafers.places)
     use = keep[base.groups.of_wafer]

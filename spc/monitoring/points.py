@@ -78,9 +78,12 @@ def wafer_statistics(
         return overlay_statistics(wafers)
     effect, count = signature_at(assigned.sets, wafers.places)
     none = np.full((1, effect.shape[1]), np.nan)  # the row that index -1 picks
+    kept = [one.payload["components"] or {} for one in assigned.sets]
+    sites = np.array([*(one.get("site") or np.nan for one in kept), np.nan], float)
     at = SignatureAt(
         np.vstack([effect, none]),
         np.vstack([count, none]),
+        np.sqrt(sites),
         assigned.of_point[groups.of_wafer],
         assigned.member[groups.of_wafer],
     )
@@ -153,7 +156,7 @@ def map_distances(
 ) -> tuple[Columns, FloatArray]:
     """Map distances of points whose set has a map reference, and their normal scores.
 
-    The second result has one score a row of the first.
+    `wafers` are those without flyers. The second result has one score a row of the first.
     """
     keys = place_keys(wafers.places)
     value, df, z = np.full((3, groups.n), np.nan)

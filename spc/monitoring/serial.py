@@ -16,6 +16,7 @@ from spc.monitoring.points import (
     wafer_statistics,
     with_limits,
 )
+from spc.monitoring.wafer_statistics import without_flyers
 from spc.records.columns import Columns, codes_of, order_of
 from spc.stats.autocorrelation import ar1_baseline, lag1
 
@@ -52,7 +53,7 @@ def add_autocorrelation(base: Baseline, payloads: list[dict[str, Any]]) -> None:
         base.wafers, base.groups, assigned, base.characteristic, base.wafer_radius_mm
     )
     values = point_values(base.wafers, base.groups, found, base.characteristic)
-    distances, z = map_distances(base.wafers, base.groups, assigned)
+    distances, z = map_distances(without_flyers(base.wafers, found), base.groups, assigned)
     parts = [(values, np.full(len(values), np.nan)), (distances, z)]
     for rows, scores in parts:
         if len(rows):

@@ -21,7 +21,7 @@ from spc.monitoring.points import (
     wafer_statistics,
     with_limits,
 )
-from spc.monitoring.wafer_statistics import WaferStatistics
+from spc.monitoring.wafer_statistics import WaferStatistics, without_flyers
 from spc.monitoring.wafers import Stores, Wafers, build_wafers, subset
 from spc.monitoring.work import Work
 from spc.records import series
@@ -161,7 +161,7 @@ class Update:
         values = point_values(wafers, groups, found, one)
         scores = np.full(len(values), np.nan)
         if "map-distance" in one.charted:
-            distances, z = map_distances(wafers, groups, assigned)
+            distances, z = map_distances(without_flyers(wafers, found), groups, assigned)
             values, scores = joined([values, distances]), np.append(scores, z)
         points = _point_rows(groups, stream_id, with_limits(values, assigned, scores))
         self._clear(one, changes)

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterator
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -19,18 +19,26 @@ BoolArray = NDArray[np.bool_]
 
 MAP_TERMS = ("tilt-x", "tilt-y", "bowl")
 
+# One site of a wafer that is so far off the rest is a flyer of the gauge or a speck, not the shape
+# of the map. At 5 sigma a clean site is taken for one in 1.7 million.
+FLYER_SIGMAS = 5.0
+FEWEST_SITES = 5
+
 
 @dataclass(frozen=True)
 class SignatureAt:
     """The signature that holds for each wafer.
 
-    effect, count : (n_sets, n_places) as of `spc.monitoring.limit_sets.signature_at`.
+    effect, count : (n_sets + 1, n_places) as of `spc.monitoring.limit_sets.signature_at`, and a
+        last row of NaN.
+    sigma : (n_sets + 1,) standard deviation of a site, NaN where not known.
     set_of : (n_wafers,) set of each wafer, -1 where its stream has none yet.
     member : (n_wafers,) whether the wafer itself helped to estimate it.
     """
 
     effect: FloatArray
     count: FloatArray
+    sigma: FloatArray
     set_of: IntArray
     member: BoolArray
 
@@ -42,12 +50,16 @@ class WaferStatistics:
     squares, df : sum of squares of the sites about the wafer mean with the signature out, scaled
         so that squares / df estimates the site variance, and its degrees of freedom.
     terms : map or overlay terms by name.
+    flyer : (n_readings,) site readings far off the rest of their wafer; they count in the mean and
+        the spread, and are left out of the shape of the map. sigmas : how far, in site sigmas.
     """
 
     squares: FloatArray
     df: FloatArray
     terms: dict[str, FloatArray] = field(default_factory=dict)
     notes: list[str] = field(default_factory=list)
+    flyer: BoolArray | None = None
+    sigmas: FloatArray | None = None
 
     @property
     def sd(self) -> FloatArray:
@@ -92,7 +104,34 @@ def site_spread(wafers: Wafers, at: SignatureAt) -> WaferStatistics:
     bare = wafers.table["n_sites"] * (n == 0)  # wafers kept as sums alone
     squares = np.where(bare > 0, wafers.table["squares"], squares / factor)
     freedom = np.where(bare > 0, np.maximum(bare - 1.0, 0.0), df)
-    return WaferStatistics(np.asarray(squares, np.float64), freedom)
+    found = WaferStatistics(np.asarray(squares, np.float64), freedom)
+    off = rest - _medians(np.where(use, rest, np.nan), wafer, size)[wafer]
+    found.sigmas = off / at.sigma[set_of]
+    far = known & (np.abs(np.nan_to_num(found.sigmas)) > FLYER_SIGMAS)
+    n_far = np.bincount(wafer, weights=far, minlength=size)
+    alone = (n_far == 1) & (n_known >= FEWEST_SITES)
+    found.flyer = far & alone[wafer]
+    return found
+
+
+def _medians(values: FloatArray, wafer: IntArray, size: int) -> FloatArray:
+    """Median of the finite values of each wafer; readings of a wafer are neighbours."""
+    there = np.flatnonzero(np.isfinite(values))
+    order = there[np.lexsort((values[there], wafer[there]))]
+    count = np.bincount(wafer[there], minlength=size)
+    start = np.cumsum(count) - count
+    some = np.flatnonzero(count)
+    middle = np.zeros(size)
+    low, high = start + np.maximum(count - 1, 0) // 2, start + count // 2
+    middle[some] = 0.5 * (values[order[low[some]]] + values[order[high[some]]])
+    return middle
+
+
+def without_flyers(wafers: Wafers, found: WaferStatistics) -> Wafers:
+    """The same wafers with their flyer sites missing (NaN)."""
+    if found.flyer is None or not found.flyer.any():
+        return wafers
+    return replace(wafers, value=np.where(found.flyer[:, None], np.nan, wafers.value))
 
 
 def _provisional(wafers: Wafers, fresh: BoolArray) -> tuple[FloatArray, FloatArray]:
@@ -138,7 +177,7 @@ def add_map_terms(found: WaferStatistics, wafers: Wafers, radius_mm: float) -> N
     size = len(wafers.table)
     for name in MAP_TERMS:
         found.terms[name] = np.full(size, np.nan)
-    for block in layout_blocks(wafers):
+    for block in layout_blocks(without_flyers(wafers, found)):
         xy = wafers.places.coordinates[block.places, :2]
         if block.places.size < 2 or not np.isfinite(xy).all():
             continue

@@ -133,16 +133,16 @@ def log_rows(connection: Connection, as_of_us: int, lots: Sequence[str] | None =
 
 def _of_lots(
     connection: Connection, query: Select[Any], lot: Any, lots: Sequence[str] | None
-) -> list[tuple[Any, ...]]:
+) -> list[Any]:
     if lots is None:
-        return [tuple(row) for row in connection.execute(query)]
+        return list(connection.execute(query).all())
     if len(lots) > WHOLE_TABLE:
         wanted = set(lots)
         place = [c.key for c in query.selected_columns].index("lot")
-        return [tuple(row) for row in connection.execute(query) if row[place] in wanted]
-    rows: list[tuple[Any, ...]] = []
+        return [row for row in connection.execute(query).all() if row[place] in wanted]
+    rows: list[Any] = []
     for part in chunks(sorted(lots)):
-        rows += [tuple(row) for row in connection.execute(query.where(lot.in_(part)))]
+        rows += connection.execute(query.where(lot.in_(part))).all()
     return rows
 
 

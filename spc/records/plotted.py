@@ -7,7 +7,7 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import Any
 
-from sqlalchemy import Connection, Row, func, select
+from sqlalchemy import Connection, Row, case, func, select
 
 from spc.records.tables import contexts, points, streams, wafer_results
 
@@ -111,6 +111,18 @@ def out_of_spec_lots(
     Columns: stream_id, context (JSON of the stream), lot, layer, at_us, measured_us, wafers,
     sites, out_of_spec_wafers, out_of_spec_sites; in the order of at_us.
     """
+    keys = [points.c.stream_id, points.c.lot, points.c.layer]
+    lots = (
+        select(*keys)
+        .join(streams, streams.c.id == points.c.stream_id)
+        .where(
+            streams.c.characteristic == characteristic,
+            points.c.measured_us >= since_us,
+            points.c.measured_us <= until_us,
+        )
+        .distinct()
+        .subquery()
+    )
     t = wafer_results.c
     outside = func.sum(t.out_of_spec_sites)
     query = (
@@ -123,14 +135,16 @@ def out_of_spec_lots(
             func.max(t.measured_us).label("measured_us"),
             func.count().label("wafers"),
             func.sum(t.n_sites).label("sites"),
-            func.sum(func.sign(t.out_of_spec_sites)).label("out_of_spec_wafers"),
+            func.sum(case((t.out_of_spec_sites > 0, 1), else_=0)).label("out_of_spec_wafers"),
             outside.label("out_of_spec_sites"),
         )
         .join(streams, streams.c.id == t.stream_id)
-        .where(streams.c.characteristic == characteristic)
+        .join(
+            lots,
+            (lots.c.stream_id == t.stream_id) & (lots.c.lot == t.lot) & (lots.c.layer == t.layer),
+        )
         .group_by(t.stream_id, streams.c.context, t.lot, t.layer)
-        .having(outside > 0, func.max(t.measured_us) >= since_us)
-        .having(func.max(t.measured_us) <= until_us)
+        .having(outside > 0)
         .order_by("at_us", t.stream_id, t.lot)
     )
     return connection.execute(query).all()
