@@ -9,6 +9,7 @@ import pyarrow as pa
 import pyarrow.compute as pc
 from numpy.typing import NDArray
 
+from ingest import arrow
 from ingest.feeds import Mapping, Source, WideGroup
 from ingest.sheet import Sheet, Texts
 
@@ -44,8 +45,8 @@ def rows_of(sheet: Sheet, mapping: Mapping, units: dict[str, str]) -> Rows:
         rows = Rows(house, context, sheet.lines, {})
     if units and "unit" in rows.house:
         unit = rows.house["unit"]
-        said = pa.array([units.get(text, text) for text in unit.texts], pa.string())
-        rows.house["unit"] = Texts.of(unit.name, said.take(pa.array(unit.codes)))
+        said = arrow.strings([units.get(text, text) for text in unit.texts])
+        rows.house["unit"] = Texts.of(unit.name, said.take(arrow.indices(unit.codes)))
     return rows
 
 
@@ -87,21 +88,21 @@ def _values(
     sheet: Sheet, columns: list[str], of_line: NDArray[np.int64], of_cell: NDArray[np.int64]
 ) -> Texts:
     arrays = [sheet.columns[column].distinct for column in columns]
-    together = pa.concat_arrays([pa.array(a, pa.string()) for a in arrays])
+    together = pa.concat_arrays(arrays)
     starts = np.cumsum([0] + [len(a) for a in arrays[:-1]])
     codes = np.stack([sheet.columns[column].codes for column in columns])
     place = starts[of_cell] + codes[of_cell, of_line]
-    return Texts.plain("(wide columns)", pa.chunked_array([together.take(pa.array(place))]))
+    return Texts.plain("(wide columns)", together.take(arrow.indices(place)))
 
 
 def _per_cell(name: str, texts: list[str], of_cell: NDArray[np.int64]) -> Texts:
-    return Texts.of(name, pa.array(texts, pa.string()).take(pa.array(of_cell)))
+    return Texts.of(name, arrow.strings(texts).take(arrow.indices(of_cell)))
 
 
 def _mixed(column: Texts, given: list[str | None], of_cell: NDArray[np.int64]) -> Texts:
     """The text of the wide group where it has one, else that of the column."""
-    own = column.distinct.take(pa.array(column.codes))
-    theirs = pa.array(given, pa.string()).take(pa.array(of_cell))
+    own = column.distinct.take(arrow.indices(column.codes))
+    theirs = pa.array(given, pa.string()).take(arrow.indices(of_cell))
     return Texts.of(column.name, pc.coalesce(theirs, own))
 
 

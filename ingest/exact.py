@@ -20,6 +20,7 @@ import numpy as np
 import pyarrow as pa
 from numpy.typing import NDArray
 
+from ingest import arrow
 from ingest.report import Reason
 
 if TYPE_CHECKING:
@@ -80,7 +81,7 @@ class Lines:
 class Rows:
     """What the exact way found: columns of text, lines of the rows, and what it rejected."""
 
-    columns: list[pa.ChunkedArray]
+    columns: list[pa.StringArray]
     lines: NDArray[np.int64]
     reasons: list[Reason] = field(default_factory=list)
     n_rejected: int = 0
@@ -216,11 +217,12 @@ class _Collector:
 
     def _flush(self) -> None:
         for chunks, cells in zip(self._chunks, zip(*self._rows, strict=True), strict=False):
-            chunks.append(pa.array(cells, pa.string()))
+            chunks.append(arrow.strings(cells))
         self._line_chunks.append(np.array(self._lines, np.int64))
         self._rows, self._lines = [], []
 
-    def finish(self) -> tuple[list[pa.ChunkedArray], NDArray[np.int64]]:
+    def finish(self) -> tuple[list[pa.StringArray], NDArray[np.int64]]:
         self._flush()
-        columns = [pa.chunked_array(chunks, pa.string()) for chunks in self._chunks]
+        nothing = [arrow.strings([])]
+        columns = [pa.concat_arrays(chunks or nothing) for chunks in self._chunks]
         return columns, np.concatenate(self._line_chunks)

@@ -103,7 +103,7 @@ def take_in(
             else:
                 reports.append(report)
     with reading(engine) as connection:
-        late = _late_feeds(connection, bay, clock_us)
+        late = late_feeds(connection, bay, clock_us)
     return IngestReport(
         files=tuple(sorted([*reports, *waiting], key=lambda one: one.path)),
         late=late,
@@ -164,7 +164,7 @@ def _waiting(drop: Drop, why: str) -> FileReport:
     return FileReport(drop.path, "waiting", reasons=(Reason(None, None, None, why),))
 
 
-def _late_feeds(connection: Connection, bay: Bay, clock_us: int) -> tuple[LateFeed, ...]:
+def late_feeds(connection: Connection, bay: Bay, clock_us: int) -> tuple[LateFeed, ...]:
     """Feeds whose last file is longer ago than they should be silent."""
     newest = ledger.newest_by_feed(connection)
     late = []

@@ -16,6 +16,8 @@ import pyarrow as pa
 import pyarrow.compute as pc
 from numpy.typing import NDArray
 
+from ingest import arrow
+
 EARLIEST_YEAR = 1990
 LATEST_YEAR = 2100
 
@@ -115,7 +117,7 @@ def _regular(
     """Read the texts of the usual form in place, all of one kind at a time."""
     for form, zoned in ((_OFFSET, "UTC"), (_LOCAL, None)):
         fits = pc.match_substring_regex(texts, form)
-        mask = fits.to_numpy(zero_copy_only=False)
+        mask = arrow.mask(fits)
         if not mask.any():
             continue
         chosen = texts if mask.all() else texts.filter(fits)
@@ -123,7 +125,7 @@ def _regular(
             read = pc.cast(chosen, pa.timestamp("us", zoned)).cast(pa.int64())
         except pa.ArrowInvalid:
             continue  # one of them is no date; they are read one by one
-        values = read.to_numpy(zero_copy_only=False)
+        values = arrow.integers(read)
         if zoned:
             stamps[mask] = values
         else:
@@ -140,7 +142,7 @@ def _one_by_one(
 ) -> None:
     stamps, local, is_local, unread = into
     rows = np.flatnonzero(unread)
-    for row, text in zip(rows.tolist(), texts.take(pa.array(rows)).to_pylist(), strict=True):
+    for row, text in zip(rows.tolist(), texts.take(arrow.indices(rows)).to_pylist(), strict=True):
         moment = _iso(text) if stamp_format is None else _formatted(text, stamp_format)
         if moment is None:
             continue

@@ -9,6 +9,8 @@ import pyarrow as pa
 import pyarrow.compute as pc
 from numpy.typing import NDArray
 
+from ingest import arrow
+
 # Sums of squares of larger readings would leave the range of a double.
 LARGEST = 1e100
 _EXPONENT = r"([eE][+-]?[0-9]+)?"
@@ -25,7 +27,7 @@ def parse_numbers(
     """
     if decimal == "." and thousands is None:
         try:
-            values = pc.cast(texts, pa.float64()).to_numpy(zero_copy_only=False)
+            values = arrow.floats(pc.cast(texts, pa.float64()))
             good = np.abs(values) <= LARGEST
             if good.all():
                 return values, good
@@ -49,14 +51,13 @@ def _slow(
     # The cast of Arrow refuses what leaves the range in some versions and gives inf in others.
     huge = pc.match_substring_regex(kept, r"[eE]\+?0*[1-9][0-9]{2,}$")
     tiny = pc.match_substring_regex(kept, r"[eE]-0*[1-9][0-9]{2,}$")
-    rare = pc.or_(huge, tiny).to_numpy(zero_copy_only=False)
-    values = pc.cast(pc.if_else(pa.array(rare), "0", kept), pa.float64()).to_numpy(
-        zero_copy_only=False
-    )
-    if rare.any():
+    rare = pc.or_(huge, tiny)
+    values = arrow.floats(pc.cast(pc.if_else(rare, "0", kept), pa.float64()))
+    which = arrow.mask(rare)
+    if which.any():
         values = values.copy()
-        values[rare] = [float(text) for text in kept.filter(pa.array(rare)).to_pylist()]
-    ok = good.to_numpy(zero_copy_only=False) & (np.abs(values) <= LARGEST)
+        values[which] = [float(text) for text in kept.filter(rare).to_pylist()]
+    ok = arrow.mask(good) & (np.abs(values) <= LARGEST)
     return np.where(ok, values, 0.0), ok
 
 

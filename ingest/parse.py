@@ -18,7 +18,7 @@ import pyarrow as pa
 import pyarrow.compute as pc
 import pyarrow.csv as pacsv
 
-from ingest import exact
+from ingest import arrow, exact
 from ingest.report import Refused
 from ingest.sheet import Sheet, Texts
 
@@ -179,12 +179,12 @@ def parse(text: Text, header: Header, form: TextFormat, plain: Collection[str] =
 
 def _fast(
     text: Text, header: Header, form: TextFormat, plain: Collection[str]
-) -> list[pa.ChunkedArray] | None:
+) -> list[pa.Array] | None:
     """Columns, or None where the file is not regular enough to know the line of each row."""
     data = text.data
     end = _end_of_rows(data, header.body)
     if end == header.body:
-        return [pa.chunked_array([], pa.string()) for _ in header.names]
+        return [arrow.strings([]) for _ in header.names]
     if text.damaged or data.find(b"\0") >= 0 or len(header.names) < 2 or _lone_returns(data):
         return None
     names = [str(i) for i in range(len(header.names))]
@@ -199,7 +199,7 @@ def _fast(
         return "skip"
 
     body = memoryview(data)[header.body : end]
-    quotes = data.count(b'"', header.body)
+    quotes = data.count(b'"', header.body) if data.find(b'"', header.body) >= 0 else 0
     if quotes % 2:
         return None  # one of them is not closed
     try:
@@ -222,7 +222,7 @@ def _fast(
     n_lines = data.count(b"\n", header.body, end) + 1
     if irregular or table.num_rows != n_lines:
         return None
-    columns = table.columns
+    columns = [column.chunk(0) for column in table.columns]  # one block, one chunk
     return columns if _short_enough(columns, form.max_field_characters) else None
 
 
@@ -238,12 +238,10 @@ def _lone_returns(data: bytes) -> bool:
     return data.find(b"\r") >= 0 and data.count(b"\r") != data.count(b"\r\n")
 
 
-def _short_enough(columns: list[pa.ChunkedArray], limit: int) -> bool:
+def _short_enough(columns: list[pa.Array], limit: int) -> bool:
     for column in columns:
-        for chunk in column.chunks:
-            texts = chunk.dictionary if pa.types.is_dictionary(chunk.type) else chunk
-            longest = pc.max(pc.binary_length(texts)).as_py()
-            # Bytes first: only where they are too many does the count of characters matter.
-            if (longest or 0) > limit and pc.max(pc.utf8_length(texts)).as_py() > limit:
-                return False
+        texts = column.dictionary if pa.types.is_dictionary(column.type) else column
+        # Bytes first: only where they are too many does the count of characters matter.
+        if arrow.lengths(texts).max() > limit and pc.max(pc.utf8_length(texts)).as_py() > limit:
+            return False
     return True

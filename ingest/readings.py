@@ -235,11 +235,10 @@ def _wafers(rows: Rows, first: NDArray[np.int64]) -> tuple[NDArray[np.int64], li
     codes = [c.codes[first] for c in columns]
     mixed, _ = combined(codes)
     _, place, inverse = np.unique(mixed, return_index=True, return_inverse=True)
-    texts = [c.texts for c in columns]
-    keys = [
-        tuple(text[code] for text, code in zip(texts, one, strict=True))
-        for one in zip(*(c[place].tolist() for c in codes), strict=True)
+    texts = [
+        np.array(c.texts, object)[code[place]].tolist()
+        for c, code in zip(columns, codes, strict=True)
     ]
     if len(columns) == 3:
-        keys = [(key[0], "", key[1], key[2]) for key in keys]
-    return inverse.astype(np.int64), keys  # type: ignore[return-value]
+        texts.insert(1, [""] * len(place))
+    return inverse.astype(np.int64), list(zip(*texts, strict=True))

@@ -11,6 +11,7 @@ import pyarrow as pa
 import pyarrow.compute as pc
 from numpy.typing import NDArray
 
+from ingest import arrow
 from ingest.report import Reason
 
 Codes = NDArray[np.int32]
@@ -29,35 +30,28 @@ class Texts:
     distinct: pa.StringArray
 
     @classmethod
-    def of(cls, name: str, column: pa.ChunkedArray | pa.Array) -> Texts:
-        """Trim and encode an Arrow column of strings or of a dictionary of strings."""
-        if isinstance(column, pa.ChunkedArray):
-            column = column.unify_dictionaries().combine_chunks()
-            if isinstance(column, pa.ChunkedArray):  # of no chunks at all
-                column = pa.array([], pa.string())
+    def of(cls, name: str, column: pa.Array) -> Texts:
+        """Trim and encode an Arrow array of strings, or of a dictionary of strings."""
         if not pa.types.is_dictionary(column.type):
             column = column.dictionary_encode()
-        codes = column.indices.to_numpy(zero_copy_only=False).astype(np.int32, copy=False)
+        codes = arrow.codes(column.indices)
         distinct = column.dictionary
         trimmed = pc.utf8_trim_whitespace(distinct)
         if not trimmed.equals(distinct):
             merged = trimmed.dictionary_encode()
-            codes = merged.indices.to_numpy(zero_copy_only=False)[codes].astype(np.int32)
+            codes = arrow.codes(merged.indices)[codes]
             distinct = merged.dictionary
         return cls(name, codes, distinct)
 
     @classmethod
-    def plain(cls, name: str, column: pa.ChunkedArray) -> Texts:
+    def plain(cls, name: str, column: pa.StringArray) -> Texts:
         """Encode a column of mostly distinct texts by its rows, without looking for equal ones."""
-        whole = column.combine_chunks()
-        if isinstance(whole, pa.ChunkedArray):
-            whole = pa.array([], pa.string())
-        return cls(name, np.arange(len(whole), dtype=np.int32), whole)
+        return cls(name, np.arange(len(column), dtype=np.int32), column)
 
     @classmethod
     def constant(cls, name: str, text: str, rows: int) -> Texts:
         """The same text in every row."""
-        return cls(name, np.zeros(rows, np.int32), pa.array([text.strip()], pa.string()))
+        return cls(name, np.zeros(rows, np.int32), arrow.strings([text.strip()]))
 
     @cached_property
     def texts(self) -> list[str]:
@@ -69,8 +63,7 @@ class Texts:
         """Whether each row is empty."""
         if not len(self.distinct):
             return np.zeros(len(self.codes), bool)
-        blank = pc.equal(pc.utf8_trim_whitespace(self.distinct), "")
-        blank = blank.to_numpy(zero_copy_only=False)
+        blank = arrow.lengths(pc.utf8_trim_whitespace(self.distinct)) == 0
         return blank[self.codes]
 
     def take(self, rows: NDArray[np.int64]) -> Texts:

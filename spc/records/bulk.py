@@ -2,11 +2,13 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Sequence
+from collections.abc import Iterable, Iterator, Sequence
+from itertools import chain, islice
 from typing import Any
 
 from sqlalchemy import BigInteger, Connection, Float, Integer, LargeBinary, Table
 
+_SQLITE_VARIABLES = 900  # in one statement; SQLite allowed 999 until 2020
 _POSTGRES_TYPES = ((BigInteger, "int8"), (Integer, "int4"), (Float, "float8"))
 
 
@@ -24,30 +26,40 @@ def insert_rows(
     connection.exec_driver_sql("SELECT 1")  # begins the transaction where there is none yet
     names = ", ".join(_quoted(dialect, name) for name in columns)
     target = f"{_quoted(dialect, table.name)} ({names})"
-    cursor = connection.connection.cursor()
-    statement = ""
+    cursor: Any = connection.connection.cursor()
+    errors: Any = dialect.dbapi
     try:
         if dialect.name == "sqlite":
-            marks = ", ".join("?" * len(columns))
-            statement = f"INSERT INTO {target} VALUES ({marks})"
-            cursor.executemany(statement, rows)  # type: ignore[arg-type]
+            _insert_many(cursor, target, len(columns), iter(rows))
         else:
-            statement = f"COPY {target} FROM STDIN (FORMAT BINARY)"
-            types = [_postgres_type(table.c[name].type) for name in columns]
-            with cursor.copy(statement) as copy:  # type: ignore[attr-defined]
-                copy.set_types(types)
+            with cursor.copy(f"COPY {target} FROM STDIN (FORMAT BINARY)") as copy:
+                copy.set_types([_postgres_type(table.c[name].type) for name in columns])
                 for row in rows:
                     copy.write_row(row)
-    except dialect.dbapi.Error as error:  # type: ignore[union-attr]
+    except errors.Error as error:
         raise DBAPIError.instance(
-            statement,
-            None,
-            error,
-            dialect.dbapi.Error,  # type: ignore[union-attr]
-            dialect=dialect,
+            f"bulk insert into {target}", None, error, errors.Error, dialect=dialect
         ) from error
     finally:
         cursor.close()
+
+
+def _insert_many(cursor: Any, target: str, width: int, rows: Iterator[Sequence[Any]]) -> None:
+    """Several rows a statement: the driver gives up the interpreter at each, and so less often."""
+    marks = f"({', '.join('?' * width)})"
+    together = max(1, _SQLITE_VARIABLES // width)
+    many = f"INSERT INTO {target} VALUES {', '.join([marks] * together)}"
+    rest: list[Sequence[Any]] = []
+
+    def batches() -> Iterator[list[Any]]:
+        while batch := list(islice(rows, together)):
+            if len(batch) < together:
+                rest.extend(batch)
+                return
+            yield list(chain.from_iterable(batch))
+
+    cursor.executemany(many, batches())
+    cursor.executemany(f"INSERT INTO {target} VALUES {marks}", rest)
 
 
 def _quoted(dialect: Any, name: str) -> str:

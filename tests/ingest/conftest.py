@@ -7,9 +7,14 @@ from collections.abc import Iterator
 from pathlib import Path
 
 import pytest
+from hypothesis import settings
 
 from spc.records.sessions import open_database
 from tests.ingest.intake import Intake
+
+# The machine may be busy; a slow example is no fault.
+settings.register_profile("ingest", deadline=None)
+settings.load_profile("ingest")
 
 
 @pytest.fixture
