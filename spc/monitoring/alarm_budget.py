@@ -150,6 +150,7 @@ class ChartPace:
     context: dict[str, str]
     statistic: str
     points_per_night: float
+    chart: Chart
     expected: Rates  # a night
 
 
@@ -274,16 +275,12 @@ def _paces(
         about[row.stream_id] = (row.characteristic, row.context)
     wanted = {(number, key[1]): about[key[0]][0] for key, number in newest.items()}
     charts = _charts(connection, bay, wanted)
-    paces = [
-        ChartPace(
-            about[stream][0],
-            json.loads(about[stream][1]),
-            statistic,
-            n / nights,
-            chart_rates(charts[newest[stream, statistic], statistic]).times(n / nights),
-        )
-        for (stream, statistic), n in sorted(counts.items())
-    ]
+    paces = []
+    for (stream, statistic), n in sorted(counts.items()):
+        name, context = about[stream]
+        chart = charts[newest[stream, statistic], statistic]
+        expected = chart_rates(chart).times(n / nights)
+        paces.append(ChartPace(name, json.loads(context), statistic, n / nights, chart, expected))
     return tuple(paces), bare / nights
 
 
