@@ -20,7 +20,7 @@ from spc.records import evaluations, limits
 
 @dataclass(frozen=True)
 class Flyer:
-    """One site reading in the characteristic's unit, and how many site sigmas it is off its wafer."""
+    """One site reading, and how far it is off its wafer in standard deviations of a site."""
 
     lot: str
     layer: str

@@ -133,7 +133,11 @@ def _spread_limits(
     z = limits.scores(value)
     # A spread known to be zero: any spread at all is beyond it.
     z = np.where(np.isnan(z) & (sizes.df > 0), np.where(value > 0, SCORE_LIMIT, 0.0), z)
-    return _frame(limits.center, limits.lower, limits.upper, limits.sigma, z)
+    # Two wafer means alike to the last digit read say more of the rounding than of the process.
+    coarse = sizes.df < 2
+    lower = np.where(coarse & np.isfinite(limits.lower), 0.0, limits.lower)
+    z = np.where(coarse, np.maximum(z, -3.0), z)
+    return _frame(limits.center, lower, limits.upper, limits.sigma, z)
 
 
 def _distance_limits(value: FloatArray, sizes: PointSizes) -> dict[str, FloatArray]:
