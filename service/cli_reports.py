@@ -95,7 +95,7 @@ def capability(
     as_json: JsonOption = False,
 ) -> None:
     """Write the monthly capability review, as an HTML page, a workbook and as JSON."""
-    from service.pages import write_review
+    from service.review import write_review
 
     session = open_session(config)
     with progress_bar("reviewing") as show:

@@ -37,7 +37,6 @@ IntArray = NDArray[np.int64]
 Progress = Callable[[str, int, int], None]
 
 MONTHS = 12
-GOAL = 1.33  # Ppk that counts as capable (common practice, no source)
 _MONTH = re.compile(r"(\d{4})-(0[1-9]|1[0-2])")
 
 
@@ -181,7 +180,9 @@ class _Room:
         out = [self._unit({}, every, lambda m: whole.get(m))]
         for s in every:
             found = {m: streams[s * months + m] for m in range(months) if s * months + m in streams}
-            out.append(self._unit(json.loads(readings.keys[s]), [s], found.get))
+            context = json.loads(readings.keys[s])
+            ordered = {name: context[name] for name in self._one.stream_by if name in context}
+            out.append(self._unit(ordered, [s], found.get))
         return out
 
     def tools(self) -> list[ReviewUnit]:
@@ -226,9 +227,7 @@ class _Room:
     def _stability(self, streams: list[int], m: int, narrow: bool, known: bool) -> Stability:
         span = (self._window.starts_us[m], self._window.starts_us[m + 1])
         keys = {(self._one.name, self._readings.keys[s]) for s in streams}
-        touching = [
-            t for t in self._timed if t.lies_on(span) and (not narrow or keys & t.streams)
-        ]
+        touching = [t for t in self._timed if t.lies_on(span) and (not narrow or keys & t.streams)]
         numbers = [self._ids[s] for s in streams]
         rung = [self._rung[n, m] for n in numbers if n is not None and (n, m) in self._rung]
         return stability(rung, touching, known)

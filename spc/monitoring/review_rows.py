@@ -170,9 +170,7 @@ def _one_of(study: Capability, unit: int) -> Capability:
     return replace(study, **changes)
 
 
-def _unit_study(
-    found: UnitStatistics, unit: int, study: Capability | None, ask: Ask
-) -> UnitStudy:
+def _unit_study(found: UnitStatistics, unit: int, study: Capability | None, ask: Ask) -> UnitStudy:
     row = empty_row()
     values = found.readings_of(unit)
     if not found.n_readings[unit]:

@@ -3,12 +3,14 @@
 A month of a stream is *not stable* when
 * an excursion to act on (tier ``act``) that shows on the stream lies on the month, unless people
   closed it as a false alarm or it is a silence (of which the process knows nothing); or
-* its charts rang more often than they do by chance: a new row of signals of a chart is one event,
-  and the events of the month are more than a Poisson count of the expected false events gives
-  with probability CHANCE. Expected are those of the stream's own limits (`chart_rates`): with an
-  estimated baseline and with the autocorrelation that the baseline is sure of.
+* its charts rang more often than they do by chance: a lot at which a new row of signals begins is
+  one event, and the events of the month are more than a Poisson count of the expected false events
+  of all its charts gives with probability CHANCE. Expected are those of the stream's own limits
+  (`chart_rates`): with an estimated baseline and with the autocorrelation that the baseline is
+  sure of.
 It is *stable* when neither holds and at least one monitored point with limits lies in the month;
-else nothing is known (None). A characteristic as a whole takes all its streams together.
+else nothing is known (None). A characteristic as a whole, or a tool, is stable when each of its
+streams of which something is known is, and no excursion to act on lies on it.
 """
 
 from __future__ import annotations
@@ -73,7 +75,9 @@ class TimedExcursion:
         return self.first_us < span[1] and self.last_us >= span[0]
 
 
-def timed_excursions(connection: Connection, as_of: datetime, as_of_us: int) -> list[TimedExcursion]:
+def timed_excursions(
+    connection: Connection, as_of: datetime, as_of_us: int
+) -> list[TimedExcursion]:
     """Excursions known at a clock, with their spans.
 
     One without an end goes on to its last signal where it is a matter of single signals, else to
@@ -136,15 +140,22 @@ def _chart(one: Characteristic, statistic: str, entry: Mapping[str, Any], n_poin
 
 
 def _events(connection: Connection, window: Window) -> dict[StreamMonth, int]:
-    """New rows of signals: points with a rule whose neighbour in front has none."""
-    out: dict[StreamMonth, int] = defaultdict(int)
+    """Lots at which a new row of signals of some chart of a stream begins.
+
+    A point begins a row when its neighbour in front has no signal. Charts of one stream that begin
+    at one lot (a flyer moves spread and map together) are one event.
+    """
+    found: set[tuple[StreamMonth, str, str]] = set()
     before: tuple[int, str, int] | None = None
-    for stream, statistic, month, _rules, place in records.signals(
+    for stream, statistic, month, lot, layer, place in records.signals(
         connection, window.starts_us, window.as_of_us
     ):
         if before != (stream, statistic, place - 1):
-            out[stream, month] += 1
+            found.add(((stream, month), lot, layer))
         before = (stream, statistic, place)
+    out: dict[StreamMonth, int] = defaultdict(int)
+    for key, _lot, _layer in found:
+        out[key] += 1
     return out
 
 
@@ -153,7 +164,7 @@ def stability(
 ) -> Stability:
     """Verdict of a unit from the charts of its streams and the excursions on it in the month.
 
-    `known` : whether the unit has wafers in the month; without any there is no verdict.
+    `known` : whether the unit has wafers in the month; without any it is not called stable.
     """
     parts = list(rung)
     total = Rung(
@@ -162,7 +173,7 @@ def stability(
     ids = tuple(sorted(t.excursion.id for t in touching))
     acted = tuple(sorted(t.excursion.id for t in touching if t.counts))
     verdict: bool | None = None
-    if acted or rings_too_often(total):
+    if acted or any(rings_too_often(part) for part in parts):
         verdict = False
     elif total.points and known:
         verdict = True

@@ -174,7 +174,7 @@ def _pattern(
     return _Pattern(
         effect,
         df,
-        np.bincount(unit[known], minlength=n),
+        np.bincount(unit[known], minlength=n).astype(np.int64),
         np.bincount(unit[known], weights=effect[known] ** 2, minlength=n),
     )
 
@@ -205,9 +205,7 @@ def _reduced(
     lots = np.unique(
         np.column_stack([units.of_wafer, readings.lot])[used], axis=0, return_inverse=True
     )[1]
-    return WaferSummary(
-        units.of_wafer[used], lots.ravel(), count[used], mean[used], squares[used]
-    )
+    return WaferSummary(units.of_wafer[used], lots.ravel(), count[used], mean[used], squares[used])
 
 
 def _padded(components: Components, n: int) -> Components:
@@ -242,9 +240,11 @@ def _sigmas(
     """Overall and within-lot sigma, and the 95 % interval of the mean."""
     lots, wafers, total = counts
     lot, wafer, site = (np.nan_to_num(getattr(components, k)) for k in ("lot", "wafer", "site"))
-    safe = [np.maximum(c, 1) for c in counts]
+    at_least = [np.maximum(c, 1) for c in counts]
     with np.errstate(divide="ignore", invalid="ignore"):
-        sample = NestedSample(lot, wafer, site, *safe, signature, lost)
+        sample = NestedSample(
+            lot, wafer, site, at_least[0], at_least[1], at_least[2], signature, lost
+        )
         whole, inner = sample.overall(), sample.within_lot()
         low, high = sample.mean_interval(mean)
     several = (lots > 1) & np.isfinite(components.lot)

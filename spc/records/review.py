@@ -43,9 +43,7 @@ def streams_of(connection: Connection, characteristic: str, as_of_us: int) -> di
     """Id of each stream by its context (JSON) that had a wafer by then."""
     seen = (
         select(wafer_results.c.stream_id)
-        .where(
-            wafer_results.c.stream_id == streams.c.id, wafer_results.c.measured_us <= as_of_us
-        )
+        .where(wafer_results.c.stream_id == streams.c.id, wafer_results.c.measured_us <= as_of_us)
         .exists()
     )
     query = select(streams.c.context, streams.c.id).where(
@@ -143,8 +141,8 @@ def point_counts(
 
 def signals(
     connection: Connection, starts_us: Sequence[int], as_of_us: int
-) -> list[tuple[int, str, int, str, int]]:
-    """Monitored points that complete a rule: stream_id, statistic, month, rules, place.
+) -> list[tuple[int, str, int, str, str, int]]:
+    """Monitored points that complete a rule: stream_id, statistic, month, lot, layer, place.
 
     `place` counts the points of the stream and statistic in the span in the order of time, so that
     neighbours have consecutive places.
@@ -158,14 +156,16 @@ def signals(
             p.stream_id,
             p.statistic,
             _month(p.at_us, starts_us).label("month"),
-            p.rules,
+            p.lot,
+            p.layer,
             place.label("place"),
+            p.rules,
         )
         .where(*_judged(starts_us, as_of_us))
         .subquery()
     )
     query = (
-        select(inner)
+        select(*[column for column in inner.c if column.name != "rules"])
         .where(inner.c.rules != "")
         .order_by(inner.c.stream_id, inner.c.statistic, inner.c.place)
     )
