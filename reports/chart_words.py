@@ -71,8 +71,9 @@ def broken_rules(alt: Any, frame: Frame, places: Sequence[float]) -> list[Any]:
         side = -9 if at > 0.62 else 9 if at < 0.38 else 0
         y = frame.y(point.value) + (0 if side else -15 if above else 16)
         y = min(max(y, 8), frame.size.height - (28 if frame.series.events else 8))
-        while any(abs(y - other) < frame.size.font + 2 for other in used):
-            y += (frame.size.font + 2) * (-1 if above and y > 24 else 1)
+        step = frame.size.font + 2
+        free = (y + k * step * sign for k in range(6) for sign in ((-1, 1) if above else (1, -1)))
+        y = next((c for c in free if c > 4 and all(abs(c - o) >= step for o in used)), y)
         used.append(y)
         words = {"t": places[i], "w": " + ".join(rule_words(rule) for rule in rules[:2])}
         align = "right" if side < 0 else "left" if side else "center"

@@ -78,12 +78,14 @@ def listing(
     if as_json:
         print_json(documents)
         return
-    from reports.sentences import excursion_line
+    from reports.numbers import LocalClock
+    from reports.views_index import excursion_line
+    from service import clock
 
     if not documents:
         say("No excursions." if not status else "No excursions of that status.")
     for document in documents:
-        say(excursion_line(document, zone))
+        say(excursion_line(document, LocalClock(zone, clock.now())))
 
 
 @app.command()

@@ -66,7 +66,8 @@ def _make_room(folder: Path) -> None:
 
 
 def _result(session: Session, demo: Demo, last_night: dict[str, Any]) -> DemoResult:
-    from reports.sentences import excursion_line
+    from reports.numbers import LocalClock
+    from reports.views_index import excursion_line
     from spc.records import findings
     from spc.records.sessions import reading
 
@@ -75,13 +76,14 @@ def _result(session: Session, demo: Demo, last_night: dict[str, Any]) -> DemoRes
         found = findings.listed(connection, statuses=("open", "contained"))
     documents = [findings.as_contract(e, zone) for e in found]
     documents.sort(key=lambda d: (d["tier"] != "act", d["id"]))
+    clock = LocalClock(zone, demo.nights[-1])
     act = [d for d in documents if d["tier"] == "act"]
     lines = [
         f"An invented bay was written to {demo.config.parent} and {len(demo.nights)} nights were "
         f"run on its {demo.readings:,} site readings.".replace(",", "\u2009"),
         f"Found: {len(act)} to act on, {len(documents) - len(act)} to watch.",
         "",
-        *(f"  {excursion_line(d, zone)}" for d in act),
+        *(f"  {excursion_line(d, clock)}" for d in act),
         "",
         f"The morning page: {last_night['report']}",
         f"The mail:         {session.bay.path(session.bay.settings.mail.folder)}",

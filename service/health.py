@@ -113,11 +113,12 @@ def _mail(session: Session) -> Finding:
 
 
 def _feeds(session: Session) -> Finding:
-    from ingest.late import late_feeds
+    from ingest.load import late_feeds
     from spc.records.sessions import reading
+    from spc.records.stamps import to_us
 
     with reading(session.engine) as connection:
-        late = late_feeds(connection, session.bay, clock.now())
+        late = late_feeds(connection, session.bay, to_us(clock.now()))
     names = [feed.name for feed in late]
     text = f"late: {', '.join(names)}" if names else "none is late"
     return Finding("feeds", not names, text, {"late": names})

@@ -63,6 +63,7 @@ def run_night(
         When another pass holds the lock for longer than `wait_seconds`.
     """
     from spc.monitoring.evaluation import evaluate
+    from spc.monitoring.expected import expected_tonight
     from spc.monitoring.triage import update_excursions
 
     waiting = _tell_waiting
@@ -78,6 +79,7 @@ def run_night(
         )
         with session.engine.begin() as connection:
             changes = update_excursions(connection, session.bay, as_of, progress)
+            expected = expected_tonight(connection, session.bay, as_of)
         _LOG.info("triaged", extra={"opened": changes.opened, "updated": changes.updated})
         document = {
             "as_of": as_of.astimezone(session.bay.settings.bay.zone).isoformat(),
@@ -86,7 +88,7 @@ def run_night(
             "streams": evaluation.streams,
             "points_evaluated": evaluation.points_evaluated,
             "signals": evaluation.signals,
-            "expected_false_signals": changes.expected_false_signals,
+            "expected_false_signals": expected,
             "excursions": {
                 "opened": changes.opened,
                 "updated": changes.updated,
@@ -104,7 +106,7 @@ def _report_and_send(
     progress: Progress,
 ) -> Night:
     from reports.outbox import queue, send_due
-    from service.pages import write_night
+    from service.pages import write_index, write_night
 
     progress("writing the report", 0, 1)
     with session.engine.begin() as connection:
@@ -112,6 +114,7 @@ def _report_and_send(
         queued = queue(connection, report.messages, as_of)
         document["report"] = str(report.file)
         _record_pass(connection, as_of, document)
+    write_index(session, as_of)
     delivery = send_due(session.engine, carrier(session), clock.now, stop=stop, every=True)
     document["mail"] = {"queued": queued, "sent": delivery.sent, "failed": delivery.failed}
     return Night(document, report.text, delivery.errors)
@@ -169,7 +172,10 @@ def _take_in(
 ) -> IngestReport:
     from ingest.load import take_in
 
-    return take_in(session.engine, session.bay, as_of, stop=stop, progress=progress)
+    def show(done: int, total: int, what: str) -> None:
+        progress(what, done, total)
+
+    return take_in(session.engine, session.bay, as_of, stop=stop, progress=show)
 
 
 def _tell_waiting() -> None:

@@ -37,3 +37,8 @@ def mean_gaps(connection: Connection, stream_ids: Sequence[int]) -> dict[int, fl
             if lots >= 5:
                 found[int(stream)] = (last - first) / (lots - 1)
     return found
+
+
+def newest(connection: Connection) -> int | None:
+    """Clock of the newest finished pass, None when there was none."""
+    return connection.scalar(select(func.max(passes.c.as_of_us)).where(passes.c.finished == 1))
