@@ -69,6 +69,8 @@ __all__ = [
     "attribute",
 ]
 
+# A family counts as moved from these odds on (four to one).
+_MOVED = 0.8
 _CELL_FIELDS = (
     "series", "point", "lot", "t_process", "t_measure", "residual", "var_own", "var_lot",
     "monitoring", "levels", "t_level",
@@ -198,7 +200,7 @@ def _sizes(state: State, found: Found) -> tuple[FamilySize, ...]:
                 se=se,
                 sigmas=value / float(state.noise.sigma[family]),
                 gain=float(fit.gain[i]),
-                moved=bool(fit.probability[i] > 0.5),
+                moved=bool(fit.probability[i] > _MOVED),
             )
         )
     return tuple(out)

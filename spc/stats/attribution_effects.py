@@ -38,7 +38,7 @@ class Onset:
 class FamilySize:
     """Size in one family (characteristic x statistic): the change of a step, the change reached at
     the last affected cell of a ramp. `low`, `high` bound it; `sigmas` is `value` over the sigma of
-    a plotted point; `gain` is its log Bayes factor, `moved` whether it likelier moved than not."""
+    a plotted point; `gain` is its log Bayes factor, `moved` whether it moved (odds of 4 to 1)."""
 
     family: int
     characteristic: int

@@ -181,7 +181,7 @@ class AttributionOptions:
     prior_sigmas: float = 2.5
     confidence: float = 0.95
     shape_prior: dict[str, float] = field(
-        default_factory=lambda: {"step": 0.45, "ramp": 0.25, "window": 0.1, "lot": 0.2}
+        default_factory=lambda: {"step": 0.35, "ramp": 0.35, "window": 0.1, "lot": 0.2}
     )
 
     def __post_init__(self) -> None:

@@ -1,9 +1,11 @@
 """Greedy forward choice with joint refits: from one explanation to all of them.
 
 The best explanation is accepted while chance would not score as high, explained away, and the next
-is looked for in what is left. After each acceptance all effects are refitted in turn on what the
-others leave (backfitting), so an early, greedy choice can still change its onset, its form and its
-level; effects that one cause explains at least as well as all of them are made one.
+is looked for in what is left. A new effect must rest on something new (options.since); once it is
+found, all that is known counts for its level, onset and form. After each acceptance all effects are
+refitted in turn on what the others leave (backfitting), so an early, greedy choice can still change
+its onset, its form and its level; effects that one cause explains at least as well as all of them
+are made one.
 """
 
 from __future__ import annotations
@@ -96,7 +98,7 @@ class Search:
         alpha = self.state.options.alpha
         for i, found in enumerate(self.found):
             left = self.left([found])
-            strength = self.state.strength(found.candidate, left, found.fresh)
+            strength = self.state.strength(found.candidate, left, fresh=False)
             self.found[i] = replace(found, strength=strength)
         self.found = [
             f for f in self.found if not f.fresh or self.calibration.p_value(f.strength) <= alpha
@@ -106,7 +108,7 @@ class Search:
         self, candidate: Candidate, residual: FloatArray, previous: int | None = None
     ) -> Found | None:
         y = self.state.whitened(residual)
-        profile = self.state.look(candidate, y, fresh=previous is None)
+        profile = self.state.look(candidate, y, fresh=False)
         if profile is None or not np.isfinite(profile.score):
             return None
         fit = self.state.fit(candidate, profile, residual)
@@ -114,7 +116,7 @@ class Search:
 
     def _relevel(self, i: int) -> None:
         found = self.found[i]
-        best = self.state.best(self.left([found]), found.fresh, self._mask([found]))
+        best = self.state.best(self.left([found]), False, self._mask([found]))
         if best is None or best.candidate.key == found.candidate.key:
             return
         if best.score > found.score + 0.5 and _overlap(best, found) > 0.3:
@@ -134,8 +136,7 @@ class Search:
             group = [f for f in self.found if _onsets_meet(f, found)]
             if len(group) < 2:
                 continue
-            fresh = all(f.fresh for f in group)
-            best = self.state.best(self.left(group), fresh, self._mask(group))
+            best = self.state.best(self.left(group), False, self._mask(group))
             if best is None or best.score < sum(f.score for f in group) - _MERGE_SLACK:
                 continue
             if any(_overlap(f, best) == 0.0 for f in group):

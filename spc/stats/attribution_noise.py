@@ -37,8 +37,9 @@ class Noise:
     shared by the streams of a lot), `correlation` (F, F) of lots between families.
     Series arrays: `phi`, `center` (variance of the baseline centre), `series_q` and
     `series_points` (precision and points of the monitored cells); `shared_series` and `shared_q`
-    list the series of each group and their precision in it, from `shared_start`. `many` are the cells of
-    points with several cells, sorted by point; `many_first`, `many_size` index those points.
+    list the series of each group and their precision in it, from `shared_start`. `many` are the
+    cells of points with several cells, sorted by point; `many_first`, `many_size` index those
+    points.
     """
 
     weight: FloatArray

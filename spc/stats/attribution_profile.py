@@ -3,7 +3,8 @@
 The same score as the coarse scan, at the resolution of single events (distinct times) of the
 level, with the end of the fault free. The form is chosen by its marginal likelihood (sum over
 onsets and ends under their priors; BIC is the large-sample form of it). The confidence set of the
-onset holds the likeliest events whose posterior under a flat prior reaches the level.
+onset holds the likeliest events whose posterior, all forms together and under a flat prior of the
+onset, reaches the level.
 """
 
 from __future__ import annotations
@@ -92,7 +93,8 @@ def profile_level(
 
 @dataclass(frozen=True)
 class _Forms:
-    """Log posterior weights on the bins: step and ramp (A, A+1) over (start, end) bins, lots."""
+    """Log posterior weights on the bins: step and ramp (k, k) over (start, end) bins, lots; the
+    same without priors (`raw_`); `onset` (k,) over starts under a flat prior, all forms."""
 
     bins: IntArray
     step: FloatArray
@@ -101,6 +103,7 @@ class _Forms:
     raw_step: FloatArray
     raw_ramp: FloatArray
     raw_lot: FloatArray
+    onset: FloatArray
 
 
 @dataclass(frozen=True)
@@ -193,12 +196,15 @@ class _Look:
         log = {name: np.log(value) for name, value in self.options.shape_prior.items()}
         open_step, open_ramp, closed = self._priors(k)
         step_prior = closed + log["window"]
+        flat_step, flat_ramp = step_prior.copy(), step_prior - np.log(2.0)
+        ramp_prior = flat_ramp.copy()
         step_prior[:, -1] = open_step + log["step"]
-        ramp_prior = closed + log["window"] - np.log(2.0)
         ramp_prior[:, -1] = open_ramp + log["ramp"]
+        flat_step[:, -1], flat_ramp[:, -1] = log["step"] - np.log(k), log["ramp"] - np.log(k)
         return _Forms(
             bins, raw_step + step_prior, raw_ramp + ramp_prior, raw_lot + prior_lot + log["lot"],
             raw_step, raw_ramp, raw_lot,
+            np.logaddexp.reduce(np.logaddexp(raw_step + flat_step, raw_ramp + flat_ramp), axis=1),
         )  # fmt: skip
 
     def _over_families(self, b: FloatArray) -> FloatArray:
@@ -265,16 +271,14 @@ class _Look:
             table[:, -1] = -np.inf
         else:
             table[:, :-1] = -np.inf
-        onset = self._onset(raw, table, bins)
+        onset = self._onset(found.onset, bins)
         a, b = np.unravel_index(int(table.argmax()), table.shape)
         shape = Shape(kind, float(bins[a]), float(bins[b + 1]))
         return Profile(score, float(raw[a, b]), shape, forms, (float(bins[a]), *onset))
 
-    def _onset(self, raw: FloatArray, table: FloatArray, bins: FloatArray) -> tuple[float, float]:
-        """Return earliest and latest of the confidence set: flat prior over onsets, ends
-        weighted as in the chosen form."""
-        flat = np.where(np.isfinite(table), raw, -np.inf)
-        weight = np.logaddexp.reduce(flat, axis=1)
+    def _onset(self, weight: FloatArray, bins: FloatArray) -> tuple[float, float]:
+        """Return earliest and latest of the confidence set of the onset. What looks like a step
+        may be a drift that began earlier: the set counts all forms by their weight."""
         p = np.exp(weight - weight.max())
         p /= p.sum()
         order = np.argsort(-p)

@@ -179,7 +179,9 @@ class State:
         rough = self.candidates(residual, fresh, touching)
         if not rough:
             return None
-        rough = [c for c in rough if c.score > rough[0].score - _CLOSE][:_KEEP]
+        # The coarse score may be off by a good part where its windows fit badly.
+        near = max(_CLOSE, 0.5 * rough[0].score)
+        rough = [c for c in rough if c.score > rough[0].score - near][:_KEEP]
         y = self.whitened(residual)
         rough += self._conjunctions(rough[:_REFINE], y, fresh)
         looked = [(c, p) for c in rough if (p := self.look(c, y, fresh)) is not None]
@@ -208,7 +210,8 @@ class State:
                 continue
             candidate = self.candidate(column, int(np.bincount(known).argmax()))
             shape = found.profile.shape
-            pattern = pattern_of(column, candidate.level, shape, self.evidence)
+            same_time = replace(column, time=found.candidate.column.time)
+            pattern = pattern_of(same_time, candidate.level, shape, self.evidence)
             theirs = np.isin(self.evidence.cell_family, found.fit.families) & (pattern != 0.0)
             if jaccard(found.fit.cells, np.flatnonzero(theirs)) < 0.5:
                 continue

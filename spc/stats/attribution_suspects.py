@@ -66,10 +66,10 @@ def suspects_of(
     touching[found.fit.cells] = True
     y = state.whitened(residual)
     rivals: list[tuple[Candidate, Profile]] = []
-    for candidate in state.candidates(residual, found.fresh, touching)[: _SUSPECTS + 3]:
+    for candidate in state.candidates(residual, False, touching)[: _SUSPECTS + 3]:
         if candidate.key == found.candidate.key:
             continue
-        profile = state.look(candidate, y, found.fresh)
+        profile = state.look(candidate, y, False)
         if profile is not None:
             rivals.append((candidate, profile))
     rivals.sort(key=lambda pair: -pair[1].score)
@@ -114,8 +114,10 @@ def _exact_aliases(state: State, found: Found) -> list[Level]:
         if not len(known):
             continue
         level = int(np.bincount(known).argmax())
-        theirs = np.flatnonzero(affected & (pattern_of(column, level, shape, evidence) != 0.0))
-        if jaccard(mine, theirs) >= ALIAS:
+        # The window runs on the effect's own time: a batch is coated before its lot is exposed.
+        same_time = replace(column, time=found.candidate.column.time)
+        theirs = affected & (pattern_of(same_time, level, shape, evidence) != 0.0)
+        if jaccard(mine, np.flatnonzero(theirs)) >= ALIAS:
             out.append(Level(column.factors, column.names[level]))
     return out
 

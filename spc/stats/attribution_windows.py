@@ -18,7 +18,7 @@ from spc.stats.attribution_evidence import (
 )
 from spc.stats.attribution_noise import Noise, ar1_inflation
 
-_WIDTHS = (2, 3, 5, 8, 13)
+_WIDTHS = (2, 3, 5, 8, 13, 21, 34)
 _TINY = 1e-300
 
 
@@ -83,9 +83,9 @@ class OffsetModel:
     baseline centres, on which all monitored cells of the pair's series tell, and the unknown part
     of the level's own usual offset, on which only the level's cells tell. `center` and `own` are
     c / (1 + c A) of the two (A the information on it), `cross` the information that the level's
-    cells share with the centres, `tells` (k,) what each of them tells on the centres. `phi` autocorrelation, `series` how many series, `scale` and
-    `series_scale` 1/AR(1) inflation of the level's and of its series' totals; `owner`, `member`
-    list the series of each pair.
+    cells share with the centres, `tells` (k,) what each of them tells on the centres. `phi`
+    autocorrelation, `series` how many series, `scale` and `series_scale` 1/AR(1) inflation of the
+    level's and of its series' totals; `owner`, `member` list the series of each pair.
     """
 
     center: FloatArray

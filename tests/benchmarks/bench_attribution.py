@@ -114,7 +114,7 @@ def watch(tally: Tally, bay: Bay, faults: tuple[Fault, ...], seed: int, nights: 
     """Watch one seed of a scenario night by night."""
     evidence = bay.with_faults(*faults).simulate(seed)
     truths = [truth_of(evidence, bay, f) for f in faults]
-    begin = max((f.start for f in faults), default=bay.baseline_days + 1.0)
+    begin = max((f.start for f in faults), default=bay.baseline_days + 3.0)
     night = np.ceil(begin - PASS) + PASS
     last = night + nights - 1 if faults else bay.days - 1.0
     previous: tuple[Effect, ...] = ()
