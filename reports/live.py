@@ -9,8 +9,8 @@ from typing import Any
 from reports.style import role_variables
 from reports.time_axis import TimeAxis
 
-# Room around the plot for its axes and names; the page's script takes it off the width of its place,
-# so that charts one below the other share their time axis.
+# Room around the plot for its axes and names; the page's script takes it off the width of the
+# place, so that charts one below the other share their time axis.
 MARGINS = {"left": 44, "right": 122, "top": 24, "bottom": 26}
 _IN_VIEW = "datum.t >= from && datum.t <= to"
 

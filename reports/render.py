@@ -70,9 +70,10 @@ def svg(spec: Spec, name: str, label: str) -> str:
 
     drawing = vl_convert.vegalite_to_svg(dict(spec), vl_version=_VL_VERSION)
     drawing = drawing[drawing.index("<svg") :]
-    for own in sorted(set(_IDS.findall(drawing)), key=len, reverse=True):
-        drawing = drawing.replace(f'id="{own}"', f'id="{name}-{own}"')
-        drawing = drawing.replace(f"url(#{own})", f"url(#{name}-{own})")
+    # the renderer counts its ids over all drawings of a process; a page must not depend on that
+    for i, own in enumerate(dict.fromkeys(_IDS.findall(drawing))):
+        drawing = drawing.replace(f'id="{own}"', f'id="{name}-{i}"')
+        drawing = drawing.replace(f"url(#{own})", f"url(#{name}-{i})")
     drawing = _lean(drawing)
     head, rest = drawing.split(">", 1)
     size = dict(re.findall(r'\b(width|height|viewBox)="([^"]*)"', head))

@@ -164,7 +164,7 @@ def _excursion(item: MonthExcursion, clock: LocalClock, up: str) -> dict[str, st
 # ---- tables -------------------------------------------------------------------------------------
 
 
-def index_words(row: CapabilityRow, name: str) -> str:
+def index_words(row: CapabilityRow, name: str, key: str = "review.index") -> str:
     """An index with its interval: never bare where an interval is known."""
     value = getattr(row, name)
     if value is None:
@@ -172,7 +172,7 @@ def index_words(row: CapabilityRow, name: str) -> str:
     if name not in row.intervals:
         return index(value)
     low, high = row.intervals[name]
-    return text("review.index", value=index(value), low=index(low), high=index(high))
+    return text(key, value=index(value), low=index(low), high=index(high))
 
 
 def stable_words(row: CapabilityRow) -> str:
@@ -183,15 +183,20 @@ def stable_words(row: CapabilityRow) -> str:
 
 
 def capability_table(
-    rows: tuple[CapabilityRow, ...], name: str, caption: str, view: ReviewPage
+    rows: tuple[CapabilityRow, ...], table: str, caption: str, view: ReviewPage
 ) -> Table:
     """Capability of several rows: indices with intervals, verdict and ppm."""
     made = []
     for row in rows:
+        indices = [
+            number_cell(getattr(row, key), index_words(row, key, "review.index_cell"))
+            for key in INDICES
+        ]
+        name = Cell(context_words(row.context)) if row.context else name_cell(row.characteristic)
         cells = [
-            name_cell(row.characteristic) if not row.context else Cell(context_words(row.context)),
+            name,
             number_cell(row.n_lots, count(row.n_lots)),
-            *(number_cell(getattr(row, key), index_words(row, key)) for key in INDICES),
+            *indices,
             Cell(stable_words(row)),
             number_cell(row.ppm_expected, ppm(row.ppm_expected)),
             number_cell(row.ppm_observed, ppm(row.ppm_observed)),
@@ -206,7 +211,7 @@ def capability_table(
         Column(text("column.ppm_expected"), "ppm_expected", "number"),
         Column(text("column.ppm_observed"), "ppm_observed", "number"),
     )
-    return Table(name, caption, columns, tuple(made), file=f"capability-{view.month}-{name}")
+    return Table(table, caption, columns, tuple(made), file=f"capability-{view.month}-{table}")
 
 
 # ---- a characteristic ---------------------------------------------------------------------------
@@ -258,7 +263,7 @@ def _facts(row: CapabilityRow) -> tuple[tuple[str, str], ...]:
         (text("fact.ppm_observed"), ppm(row.ppm_observed)),
     ]
     if row.gauge_share is not None:
-        facts.append((text("component.gauge.name"), percent(row.gauge_share)))
+        facts.append((text("fact.gauge"), percent(row.gauge_share)))
     return tuple(facts)
 
 

@@ -26,7 +26,7 @@ PALETTE: dict[str, tuple[str, str]] = {
     "edge": ("#8f6200", "#d9a83f"),
     "data": ("#16578a", "#86bfea"),
     "trace": ("#93a4b4", "#5d6c7c"),
-    "base": ("#6d7682", "#98a1ad"),
+    "base": ("#636c78", "#98a1ad"),
     "calm": ("#eef0ee", "#23282e"),
     "alert": ("#a8320a", "#ff9466"),
     "onset": ("#e3d9ef", "#463a5c"),

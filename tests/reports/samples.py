@@ -118,7 +118,7 @@ def series(
         points.append(
             ChartPoint(
                 at=stamp,
-                lot=lots[i % len(lots)] if lots and after else f"L{4200 + i:05d}",
+                lot=lots[i % len(lots)] if lots else f"L{4200 + i:05d}",
                 value=value,
                 n_wafers=wafers,
                 n_sites=wafers * 13,
@@ -148,7 +148,11 @@ def series(
         upper_spec=center + spec if spec else None,
         onset=onset() if affected else None,
         events=found if events else (),
-        limit_sets=(LimitSet(points[30].at, "automatic", "yellowbay", "first 30 points"),),
+        limit_sets=(
+            LimitSet(
+                points[min(30, len(points) - 1)].at, "automatic", "yellowbay", "first 30 points"
+            ),
+        ),
         affected=affected,
     )
 
