@@ -101,10 +101,9 @@ def site_spread(wafers: Wafers, at: SignatureAt) -> WaferStatistics:
     share = np.where(judged, share / np.maximum(n, 1), 0.0)
     factor = np.where(member, 1.0 - share, 1.0 + share)
     df = np.maximum(n - 1.0, 0.0)
-    bare = wafers.table["n_sites"] * (n == 0)  # wafers kept as sums alone
-    squares = np.where(bare > 0, wafers.table["squares"], squares / factor)
-    freedom = np.where(bare > 0, np.maximum(bare - 1.0, 0.0), df)
-    found = WaferStatistics(np.asarray(squares, np.float64), freedom)
+    # Wafers kept as sums alone still have the signature in their spread: it is not charted.
+    squares = np.where(n == 0, wafers.table["squares"], squares / factor)
+    found = WaferStatistics(np.asarray(squares, np.float64), df)
     off = rest - _medians(np.where(use, rest, np.nan), wafer, size)[wafer]
     found.sigmas = off / at.sigma[set_of]
     far = known & (np.abs(np.nan_to_num(found.sigmas)) > FLYER_SIGMAS)

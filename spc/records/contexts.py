@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import hashlib
 import json
 from collections.abc import Iterable, Mapping, Sequence
 
@@ -24,11 +23,6 @@ def context_text(columns: Mapping[str, str]) -> str:
     return json.dumps(kept, sort_keys=True, ensure_ascii=False)
 
 
-def context_digest(text: str) -> str:
-    """SHA-256 of the JSON, in hexadecimal."""
-    return hashlib.sha256(text.encode()).hexdigest()
-
-
 class ContextStore:
     """The contexts seen so far in one transaction; asks the database only for new ones."""
 
@@ -36,6 +30,10 @@ class ContextStore:
         self._connection = connection
         self._columns: dict[int, dict[str, str]] = {}
         self._ids: dict[str, int] = {}
+        # Imported here: that module takes `chunks` from this one.
+        from spc.records.interned import Interned
+
+        self._interned = Interned(contexts, "columns")
 
     def load(self, ids: Iterable[int]) -> None:
         """Read the contexts of these ids that are not known yet."""
@@ -55,18 +53,9 @@ class ContextStore:
         """Ids of contexts, storing those that the database lacks."""
         texts = [context_text(one) for one in wanted]
         new = sorted({text for text in texts if text not in self._ids})
-        digests = {context_digest(text): text for text in new}
-        self._find(digests)
-        missing = [d for d, text in digests.items() if text not in self._ids]
-        if missing:
-            rows = [{"digest": d, "columns": digests[d]} for d in missing]
-            self._connection.execute(contexts.insert(), rows)
-            self._find({d: digests[d] for d in missing})
+        if new:
+            numbers = self._interned.ids(self._connection, new)
+            for text, number in zip(new, numbers, strict=True):
+                self._ids[text] = number
+                self._columns[number] = json.loads(text)
         return [self._ids[text] for text in texts]
-
-    def _find(self, digests: Mapping[str, str]) -> None:
-        for part in chunks(list(digests)):
-            query = select(contexts.c.id, contexts.c.digest).where(contexts.c.digest.in_(part))
-            for number, digest in self._connection.execute(query):
-                self._ids[digests[digest]] = number
-                self._columns[number] = json.loads(digests[digest])

@@ -75,30 +75,29 @@ def linewidth(shared_reference: Any) -> list[Wafer]:
 
 
 def test_the_linewidth_data_with_the_signature_out(engine: Engine, linewidth: list[Wafer]) -> None:
-    """Cassette 27 is the one beyond limits from all cassette means (shared reference,
-    cassette_means_as_individuals); without it the components are those of the analysis of
-    variance of a two-way layout with the five sites as fixed places."""
+    """With the five sites as fixed places (shared reference, site_as_fixed_position, by analysis
+    of variance): site 0.0449681788645 on 356 df, wafer 0.0760759985477; the lots stay as they
+    are, 0.2645 (e-Handbook 6.6.1.3)."""
     add(engine, linewidth)
     plan = {"name": "CD", "parameter": "cd", "unit": "um", "stream_by": ("tool",)}
-    evaluate(engine, bay_with(plan), hours(1000))
+    bay = bay_with(plan)
+    evaluate(engine, bay, hours(1000))
     found = set_of(engine).payload
-    assert {w["lot"] for w in found["wild"]} == {"27"}
-    sites = sorted(linewidth[0].values)
-    table = np.array(
-        [[w.values[s] / 1000.0 for s in sites] for w in linewidth if w.lot != "27"]
-    ).reshape(29, 3, 5)
-    wafer = table.mean(axis=2, keepdims=True)
-    effect = (table - wafer).mean(axis=(0, 1))
-    site = ((table - wafer - effect) ** 2).sum() / (86 * 4)
-    between = 5 * ((wafer - wafer.mean(axis=1, keepdims=True)) ** 2).sum() / 58
-    lots = 15 * table.mean(axis=(1, 2)).var(ddof=1)
+    assert found["wild"] == []
     components = found["components"]
-    assert components["site"] == pytest.approx(site, rel=1e-7)
-    assert components["wafer"] == pytest.approx((between - site) / 5, rel=1e-5)
-    assert components["lot"] == pytest.approx((lots - between) / 15, rel=1e-5)
-    assert components["mean"] == pytest.approx(table.mean(), rel=1e-9)
+    assert components["site"] == pytest.approx(0.0449681788645, rel=1e-8)
+    assert components["site_df"] == 356
+    assert components["wafer"] == pytest.approx(0.0760759985477, rel=1e-6)
+    assert components["lot"] == pytest.approx(0.264523758005, rel=1e-6)
+    assert components["mean"] == pytest.approx(2.53228434444, rel=1e-9)
+    published = {"top": 3.05437854444, "left": 2.5438837, "center": 2.03143044444}
     kept = dict(zip((s[0] for s in found["sites"]), found["signature"], strict=True))
-    assert [kept[s] for s in sites] == pytest.approx(effect, rel=1e-7)
+    for site, mean in published.items():
+        assert kept[site] == pytest.approx(mean - 2.53228434444, abs=1e-8)
+    with reading(engine) as connection:
+        points = points_json(connection, bay, "CD", statistic="mean")
+    # sd of a cassette mean: shared reference, variance_of_cassette_mean
+    assert points[0]["sigma"] == pytest.approx(0.292880302779**0.5, rel=1e-6)
 
 
 def test_points_follow_the_definitions(engine: Engine) -> None:
