@@ -9,6 +9,7 @@ import numpy as np
 
 from reports import model_pages
 from reports.numbers import index
+from reports.sentences import cause as cause_words
 from reports.sentences import context_words
 from reports.texts import shown, text
 from reports.views import Reader, excursion_of, investigation_href
@@ -168,19 +169,21 @@ def _detail(one: Decision) -> str:
 
 
 def _excursions(reader: Reader, review: MonthReview) -> tuple[model_pages.MonthExcursion, ...]:
-    """Excursions of the month: those to act on first, each group by onset."""
+    """Excursions of the month: those to act on first, each group by onset.
+
+    Those to watch that fell quiet without a cause are left to the rows of their streams.
+    """
     folder = reader.bay.path(reader.bay.settings.nightly.reports)
-    ordered = sorted(
-        review.excursions, key=lambda t: (t.excursion.tier != "act", t.first_us, t.excursion.id)
-    )
     out = []
-    for one in ordered:
+    for one in sorted(
+        review.excursions, key=lambda t: (t.excursion.tier != "act", t.first_us, t.excursion.id)
+    ):
+        act, open_ = one.excursion.tier == "act", one.excursion.status != "closed"
+        if not (act or open_ or one.cause):
+            continue
+        view = excursion_of(reader.document(one.excursion))
         href = investigation_href(one.excursion.id)
-        out.append(
-            model_pages.MonthExcursion(
-                excursion_of(reader.document(one.excursion)),
-                one.cause or None,
-                href if (folder / href).is_file() else None,
-            )
-        )
+        there = (folder / href).is_file()
+        cause = one.cause or (cause_words(view) if view.suspects else None)
+        out.append(model_pages.MonthExcursion(view, cause, href if there else None))
     return tuple(out)

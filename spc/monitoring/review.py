@@ -268,6 +268,8 @@ def _row(
         "excursions": list(verdict.excursions),
         "signal_events": verdict.rung.events,
         "signal_events_expected": verdict.rung.expected,
+        "signalled_lots": verdict.rung.signalled,
+        "signals_expected": verdict.rung.expected_signals,
         "monitored_points": verdict.rung.points,
         "target": one.target,
         "lower_spec": one.lower_spec,

@@ -18,6 +18,7 @@ from spc.monitoring.review import MonthReview, ReviewUnit
 
 GOAL = 1.33  # Ppk that counts as capable (common practice, no source)
 FEWEST_LOTS = 10  # fewer make an index that says little (common practice, no source)
+MOST_STREAM_CHANGES = 30
 GAUGE_SHARE = 0.09  # of the variance: 30 % of the sd (common practice, no source)
 
 Row = dict[str, Any]
@@ -128,7 +129,10 @@ def difference_interval(
 
 
 def changes(review: MonthReview) -> list[Change]:
-    """Cpk and Ppk of wholes and streams that moved since the month before, largest first."""
+    """Cpk and Ppk of wholes and streams that moved since the month before, largest first.
+
+    Of the streams only the MOST_STREAM_CHANGES largest; the spreadsheet has every month of all.
+    """
     if len(review.months) < 2:
         return []
     before, now = review.months[-2], review.months[-1]
@@ -139,7 +143,9 @@ def changes(review: MonthReview) -> list[Change]:
             if _apart(old, new, index):
                 name = unit.characteristic.name
                 found.append(Change(name, unit.context, index, old[index], new[index]))
-    return sorted(found, key=lambda c: (bool(c.context), -abs(math.log(_ratio(c)))))
+    found.sort(key=lambda c: (bool(c.context), -abs(math.log(_ratio(c)))))
+    wholes = [change for change in found if not change.context]
+    return [*wholes, *[change for change in found if change.context][:MOST_STREAM_CHANGES]]
 
 
 def _ratio(change: Change) -> float:

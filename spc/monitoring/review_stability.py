@@ -3,11 +3,13 @@
 A month of a stream is *not stable* when
 * an excursion to act on (tier ``act``) that shows on the stream lies on the month, unless people
   closed it as a false alarm or it is a silence (of which the process knows nothing); or
-* its charts rang more often than they do by chance: a lot at which a new row of signals begins is
-  one event, and the events of the month are more than a Poisson count of the expected false events
-  of all its charts gives with probability CHANCE. Expected are those of the stream's own limits
-  (`chart_rates`): with an estimated baseline and with the autocorrelation that the baseline is
-  sure of.
+* its charts rang more often than they do by chance. A lot at which a new row of signals begins is
+  one event; events are Poisson with the expected false events of all its charts, and the signalled
+  lots are a Poisson number of rows of geometric length (Polya & Aeppli; Johnson, Kemp & Kotz 2005,
+  Univariate Discrete Distributions, 9.7). Either count is too many when it comes by chance with a
+  probability below CHANCE: the first sees many brief faults, the second one that stays. Expected
+  are the rates of the stream's own limits (`chart_rates`): with an estimated baseline and with the
+  autocorrelation that the baseline is sure of.
 It is *stable* when neither holds and at least one monitored point with limits lies in the month;
 else nothing is known (None). A characteristic as a whole, or a tool, is stable when each of its
 streams of which something is known is, and no excursion to act on lies on it.
@@ -18,7 +20,7 @@ from __future__ import annotations
 import json
 from collections import defaultdict
 from collections.abc import Iterable, Mapping, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, fields
 from datetime import datetime
 from typing import Any
 
@@ -42,11 +44,17 @@ StreamMonth = tuple[int, int]  # id of the stream, number of the month
 
 @dataclass
 class Rung:
-    """What the charts of a stream rang in a month: monitored points, events, expected events."""
+    """What the charts of a stream rang in a month.
+
+    points : monitored points. events : lots at which a row of signals began, signalled : lots with
+    a signal. expected, expected_signals : false events and signals of that many points.
+    """
 
     points: int = 0
     events: int = 0
+    signalled: int = 0
     expected: float = 0.0
+    expected_signals: float = 0.0
 
 
 @dataclass(frozen=True)
@@ -125,10 +133,13 @@ def rung_charts(
         rung.points += n
         n_points, entries = sets[baseline]
         chart = _chart(one, statistic, entries.get(statistic, {}), n_points)
-        rung.expected += n * chart_rates(chart).events
-    for (stream, month), events in _events(connection, window).items():
+        rates = chart_rates(chart)
+        rung.expected += n * rates.events
+        rung.expected_signals += n * rates.signals
+    for (stream, month), (events, signalled) in _events(connection, window).items():
         if stream in names:
-            out[stream, month].events += events
+            rung = out[stream, month]
+            rung.events, rung.signalled = events, signalled
     return out
 
 
@@ -139,24 +150,23 @@ def _chart(one: Characteristic, statistic: str, entry: Mapping[str, Any], n_poin
     return Chart(parse_rules(one.rules), kind_of(statistic), n, phi, sure)
 
 
-def _events(connection: Connection, window: Window) -> dict[StreamMonth, int]:
-    """Lots at which a new row of signals of some chart of a stream begins.
+def _events(connection: Connection, window: Window) -> dict[StreamMonth, tuple[int, int]]:
+    """Lots at which a row of signals of some chart of a stream begins, and lots with a signal.
 
     A point begins a row when its neighbour in front has no signal. Charts of one stream that begin
     at one lot (a flyer moves spread and map together) are one event.
     """
-    found: set[tuple[StreamMonth, str, str]] = set()
+    begun: dict[StreamMonth, set[tuple[str, str]]] = defaultdict(set)
+    signalled: dict[StreamMonth, set[tuple[str, str]]] = defaultdict(set)
     before: tuple[int, str, int] | None = None
     for stream, statistic, month, lot, layer, place in records.signals(
         connection, window.starts_us, window.as_of_us
     ):
         if before != (stream, statistic, place - 1):
-            found.add(((stream, month), lot, layer))
+            begun[stream, month].add((lot, layer))
+        signalled[stream, month].add((lot, layer))
         before = (stream, statistic, place)
-    out: dict[StreamMonth, int] = defaultdict(int)
-    for key, _lot, _layer in found:
-        out[key] += 1
-    return out
+    return {key: (len(begun.get(key, ())), len(lots)) for key, lots in signalled.items()}
 
 
 def stability(
@@ -167,9 +177,7 @@ def stability(
     `known` : whether the unit has wafers in the month; without any it is not called stable.
     """
     parts = list(rung)
-    total = Rung(
-        sum(p.points for p in parts), sum(p.events for p in parts), sum(p.expected for p in parts)
-    )
+    total = Rung(**{f.name: sum(getattr(p, f.name) for p in parts) for f in fields(Rung)})
     ids = tuple(sorted(t.excursion.id for t in touching))
     acted = tuple(sorted(t.excursion.id for t in touching if t.counts))
     verdict: bool | None = None
@@ -181,9 +189,29 @@ def stability(
 
 
 def rings_too_often(rung: Rung) -> bool:
-    """Whether so many events come by chance with a probability below CHANCE."""
+    """Whether so many events or signalled lots come by chance with a probability below CHANCE."""
     from scipy.special import pdtrc
 
-    if rung.events == 0:
-        return False
-    return bool(pdtrc(rung.events - 1, rung.expected) < CHANCE)
+    if rung.events and pdtrc(rung.events - 1, rung.expected) < CHANCE:
+        return True
+    if not rung.signalled or rung.expected <= 0:
+        return rung.signalled > 0
+    length = max(rung.expected_signals / rung.expected, 1.0)
+    return signalled_or_more(rung.signalled, rung.expected, length) < CHANCE
+
+
+def signalled_or_more(count: int, rows: float, length: float) -> float:
+    """Probability of `count` or more signals in a Poisson number of rows of geometric length.
+
+    Parameters
+    ----------
+    count : at least 1. rows : expected rows. length : mean length of a row, 1 or more.
+    """
+    from scipy.special import bdtr, pdtr, pdtrc
+
+    # n rows give fewer than `count` signals when, of count - 1 trials that each end a row with
+    # probability 1 / length, fewer than n end one.
+    n = np.arange(1, count)
+    weight = pdtr(n, rows) - pdtr(n - 1, rows)
+    enough = bdtr(n - 1, count - 1, 1.0 / length)
+    return float(weight @ enough + pdtrc(count - 1, rows))

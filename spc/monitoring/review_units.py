@@ -175,7 +175,7 @@ def _pattern(
         effect,
         df,
         np.bincount(unit[known], minlength=n).astype(np.int64),
-        np.bincount(unit[known], weights=effect[known] ** 2, minlength=n),
+        np.bincount(unit[known], effect[known] ** 2, n).astype(np.float64),
     )
 
 
