@@ -21,7 +21,7 @@ Row = dict[str, Any]
 def _finish(
     alt: Drawing, layers: Sequence[Any], width: int, height: int, font: int = 12
 ) -> dict[str, Any]:
-    return alt.finish(alt.layer(*layers).properties(width=width, height=height), font)
+    return alt.finish_layers(layers, width, height, font)
 
 
 def component_bars(

@@ -41,8 +41,7 @@ def control_chart(
             *_marks(alt, frame, clock),
             *line_names(alt, frame),
         ]
-        chart = alt.layer(*layers).properties(width=size.width, height=size.height)
-        return completed(alt.finish(chart, size.font), frame)
+        return completed(alt.finish_layers(layers, size.width, size.height, size.font), frame)
 
 
 # ---- layers -------------------------------------------------------------------------------------
