@@ -128,14 +128,16 @@ class Reader:
         plans = [self.bay.plan.named(s.characteristic) for s in view.streams]
         known = [plan for plan in plans if plan is not None]
         owners = dict.fromkeys(owner for plan in known for owner in plan.owners)
-        lead = self.lead(view)
-        is_map = view.pattern in ("map", "spread")
+        # What is only watched is listed briefly: no picture, no plan.
+        act = view.tier == "act"
+        lead = self.lead(view) if act else None
+        is_map = act and view.pattern in ("map", "spread")
         return model.ExcursionCard(
             excursion=view,
             chart=None if lead is None else self.chart(lead, view),
             wafer_map=map_of(self, view) if is_map else None,
-            overlay=overlay_of(self, view) if known and known[0].is_overlay else None,
-            action_plan=self.bay.action_plan(known[0]) if known else None,
+            overlay=overlay_of(self, view) if act and known and known[0].is_overlay else None,
+            action_plan=self.bay.action_plan(known[0]) if act and known else None,
             owners=tuple(owners),
             href=investigation_href(excursion.id) if excursion.tier == "act" else None,
             change=change,  # type: ignore[arg-type]

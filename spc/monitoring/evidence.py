@@ -20,7 +20,7 @@ from sqlalchemy import Connection
 
 from config.control_plan import Characteristic, ControlPlan
 from spc.monitoring.baselines import limit_set
-from spc.monitoring.factors import FactorTable, factor_table
+from spc.monitoring.factors import CellWafers, FactorTable, factor_table
 from spc.monitoring.limit_sets import LimitSet, kind_of
 from spc.records import history
 from spc.records import limits as limit_records
@@ -84,14 +84,10 @@ def build_case(
     contexts = ContextStore(connection)
     for column in ("context_id", "step_context_id"):
         contexts.load(wafers[column].unique())
-    cells = _cells(points, wafers, plan, sets)
-    factors = factor_table(
-        connection,
-        contexts,
-        cells,
-        wafers,
-        (int(wafers["at_us"].min()) - 7 * 86_400_000_000, as_of_us),
-    )
+    cells, members = _cells(points, wafers, plan, sets)
+    span = (int(wafers["at_us"].min()) - 7 * 86_400_000_000, as_of_us)
+    searched = points["phase"].to_numpy(object)[cells["row"]] == "monitoring"
+    factors = factor_table(connection, contexts, CellWafers(cells, members, wafers, searched), span)
     lots, lot_code = np.unique(cells["lot"].to_numpy(str), return_inverse=True)
     evidence = _evidence(points, cells, series, plan, name_of, sets, factors, lot_code)
     return Case(
@@ -110,8 +106,9 @@ def build_case(
 
 def _cells(
     points: pd.DataFrame, wafers: pd.DataFrame, plan: ControlPlan, sets: Mapping[int, LimitSet]
-) -> pd.DataFrame:
-    """One row a cell: row (of points), lot, wafer rows behind it, residual, variances.
+) -> tuple[pd.DataFrame, IntArray]:
+    """One row a cell: row (of points), lot, residual, variances; and the wafer rows behind them,
+    those of a cell from its `first_member` on, `n_wafers` of them.
 
     A mean is cut into cells by context; a spread or a distance stays whole.
     """
@@ -131,23 +128,34 @@ def _cells(
     pairs = pd.concat(pieces, ignore_index=True)
     pairs = _with_values(pairs, points, wafers, plan)
     pairs = pairs[np.isfinite(pairs["value"]) | ~pairs["is_mean"]]
-    keys = ["row", "context_id", "step_context_id"]
-    pairs.loc[~pairs["is_mean"], ["context_id", "step_context_id"]] = -1
-    pairs["inverse_sites"] = 1.0 / pairs["n_sites"]
-    cells = (
-        pairs.groupby(keys, sort=True)
-        .agg(
-            value=("value", "mean"),
-            n_wafers=("value", "size"),
-            inverse_sites=("inverse_sites", "mean"),
-            first_wafer=("wafer_row", "min"),
-        )
-        .reset_index()
+    whole = ~pairs["is_mean"].to_numpy()
+    parts = [
+        pairs["row"].to_numpy(np.int64),
+        np.where(whole, -1, pairs["context_id"].to_numpy(np.int64)),
+        np.where(whole, -1, pairs["step_context_id"].to_numpy(np.int64)),
+    ]
+    wafer_row = pairs["wafer_row"].to_numpy(np.int64)
+    order = np.lexsort((wafer_row, parts[2], parts[1], parts[0]))
+    parts = [part[order] for part in parts]
+    new = np.ones(order.size, bool)
+    new[1:] = np.any([part[1:] != part[:-1] for part in parts], axis=0)
+    start = np.flatnonzero(new)
+    count = np.diff(np.append(start, order.size))
+    value = pairs["value"].to_numpy(np.float64)[order]
+    inverse = 1.0 / pairs["n_sites"].to_numpy(np.float64)[order]
+    cells = pd.DataFrame(
+        {
+            "row": parts[0][start],
+            "value": np.add.reduceat(value, start) / count,
+            "n_wafers": count,
+            "inverse_sites": np.add.reduceat(inverse, start) / count,
+            "first_member": start,
+        }
     )
-    members = pairs.groupby(keys, sort=True)["wafer_row"].agg(list)
-    cells["wafer_rows"] = list(members)
+    members = wafer_row[order]
+    cells["first_wafer"] = members[start]
     cells["lot"] = points["lot"].to_numpy(object)[cells["row"]]
-    return _with_residuals(cells, points, sets)
+    return _with_residuals(cells, points, sets), members
 
 
 def _with_values(

@@ -37,26 +37,37 @@ class FactorTable:
     own_step: NDArray[np.object_]
 
 
+@dataclass(frozen=True)
+class CellWafers:
+    """Cells with the wafers behind them; `members` are rows of `wafers`, those of a cell from its
+    `first_member` on, `n_wafers` of them. `searched` cells are searched for onsets, so it matters
+    when each step worked on them."""
+
+    cells: pd.DataFrame
+    members: IntArray
+    wafers: pd.DataFrame
+    searched: NDArray[np.bool_]
+
+
 def factor_table(
-    connection: Connection,
-    contexts: ContextStore,
-    cells: pd.DataFrame,
-    wafers: pd.DataFrame,
-    span: tuple[int, int],
+    connection: Connection, contexts: ContextStore, of: CellWafers, span: tuple[int, int]
 ) -> FactorTable:
-    """Levels of every factor for every cell; `cells` as of `spc.monitoring.evidence`."""
+    """Levels of every factor for every cell."""
+    cells, wafers = of.cells, of.wafers
     pair_code, columns, own = _columns_of_wafers(contexts, wafers)
-    cell_of = np.repeat(np.arange(len(cells)), [len(rows) for rows in cells["wafer_rows"]])
-    flat = [row for rows in cells["wafer_rows"] for row in rows]
-    wafer_of = np.asarray(flat, np.int64)
+    counts = cells["n_wafers"].to_numpy(np.int64)
+    cell_of = np.repeat(np.arange(len(cells)), counts)
+    start = np.cumsum(counts) - counts
+    place = cells["first_member"].to_numpy(np.int64)[cell_of] + np.arange(cell_of.size)
+    wafer_of = of.members[place - start[cell_of]]
     first = cells["first_wafer"].to_numpy(np.int64)
-    lots = wafers["lot"].to_numpy(object)[first]
+    lots = np.unique(wafers["lot"].to_numpy(str), return_inverse=True)[1][first]
     names, level_names, level_columns = [], [], []
     for name in _ordered({key for one in columns for key in one}):
         values = np.array([one.get(name, "") for one in columns], object)
         codes_of_pair, levels = _coded(values)
         code = codes_of_pair[pair_code]  # per wafer row
-        of_cell = _common(code[wafer_of], cell_of, len(cells))
+        of_cell = _common(code[wafer_of], start, len(cells))
         if not _is_factor(of_cell, lots, len(levels)):
             continue
         names.append(name)
@@ -64,8 +75,8 @@ def factor_table(
         level_columns.append(of_cell)
     k = len(names)
     levels_table = np.column_stack(level_columns) if k else np.zeros((len(cells), 0), np.int64)
-    times = _times(connection, contexts, cells, wafers, tuple(names), span)
-    own_step = np.array([own[pair_code[row]] for row in first], object)
+    times = _times(connection, contexts, of, tuple(names), span)
+    own_step = np.array(own, object)[pair_code[first]]
     return FactorTable(
         tuple(names), tuple(level_names), levels_table.astype(np.int64), times, own_step
     )
@@ -107,52 +118,56 @@ def _coded(values: NDArray[np.object_]) -> tuple[IntArray, tuple[str, ...]]:
     return np.array([number.get(str(v), -1) for v in values], np.int64), levels
 
 
-def _common(code: IntArray, cell: IntArray, n: int) -> IntArray:
+def _common(code: IntArray, start: IntArray, n: int) -> IntArray:
     """Code shared by all wafers of each cell, -1 where they differ."""
-    low, high = np.full(n, np.iinfo(np.int64).max), np.full(n, -1, np.int64)
-    np.minimum.at(low, cell, code)
-    np.maximum.at(high, cell, code)
-    return np.where(low == high, high, -1)
+    if not n:
+        return np.zeros(0, np.int64)
+    low, high = np.minimum.reduceat(code, start), np.maximum.reduceat(code, start)
+    return np.asarray(np.where(low == high, high, -1), np.int64)
 
 
-def _is_factor(codes: IntArray, lots: NDArray[np.object_], n_levels: int) -> bool:
+def _is_factor(codes: IntArray, lots: IntArray, n_levels: int) -> bool:
     """Whether a column can name a cause: it has levels, and not one for each lot."""
     known = codes >= 0
     if not known.any() or n_levels < 1:
         return False
-    pairs = pd.DataFrame({"level": codes[known], "lot": lots[known]}).drop_duplicates()
-    used = pairs["level"].nunique()
-    return used <= _MOST_LEVELS and len(pairs) >= _LEAST_LOTS_A_LEVEL * used
+    pairs = np.unique(codes[known] * (int(lots.max()) + 1) + lots[known])
+    used = np.unique(codes[known]).size
+    return used <= _MOST_LEVELS and pairs.size >= _LEAST_LOTS_A_LEVEL * used
 
 
 def _times(
     connection: Connection,
     contexts: ContextStore,
-    cells: pd.DataFrame,
-    wafers: pd.DataFrame,
+    of: CellWafers,
     names: tuple[str, ...],
     span: tuple[int, int],
 ) -> FloatArray:
     """When the step of each `step.column` factor worked on the first wafer of each cell."""
-    times = np.full((len(cells), len(names)), np.nan)
+    times = np.full((len(of.cells), len(names)), np.nan)
     steps = {name.rpartition(".")[0] for name in names if "." in name}
-    if not steps:
+    searched = np.flatnonzero(of.searched)
+    if not steps or not searched.size:
         return times
-    first = wafers.iloc[cells["first_wafer"].to_numpy(np.int64)]
-    wanted = first[["lot", "wafer", "layer", "measured_us"]].reset_index(drop=True)
+    rows, cell_wafer = np.unique(
+        of.cells["first_wafer"].to_numpy(np.int64)[searched], return_inverse=True
+    )
+    wanted = of.wafers.iloc[rows][["lot", "wafer", "layer", "measured_us"]].reset_index(drop=True)
     log = history.step_stamps(connection, wanted, *span)
     if log.empty:
         return times
     contexts.load(log["context_id"].unique())
-    distinct, of = np.unique(log["context_id"].to_numpy(np.int64), return_inverse=True)
-    log["step"] = np.array([step_name(contexts.columns(int(i))) for i in distinct], object)[of]
-    wanted["cell"] = np.arange(len(wanted))
-    joined = wanted.merge(log, on=["lot", "wafer", "layer"])
+    distinct, code = np.unique(log["context_id"].to_numpy(np.int64), return_inverse=True)
+    log["step"] = np.array([step_name(contexts.columns(int(i))) for i in distinct], object)[code]
+    wanted["place"] = np.arange(len(wanted))
+    joined = wanted.merge(log[log["step"].isin(steps)], on=["lot", "wafer", "layer"])
     joined = joined[joined["processed_us"] <= joined["measured_us"]]
-    last = joined.groupby(["cell", "step"])["processed_us"].max()
+    last = joined.groupby(["step", "place"])["processed_us"].max()
     for column, name in enumerate(names):
         step = name.rpartition(".")[0]
         if step and step in last.index.get_level_values("step"):
             some = last.xs(step, level="step")
-            times[some.index.to_numpy(np.int64), column] = some.to_numpy(np.float64) / 1e6
+            by_wafer = np.full(len(wanted), np.nan)
+            by_wafer[some.index.to_numpy(np.int64)] = some.to_numpy(np.float64) / 1e6
+            times[searched, column] = by_wafer[cell_wafer]
     return times

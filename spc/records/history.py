@@ -57,8 +57,8 @@ def all_streams(connection: Connection) -> pd.DataFrame:
     """Every stream: stream_id, characteristic, context (JSON)."""
     names = ("stream_id", "characteristic", "context")
     query = select(streams.c.id, streams.c.characteristic, streams.c.context)
-    rows = [tuple(row) for row in connection.execute(query.order_by(streams.c.id))]
-    return pd.DataFrame(rows, columns=list(names))
+    rows = connection.execute(query.order_by(streams.c.id)).all()
+    return pd.DataFrame([tuple(row) for row in rows], columns=list(names))
 
 
 def points_since(connection: Connection, since_us: int) -> pd.DataFrame:
@@ -70,8 +70,8 @@ def points_since(connection: Connection, since_us: int) -> pd.DataFrame:
         points.c.baseline_id.is_not(None),
         or_(points.c.at_us >= since_us, points.c.phase == "baseline"),
     )
-    rows = [tuple(row) for row in connection.execute(query)]
-    frame = pd.DataFrame(rows, columns=list(_POINT_NAMES))
+    rows = connection.execute(query).all()
+    frame = pd.DataFrame([tuple(row) for row in rows], columns=list(_POINT_NAMES))
     keys = ["stream_id", "statistic", "at_us", "lot", "layer", "wafer"]
     return frame.sort_values(keys, ignore_index=True)
 
@@ -83,8 +83,8 @@ def wafers_of(connection: Connection, stream_ids: Sequence[int], since_us: int) 
         query = select(*(wafer_results.c[name] for name in _WAFER_NAMES)).where(
             wafer_results.c.stream_id.in_(part), wafer_results.c.at_us >= since_us
         )
-        rows += [tuple(row) for row in connection.execute(query)]
-    return pd.DataFrame(rows, columns=list(_WAFER_NAMES))
+        rows += connection.execute(query).all()
+    return pd.DataFrame([tuple(row) for row in rows], columns=list(_WAFER_NAMES))
 
 
 def step_stamps(
@@ -104,8 +104,8 @@ def step_stamps(
         )
         if len(numbers) <= 50:
             query = query.where(log.wafer.in_(numbers))
-        rows += [tuple(row) for row in connection.execute(query)]
-    return pd.DataFrame(rows, columns=list(names))
+        rows += connection.execute(query).all()
+    return pd.DataFrame([tuple(row) for row in rows], columns=list(names))
 
 
 def events_between(
