@@ -15,7 +15,8 @@ from numpy.typing import NDArray
 from sqlalchemy import Connection
 
 from config.control_plan import Characteristic
-from spc.monitoring.estimates import Baseline, estimate
+from spc.monitoring.drafts import Baseline
+from spc.monitoring.estimates import estimate
 from spc.monitoring.grouping import PointGroups, group_points
 from spc.monitoring.limit_sets import APPROVED, AUTOMATIC, WITHDRAWN, LimitSet, payload_text
 from spc.monitoring.serial import add_autocorrelation
@@ -112,6 +113,8 @@ class Maker:
                     continue  # the same points, whose site values were since kept as sums alone
             if before is not None:
                 reason = "its first points are not what they were: readings came late or changed"
+                if draft is not None and draft.n_points != before.n_points:
+                    reason = f"the plan asks for {draft.n_points} baseline points"
                 if draft is None:
                     reason = "the stream has fewer points than a baseline needs"
                 limits.decide(

@@ -7,7 +7,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from spc.monitoring.estimates import Baseline
+from spc.monitoring.drafts import Baseline
 from spc.monitoring.limit_sets import AUTOMATIC, LimitSet, kind_of, rounded
 from spc.monitoring.points import (
     assignment,

@@ -109,7 +109,15 @@ class Update:
             layers=None if layer is None else [layer, ""],
             lots=lots,
         )
-        log = log_rows(self._connection, self._now.as_of_us, sorted(set(frame["lot"].tolist())))
+        known_layers = set(frame["layer"].tolist())
+        log = log_rows(
+            self._connection,
+            self._now.as_of_us,
+            sorted(set(frame["lot"].tolist())),
+            # A reading without a layer may belong to any.
+            layers=None if "" in known_layers else sorted(known_layers | {""}),
+            parameters=one.parameters,
+        )
         wafers = build_wafers(frame, log, self._stores, one)
         known = series.stream_ids(self._connection, one.name)
         new = [key for key in wafers.keys if key not in known]

@@ -124,10 +124,28 @@ def measurement_rows(
     return found.take(order_of([*(found[name] for name in names), -found["id"]]))
 
 
-def log_rows(connection: Connection, as_of_us: int, lots: Sequence[str] | None = None) -> Columns:
-    """Process log up to a stamp, of some lots or all."""
+def log_rows(
+    connection: Connection,
+    as_of_us: int,
+    lots: Sequence[str] | None = None,
+    *,
+    layers: Sequence[str] | None = None,
+    parameters: Sequence[str] | None = None,
+) -> Columns:
+    """Process log up to a stamp, of some lots or all.
+
+    `layers` narrows it to those layers, `parameters` to the wafers on which one of them was read.
+    """
     table = process_log.c
     query = select(*(table[name] for name in _LOG)).where(table.processed_us <= as_of_us)
+    if layers is not None:
+        query = query.where(table.layer.in_(list(layers)))
+    if parameters is not None:
+        m = measurements.c
+        read = select(m.id).where(
+            m.lot == table.lot, m.wafer == table.wafer, m.parameter.in_(list(parameters))
+        )
+        query = query.where(read.exists())
     return of_rows(_of_lots(connection, query, table.lot, lots), _LOG)
 
 
