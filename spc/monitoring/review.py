@@ -16,7 +16,7 @@ from sqlalchemy import Connection
 from config.control_plan import Characteristic
 from config.load import Bay
 from spc.monitoring.review_rows import Ask, UnitStudy, empty_row, study_units, with_stability
-from spc.monitoring.review_sites import Readings, Window, read_months
+from spc.monitoring.review_sites import LogBook, Readings, Window, read_months
 from spc.monitoring.review_stability import (
     Rung,
     Stability,
@@ -130,9 +130,10 @@ def review_month(
     tools: list[ReviewUnit] = []
     notes: list[str] = []
     plan = bay.plan.characteristic
+    book = LogBook(connection, window, tuple({p for one in plan for p in one.parameters}))
     for done, one in enumerate(plan):
         progress(one.name, done, len(plan))
-        readings = read_months(connection, stores, one, window)
+        readings = read_months(connection, stores, one, book)
         room = _Room(connection, one, window, readings, rung, timed, Ask.of(one, gauge_out))
         units += room.units()
         tools += room.tools()

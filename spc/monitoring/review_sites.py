@@ -74,14 +74,36 @@ class Readings:
     notes: tuple[str, ...] = ()
 
 
+@dataclass
+class LogBook:
+    """Process log of the lots of a window, read once for all characteristics that need it."""
+
+    connection: Connection
+    window: Window
+    parameters: tuple[str, ...]  # of all characteristics
+    _rows: Columns | None = None
+
+    @property
+    def rows(self) -> Columns:
+        """The log of every lot that may have a wafer in the window."""
+        if self._rows is None:
+            as_of_us = self.window.as_of_us
+            lots = records.lots_between(
+                self.connection, self.parameters, self.window.span, as_of_us
+            )
+            self._rows = log_rows(self.connection, as_of_us, lots)
+        return self._rows
+
+
 def read_months(
-    connection: Connection, stores: Stores, one: Characteristic, window: Window
+    connection: Connection, stores: Stores, one: Characteristic, book: LogBook
 ) -> Readings:
-    """Readings of one characteristic in the months of a window."""
+    """Readings of one characteristic in the months of the book's window."""
+    window = book.window
     known = records.streams_of(connection, one.name, window.as_of_us)
     if records.up_to_date(connection, one.name, window.as_of_us):
         return _from_results(connection, stores, one, window, known)
-    return _made_anew(connection, stores, one, window)
+    return _made_anew(connection, stores, one, book)
 
 
 def _layers(one: Characteristic) -> list[str] | None:
@@ -93,14 +115,14 @@ def _layers(one: Characteristic) -> list[str] | None:
 
 
 def _made_anew(
-    connection: Connection, stores: Stores, one: Characteristic, window: Window
+    connection: Connection, stores: Stores, one: Characteristic, book: LogBook
 ) -> Readings:
+    window = book.window
     lots = records.lots_between(connection, one.parameters, window.span, window.as_of_us)
     frame = measurement_rows(
         connection, one.parameters, window.as_of_us, layers=_layers(one), lots=lots
     )
-    log = log_rows(connection, window.as_of_us, sorted(set(frame["lot"].tolist())))
-    wafers = build_wafers(frame, log, stores, one)
+    wafers = build_wafers(frame, book.rows, stores, one)
     table = wafers.table
     first, last = window.span
     keep = (table["at_us"] >= first) & (table["at_us"] < last)
