@@ -14,7 +14,7 @@ from config.values import unit_factor
 from ingest import moments, sites, units
 from ingest.columns import Rows
 from ingest.numbers import parse_numbers, reason_of
-from ingest.sheet import Faults, Texts, combined
+from ingest.sheet import Faults, Texts, combined, numbered
 from spc.records.contexts import context_text
 from spc.records.readings import WaferKey
 
@@ -125,8 +125,7 @@ def contexts_of(
     if not names:
         return np.zeros(len(index), np.int64), [context_text({})]
     codes = [columns[name].codes[index] for name in names]
-    mixed, _ = combined(codes)
-    _, first, inverse = np.unique(mixed, return_index=True, return_inverse=True)
+    first, inverse = numbered(*combined(codes))
     texts = [columns[name].texts for name in names]
     found = [
         context_text({name: text[code] for name, text, code in zip(names, texts, one, strict=True)})
@@ -233,12 +232,11 @@ def _wafers(rows: Rows, first: NDArray[np.int64]) -> tuple[NDArray[np.int64], li
     house = rows.house
     columns = [house["parameter"], *_optional(rows.context, "layer"), house["lot"], house["wafer"]]
     codes = [c.codes[first] for c in columns]
-    mixed, _ = combined(codes)
-    _, place, inverse = np.unique(mixed, return_index=True, return_inverse=True)
+    place, inverse = numbered(*combined(codes))
     texts = [
         np.array(c.texts, object)[code[place]].tolist()
         for c, code in zip(columns, codes, strict=True)
     ]
     if len(columns) == 3:
         texts.insert(1, [""] * len(place))
-    return inverse.astype(np.int64), list(zip(*texts, strict=True))
+    return inverse, list(zip(*texts, strict=True))

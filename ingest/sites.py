@@ -17,7 +17,7 @@ from numpy.typing import NDArray
 
 from ingest.columns import PLACE_COLUMNS, Rows
 from ingest.numbers import parse_numbers
-from ingest.sheet import Faults, Texts, combined
+from ingest.sheet import Faults, Texts, combined, numbered
 
 _NOT_GIVEN = -1
 _SORTED_UP_TO = 20_000
@@ -87,8 +87,7 @@ def read_places(
     if nameless.any():
         index = np.flatnonzero(nameless)
         turn[index] = _turns(rows, measured, index) + 1
-    mixed, _ = combined([site_codes + 1, turn, *(c + 1 for c in columns)])
-    _, first, place = np.unique(mixed, return_index=True, return_inverse=True)
+    first, place = numbered(*combined([site_codes + 1, turn, *(c + 1 for c in columns)]))
     found: list[Place] = []
     for row in first.tolist():
         xyuv = [
@@ -101,7 +100,7 @@ def read_places(
             xyuv = [*given, *[None] * (4 - len(given))]
         x, y, u, v = xyuv
         found.append((site or _name(xyuv) or str(turn[row]), x, y, u, v))
-    return place.astype(np.int64), Places(found)
+    return place, Places(found)
 
 
 def _coordinate(column: Texts, faults: Faults) -> tuple[NDArray[np.int32], NDArray[np.float64]]:

@@ -5,6 +5,7 @@ from __future__ import annotations
 import json
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
+from itertools import repeat
 
 import numpy as np
 from numpy.typing import NDArray
@@ -19,7 +20,7 @@ from ingest.remeasured import (
     suspicious,
     together,
 )
-from ingest.sheet import Faults, combined
+from ingest.sheet import Faults, combined, numbered
 from ingest.sites import Place
 from spc.records.interned import Vocabulary
 from spc.records.readings import (
@@ -163,35 +164,29 @@ def _measurements(
     squares = np.add.reduceat((value - np.repeat(mean, n)) ** 2, starts)
     line = batch.line[rows]
     run = run_of[of_reading[starts]]
-    layout = _layout_ids(connection, batch, batch.place[rows], (starts, ends), vocabulary)
+    wafer = batch.runs.wafer[run]
+    keys = np.array(batch.wafers, object).reshape(-1, 4)[wafer]
+    units = np.array([batch.units[key[0]] for key in batch.wafers], object)[wafer]
+    processed = batch.runs.processed_us[run]
+    given = processed.astype(object)
+    given[processed == NO_STAMP] = None
     packed = value.astype("<f8").tobytes()
-    processed = batch.runs.processed_us[run].tolist()
-    units = batch.units
-    wafers = batch.wafers
-    return (
-        (file_id, *wafer, at, None if before == NO_STAMP else before, *middle, packed[s:e], *lines)
-        for wafer, at, before, middle, s, e, lines in zip(
-            (wafers[w] for w in batch.runs.wafer[run].tolist()),
-            batch.runs.measured_us[run].tolist(),
-            processed,
-            zip(
-                context_ids[batch.runs.context[run]].tolist(),
-                layout,
-                (units[wafers[w][0]] for w in batch.runs.wafer[run].tolist()),
-                n.tolist(),
-                mean.tolist(),
-                squares.tolist(),
-                strict=True,
-            ),
-            (8 * starts).tolist(),
-            (8 * ends).tolist(),
-            zip(
-                np.minimum.reduceat(line, starts).tolist(),
-                np.maximum.reduceat(line, starts).tolist(),
-                strict=True,
-            ),
-            strict=True,
-        )
+    bounds = zip((8 * starts).tolist(), (8 * ends).tolist(), strict=True)
+    return zip(
+        repeat(file_id),
+        *(keys[:, i].tolist() for i in range(4)),
+        batch.runs.measured_us[run].tolist(),
+        given.tolist(),
+        context_ids[batch.runs.context[run]].tolist(),
+        _layout_ids(connection, batch, batch.place[rows], (starts, ends), vocabulary),
+        units.tolist(),
+        n.tolist(),
+        mean.tolist(),
+        squares.tolist(),
+        [packed[s:e] for s, e in bounds],
+        np.minimum.reduceat(line, starts).tolist(),
+        np.maximum.reduceat(line, starts).tolist(),
+        strict=False,  # the file's number goes on for ever
     )
 
 
@@ -200,8 +195,7 @@ def _measurement_of_run(batch: Batch) -> tuple[NDArray[np.int64], NDArray[np.int
     runs = batch.runs
     _, stamp = np.unique(runs.measured_us, return_inverse=True)
     _, processed = np.unique(runs.processed_us, return_inverse=True)
-    mixed, _ = combined([runs.wafer, stamp, processed, runs.context])
-    _, first, inverse = np.unique(mixed, return_index=True, return_inverse=True)
+    first, inverse = numbered(*combined([runs.wafer, stamp, processed, runs.context]))
     by_appearance = np.argsort(first)
     renumber = np.empty(len(first), np.int64)
     renumber[by_appearance] = np.arange(len(first))

@@ -9,7 +9,7 @@ from numpy.typing import NDArray
 
 from config.control_plan import ControlPlan
 from config.values import house_unit
-from ingest.sheet import Faults, Texts
+from ingest.sheet import Faults, Texts, numbered
 
 
 @dataclass(frozen=True)
@@ -47,7 +47,8 @@ def factors(
     if not len(rows):
         return result, {}
     pair = parameter.codes[rows].astype(np.int64) * len(unit.texts) + unit.codes[rows]
-    pairs, first, of_row = np.unique(pair, return_index=True, return_inverse=True)
+    first, of_row = numbered(pair, len(parameter.texts) * len(unit.texts))
+    pairs = pair[first]
     factor = np.ones(len(pairs))
     good = np.ones(len(pairs), bool)
     chosen: dict[str, str] = {}

@@ -2,11 +2,25 @@
 
 from __future__ import annotations
 
+import json
 from collections.abc import Iterable, Iterator, Sequence
 from itertools import chain, islice
 from typing import Any
 
-from sqlalchemy import BigInteger, Connection, Float, Integer, LargeBinary, Table
+from sqlalchemy import (
+    ARRAY,
+    BigInteger,
+    ColumnElement,
+    Connection,
+    Float,
+    Integer,
+    LargeBinary,
+    Table,
+    Text,
+    func,
+    literal,
+    select,
+)
 
 _SQLITE_VARIABLES = 900  # in one statement; SQLite allowed 999 until 2020
 _POSTGRES_TYPES = ((BigInteger, "int8"), (Integer, "int4"), (Float, "float8"))
@@ -42,6 +56,16 @@ def insert_rows(
         ) from error
     finally:
         cursor.close()
+
+
+def any_of(
+    connection: Connection, column: ColumnElement[str], texts: Sequence[str]
+) -> ColumnElement[bool]:
+    """Whether a column is one of many texts, handed over as one value however many they are."""
+    if connection.dialect.name == "sqlite":
+        each = func.json_each(json.dumps(texts)).table_valued("value")
+        return column.in_(select(each.c.value))
+    return column == func.any(literal(list(texts), ARRAY(Text)))
 
 
 def _insert_many(cursor: Any, target: str, width: int, rows: Iterator[Sequence[Any]]) -> None:

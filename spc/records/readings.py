@@ -10,7 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 from sqlalchemy import Connection, select
 
-from spc.records.bulk import insert_rows
+from spc.records.bulk import any_of, insert_rows
 from spc.records.contexts import chunks
 from spc.records.tables import bay_events, layouts, measurements, process_log
 
@@ -80,12 +80,12 @@ def stored_measurements(
     parameters = sorted({key[0] for key in wanted})
     if len(parameters) <= 100:
         query = query.where(table.parameter.in_(parameters))
+    lots = sorted({key[2] for key in wanted})
     found = []
-    for part in chunks(sorted({key[2] for key in wanted})):
-        for row in connection.execute(query.where(table.lot.in_(part))):
-            key = (row[1], row[2], row[3], row[4])
-            if key in wanted:
-                found.append(StoredMeasurement(row[0], key, row[5], row[6], row[7], row[8]))
+    for row in connection.execute(query.where(any_of(connection, table.lot, lots))):
+        key = (row[1], row[2], row[3], row[4])
+        if key in wanted:
+            found.append(StoredMeasurement(row[0], key, row[5], row[6], row[7], row[8]))
     return sorted(found, key=lambda one: one.id)
 
 
@@ -125,11 +125,8 @@ def stored_log(
     query = select(table.processed_us, table.lot, table.wafer, table.context_id).where(
         table.processed_us >= first_us, table.processed_us <= last_us
     )
-    found: set[tuple[int, str, str, int]] = set()
-    for part in chunks(sorted(set(lots))):
-        rows = connection.execute(query.where(table.lot.in_(part)))
-        found |= {(row[0], row[1], row[2], row[3]) for row in rows}
-    return found
+    rows = connection.execute(query.where(any_of(connection, table.lot, sorted(set(lots)))))
+    return {(row[0], row[1], row[2], row[3]) for row in rows}
 
 
 def insert_log(connection: Connection, rows: Iterable[Sequence[object]]) -> None:
