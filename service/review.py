@@ -24,7 +24,7 @@ class Review:
 def write_review(
     session: Session, month: str, as_of: datetime, gauge_out: bool, progress: Progress
 ) -> Review:
-    """Review a month and write its page and its spreadsheet.
+    """Review a month and write its page and its spreadsheet; what could not be used is told.
 
     Parameters
     ----------
@@ -41,7 +41,7 @@ def write_review(
     from reports.views import Reader
     from reports.views_review import review_href, review_view, workbook_href
     from reports.workbook import review_workbook
-    from service.context import WRONG_USAGE, CommandError
+    from service.context import WRONG_USAGE, CommandError, tell
     from service.pages import write_whole
     from spc.monitoring.review import NoMonthError, review_month
     from spc.records.sessions import reading
@@ -60,7 +60,9 @@ def write_review(
     page = folder / href
     write_whole(page, review_page(view, href))
     _write_bytes(folder / workbook_href(review.month), review_workbook(view))
-    return Review(review.rows, [*_lines(view), *review.notes], page.absolute())
+    for note in review.notes:
+        tell(note)
+    return Review(review.rows, _lines(view), page.absolute())
 
 
 def _lines(view: Any) -> list[str]:

@@ -146,3 +146,10 @@ def test_another_month_is_empty_and_no_month_is_wrong_usage(bay: Path) -> None:
     assert wrong.exception.status == 2
     assert "YYYY-MM" in str(wrong.exception)
     assert wrong.stdout == ""
+
+
+def test_a_gauge_that_the_plan_does_not_know_is_told_beside_the_json(bay: Path) -> None:
+    given = ("--config", str(bay / "bay.toml"), "--month", "2026-05", "--as-of", AS_OF)
+    result = run(*given, "--gauge-share-removed", "--json")
+    assert {row["gauge_removed"] for row in json.loads(result.stdout)} == {False}
+    assert "oxide: the plan has no gauge_sd" in result.stderr
