@@ -48,6 +48,23 @@ class Column:
 
 
 @dataclass(frozen=True)
+class Candidate:
+    """A level to look at: its column, level code, log prior of the level, `unknown` (F,) offset
+    variance and the score of the coarse scan."""
+
+    column: Column
+    level: int
+    log_prior: float
+    unknown: FloatArray
+    score: float
+
+    @property
+    def key(self) -> tuple[tuple[str, ...], tuple[str, ...]]:
+        """Factor names and level names."""
+        return self.column.factors, self.column.names[self.level]
+
+
+@dataclass(frozen=True)
 class Offsets:
     """Usual offsets: `total` (n,) to take out of the residuals, and per column the variance that
     stays unknown, a (levels, families) array."""
@@ -145,9 +162,12 @@ def usual_offsets(evidence: Evidence, noise: Noise, columns: tuple[Column, ...])
         known = column.codes >= 0
         total[known] += blup[column.codes[known], evidence.cell_family[known]]
         variances.append(variance)
+    # A whole characteristic has no offset of its own, but what varies by nature from one batch to
+    # the next varies for all of it.
+    natural = np.max([v.max(axis=0) for v in variances if v.size], axis=0)
     for i, column in enumerate(columns):
-        if column.twin_of >= 0:
-            variances[i] = np.zeros((len(column.names), evidence.n_families))
+        if column.factors == (WHOLE,):
+            variances[i] = np.tile(natural, (len(column.names), 1))
     return Offsets(total, tuple(variances))
 
 

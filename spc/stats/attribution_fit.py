@@ -12,7 +12,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from spc.stats.attribution_candidates import Column
+from spc.stats.attribution_candidates import Candidate, Column
 from spc.stats.attribution_evidence import (
     DAY,
     AttributionOptions,
@@ -24,9 +24,17 @@ from spc.stats.attribution_evidence import (
 from spc.stats.attribution_noise import Noise, ar1_inflation
 from spc.stats.attribution_profile import Shape
 from spc.stats.attribution_search import series_scores
-from spc.stats.attribution_windows import Cross, inclusion, offset_model
+from spc.stats.attribution_windows import (
+    Cross,
+    Normal,
+    OffsetModel,
+    Terms,
+    inclusion,
+    offset_model,
+)
 
-_PASSES = 4
+_PASSES = 5
+_SETTLED = 0.02
 
 
 @dataclass(frozen=True)
@@ -55,6 +63,14 @@ class Fit:
         return int(self.gain.argmax())
 
 
+@dataclass(frozen=True)
+class Residuals:
+    """What other effects left: `value` (n,) in unit, and `whitened` (n,), wild values held."""
+
+    value: FloatArray
+    whitened: FloatArray
+
+
 def pattern_of(column: Column, level: int, shape: Shape, evidence: Evidence) -> FloatArray:
     """Return the form of an effect on all cells, shape (n,), 0 where it does not act."""
     time = column.time
@@ -71,18 +87,16 @@ def pattern_of(column: Column, level: int, shape: Shape, evidence: Evidence) -> 
 def fit_effect(
     evidence: Evidence,
     noise: Noise,
-    column: Column,
-    level: int,
+    candidate: Candidate,
     shape: Shape,
-    residual: FloatArray,
-    unknown: FloatArray,
+    residuals: Residuals,
     options: AttributionOptions,
 ) -> Fit | None:
-    """Estimate an effect's sizes from the residuals (n,) that other effects left.
+    """Estimate an effect's sizes from the residuals that other effects left.
 
-    `unknown` (F,) is the variance of the level's unknown offset in each family. Returns None if
-    no monitored cell is affected.
+    Returns None if no monitored cell is affected.
     """
+    column, level, unknown = candidate.column, candidate.level, candidate.unknown
     pattern = pattern_of(column, level, shape, evidence)
     level_cells = np.flatnonzero(evidence.monitoring & column.cells(level))
     on = np.flatnonzero(pattern[level_cells] != 0.0)
@@ -105,15 +119,9 @@ def fit_effect(
     center = sums(family, model.tells * x, n_families)
     terms = model.terms(Cross(i_raw, cross, center, points), tau2)
     net = np.maximum(terms.info, 1e-300)
-    amplitude = np.zeros(n_families)
-    held = np.zeros(len(residual))
-    for _ in range(_PASSES):
-        held[level_cells] = amplitude[family] * x
-        whole = noise.whiten(held + noise.clip(residual - held))
-        y = whole[level_cells]
-        total = model.total(sums(family, y, n_families), series_scores(evidence, whole))
-        score = terms.net_score(sums(family, y * x, n_families), total)
-        amplitude = np.where(terms.info > 0, score / net, 0.0)
+    amplitude, y, total = _amplitudes(
+        evidence, noise, level_cells, family, x, terms, model, residuals
+    )  # fmt: skip
     gain = terms.log_bayes(sums(family, y * x, n_families), total)
     log_pi = inclusion(evidence, families, np.array([0]))
     odds = np.clip(log_pi - np.log1p(-np.exp(log_pi)) + gain, -50.0, 50.0)
@@ -130,6 +138,36 @@ def fit_effect(
         series_value=series[1], series_se=series[2], series_points=series[3],
         explained=explained,
     )  # fmt: skip
+
+
+def _amplitudes(
+    evidence: Evidence, noise: Noise, cells: IntArray, family: IntArray, x: FloatArray,
+    terms: Terms, model: OffsetModel, residuals: Residuals,
+) -> tuple[FloatArray, FloatArray, Normal]:  # fmt: skip
+    """Return the amplitudes (F,), the whitened residuals of the cells and what their normal level
+    is off by. Wild values are brought in around the fit, until the amplitudes settle."""
+    groups = np.zeros(len(noise.group_factor), dtype=bool)
+    groups[noise.group[cells]] = True
+    near = np.flatnonzero(groups[noise.group])
+    part, rest = noise.part(near), residuals.value[near]
+    inner = np.searchsorted(near, cells)
+    # The scores of the series change only where the level's cells are.
+    base = series_scores(evidence, residuals.whitened)
+    monitored = np.where(evidence.monitoring[near], 1.0, 0.0)
+    before = residuals.whitened[near] * monitored
+    n_families = len(model.phi)
+    amplitude, held = np.zeros(n_families), np.zeros(len(near))
+    for _ in range(_PASSES):
+        whole = part.whiten(held + part.clip(rest - held))
+        change = sums(evidence.series[near], whole * monitored - before, len(base))
+        y = whole[inner]
+        total = model.total(sums(family, y, n_families), base + change)
+        score = terms.net_score(sums(family, y * x, n_families), total)
+        last, amplitude = amplitude, score / np.maximum(terms.info, 1e-300)
+        held[inner] = amplitude[family] * x
+        if np.all(np.abs(amplitude - last) ** 2 * terms.info < _SETTLED**2):
+            break
+    return amplitude, y, total
 
 
 def _series_sizes(

@@ -16,10 +16,10 @@ from dataclasses import replace
 import numpy as np
 
 from spc.stats.attribution_calibration import Calibration, calibrate
-from spc.stats.attribution_candidates import Column, conjunction_within
+from spc.stats.attribution_candidates import Candidate, Column, conjunction_within
 from spc.stats.attribution_effects import Effect
 from spc.stats.attribution_evidence import FloatArray, statistic_class
-from spc.stats.attribution_state import Candidate, Found, State
+from spc.stats.attribution_state import Found, State
 
 _HOPELESS = -5.0
 _BORNE_OUT = 3.0
@@ -111,7 +111,7 @@ class Search:
         profile = self.state.look(candidate, y, fresh=False)
         if profile is None or not np.isfinite(profile.score):
             return None
-        fit = self.state.fit(candidate, profile, residual)
+        fit = self.state.fit(candidate, profile.shape, residual, y)
         return Found(candidate, profile, fit, previous=previous) if fit is not None else None
 
     def _relevel(self, i: int) -> None:

@@ -14,7 +14,7 @@ from a few dozen baseline points (variance, autocorrelation) is shrunk towards i
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
@@ -22,6 +22,7 @@ import numpy as np
 from spc.stats.attribution_evidence import Evidence, FloatArray, IntArray, statistic_class, sums
 
 _CLIP = 3.0
+_LONG_RUN = 16
 # E[min(z^2, c^2)] of a standard normal z: 1 - 2 c phi(c) - 2 (1 - c^2) (1 - Phi(c)), c = 3.
 _CLIPPED_SQUARE = 0.995007
 
@@ -37,9 +38,9 @@ class Noise:
     shared by the streams of a lot), `correlation` (F, F) of lots between families.
     Series arrays: `phi`, `center` (variance of the baseline centre), `series_q` and
     `series_points` (precision and points of the monitored cells); `shared_series` and `shared_q`
-    list the series of each group and their precision in it, from `shared_start`. `many` are the
-    cells of points with several cells, sorted by point; `many_first`, `many_size` index those
-    points.
+    list the series of each group and their precision in it, from `shared_start`. `by_point`
+    and `by_group` sort the cells; `many` are the cells of points with several cells, each with
+    its `many_row` (point) and `many_place` in it.
     """
 
     weight: FloatArray
@@ -62,9 +63,11 @@ class Noise:
     shared_start: IntArray
     shared_series: IntArray
     shared_q: FloatArray
+    by_point: IntArray
+    by_group: IntArray
     many: IntArray
-    many_first: IntArray
-    many_size: IntArray
+    many_row: IntArray
+    many_place: IntArray
 
     def whiten(self, residual: FloatArray) -> FloatArray:
         """Return the inverse covariance times the residual, shape (n,), 1/unit.
@@ -84,17 +87,13 @@ class Noise:
         its lot part costs. The second array (n,) sums to the plotted points that a level touches.
         """
         cells = np.flatnonzero(codes >= 0)
-        width = int(codes.max(initial=0)) + 1
-        level, point, group = codes[cells], self.point[cells], self.group[cells]
-        _, pair = np.unique(point * width + level, return_inverse=True)
-        wx = sums(pair, self.weight[cells])[pair]
-        part = 1.0 / np.bincount(pair)[pair]
-        _, pair = np.unique(group * width + level, return_inverse=True)
-        qx = sums(pair, self.q[cells])[pair]
+        wx, count = _sums_of_equals(self.by_point, self.point, codes, self.weight)
+        qx, _ = _sums_of_equals(self.by_group, self.group, codes, self.q)
         info, share = np.zeros(len(codes)), np.zeros(len(codes))
-        info[cells] = self.weight[cells] * (1.0 - self.point_factor[point] * wx)
-        info[cells] -= self.q[cells] * self.group_factor[group] * qx
-        share[cells] = part
+        point, group = self.point[cells], self.group[cells]
+        info[cells] = self.weight[cells] * (1.0 - self.point_factor[point] * wx[cells])
+        info[cells] -= self.q[cells] * self.group_factor[group] * qx[cells]
+        share[cells] = 1.0 / count[cells]
         return info, share
 
     def center_information(
@@ -127,14 +126,35 @@ class Noise:
         if not len(many):
             return np.clip(residual, -self.cap, self.cap)
         out = residual.copy()
-        order = np.lexsort((residual[many], self.point[many]))
-        value = residual[many][order]
-        first, size = self.many_first, self.many_size
-        middle = 0.5 * (value[first + (size - 1) // 2] + value[first + size // 2])
-        around = np.repeat(middle, size)
-        room = (self.cap[many] * np.sqrt(self.own[many] / (self.own + self.lot)[many]))[order]
-        out[many[order]] = np.clip(value, around - room, around + room)
+        value = residual[many]
+        table = np.full((int(self.many_row[-1]) + 1, int(self.many_place.max()) + 1), np.inf)
+        table[self.many_row, self.many_place] = value
+        table.sort(axis=1)
+        size = np.bincount(self.many_row)
+        rows = np.arange(len(size))
+        middle = 0.5 * (table[rows, (size - 1) // 2] + table[rows, size // 2])
+        around = middle[self.many_row]
+        room = self.cap[many] * np.sqrt(self.own[many] / (self.own[many] + self.lot[many]))
+        out[many] = np.clip(value, around - room, around + room)
         return np.clip(out, -self.cap, self.cap)
+
+    def part(self, cells: IntArray) -> Noise:
+        """Return the noise of some cells only (sorted indices). They have to hold every cell of
+        the groups that they touch; the series tables stay those of the whole."""
+        _, point = np.unique(self.point[cells], return_inverse=True)
+        _, group = np.unique(self.group[cells], return_inverse=True)
+        first_point = np.zeros(int(point.max(initial=-1)) + 1, dtype=np.int64)
+        first_point[point] = self.point[cells]
+        first_group = np.zeros(int(group.max(initial=-1)) + 1, dtype=np.int64)
+        first_group[group] = self.group[cells]
+        names = ("weight", "own", "lot_own", "lot_shared", "cap", "q")
+        return replace(
+            self,
+            **{name: getattr(self, name)[cells] for name in names},
+            **_layout(point.astype(np.int64), group.astype(np.int64)),
+            point_factor=self.point_factor[first_point],
+            group_factor=self.group_factor[first_group],
+        )
 
     @property
     def lot(self) -> FloatArray:
@@ -179,14 +199,8 @@ def estimate_noise(evidence: Evidence, residual: FloatArray) -> Noise:
     u_group = sums(group, lot_shared) / np.bincount(group)
     sigma = _typical_sigma(points, np.sqrt(points.variance * scale[points.series]), n_families)
     z = residual / np.sqrt(own + lot)
-    cells_of = np.bincount(points.code)
-    by_point = np.argsort(points.code, kind="stable")
-    many = by_point[cells_of[points.code[by_point]] > 1]
-    _, many_first, many_size = np.unique(points.code[many], return_index=True, return_counts=True)
     return Noise(
         weight=weight,
-        point=points.code,
-        group=group.astype(np.int64),
         own=own,
         lot_own=lot_own,
         lot_shared=lot_shared,
@@ -199,11 +213,52 @@ def estimate_noise(evidence: Evidence, residual: FloatArray) -> Noise:
         correlation=_family_correlation(evidence, z),
         phi=phi,
         center=evidence.var_center * scale,
-        many=many,
-        many_first=many_first,
-        many_size=many_size,
         **_series_tables(evidence, points.code, group, q),
+        **_layout(points.code, group.astype(np.int64)),
     )
+
+
+def _layout(point: IntArray, group: IntArray) -> dict[str, Any]:
+    """Return the codes of points and groups with the orders and places that go with them."""
+    by_point = np.argsort(point, kind="stable")
+    size = np.bincount(point)
+    many = by_point[size[point[by_point]] > 1]
+    fresh = np.r_[True, point[many][1:] != point[many][:-1]] if len(many) else np.zeros(0, bool)
+    row = np.cumsum(fresh) - 1
+    place = np.arange(len(many)) - np.flatnonzero(fresh)[row] if len(many) else row
+    return {
+        "point": point,
+        "group": group,
+        "by_point": by_point,
+        "by_group": np.argsort(group, kind="stable"),
+        "many": many,
+        "many_row": row,
+        "many_place": place,
+    }
+
+
+def _sums_of_equals(
+    order: IntArray, owner: IntArray, codes: IntArray, weight: FloatArray
+) -> tuple[FloatArray, FloatArray]:
+    """Return for each cell the summed weight, and the number, of the cells that have its owner
+    (point or group) and its code; 0 where the code is negative. `order` sorts by owner."""
+    cells = order[codes[order] >= 0]
+    own, code, w = owner[cells], codes[cells], weight[cells]
+    total, count = np.zeros(len(codes)), np.zeros(len(codes))
+    run = int(np.bincount(own).max(initial=0))
+    if run > _LONG_RUN:
+        _, pair = np.unique(own * (int(code.max()) + 1) + code, return_inverse=True)
+        total[cells], count[cells] = sums(pair, w)[pair], np.bincount(pair)[pair]
+        return total, count
+    t, c = w.copy(), np.ones(len(w))
+    for d in range(1, run):
+        same = (own[d:] == own[:-d]) & (code[d:] == code[:-d])
+        t[d:] += np.where(same, w[:-d], 0.0)
+        t[:-d] += np.where(same, w[d:], 0.0)
+        c[d:] += same
+        c[:-d] += same
+    total[cells], count[cells] = t, c
+    return total, count
 
 
 def _series_tables(

@@ -13,7 +13,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from spc.stats.attribution_candidates import Column
+from spc.stats.attribution_candidates import Candidate
 from spc.stats.attribution_evidence import (
     DAY,
     AttributionOptions,
@@ -66,29 +66,27 @@ class Profile:
 def profile_level(
     evidence: Evidence,
     noise: Noise,
-    column: Column,
-    level: int,
+    candidate: Candidate,
     y: FloatArray,
-    unknown: FloatArray,
     options: AttributionOptions,
-    log_prior: float,
 ) -> Profile | None:
-    """Look closely at one level; `y` whitened residuals, `unknown` (F,) offset variance.
+    """Look closely at one level; `y` (n,) whitened residuals.
 
     Only windows with a cell measured after `options.since` are looked at. Returns None when the
     level has no monitored cell, or none that is new.
     """
+    column, level = candidate.column, candidate.level
     cells = np.flatnonzero(evidence.monitoring & column.cells(level))
     if not len(cells) or not new_cells(evidence, options)[cells].any():
         return None
     info, share = noise.information(np.where(column.cells(level), 0, -1))
-    look = _Look.of(evidence, noise, column, cells, y, info[cells], share[cells], unknown, options)
+    look = _Look.of(evidence, noise, candidate, cells, y, (info[cells], share[cells]), options)
     bins = _coarse(len(look.events))
     found = look.forms(bins)
     if len(bins) < len(look.events):
         best = _best_window(found)
         found = look.forms(_focus(len(look.events), bins, best))
-    return look.result(found, log_prior)
+    return look.result(found, candidate.log_prior)
 
 
 @dataclass(frozen=True)
@@ -128,9 +126,10 @@ class _Look:
 
     @classmethod
     def of(
-        cls, evidence: Evidence, noise: Noise, column: Column, cells: IntArray, y: FloatArray,
-        info: FloatArray, share: FloatArray, unknown: FloatArray, options: AttributionOptions,
+        cls, evidence: Evidence, noise: Noise, candidate: Candidate, cells: IntArray,
+        y: FloatArray, weights: tuple[FloatArray, FloatArray], options: AttributionOptions,
     ) -> _Look:  # fmt: skip
+        column, unknown, (info, share) = candidate.column, candidate.unknown, weights
         families, family = np.unique(evidence.cell_family[cells], return_inverse=True)
         seconds = column.time[cells]
         events, event = np.unique(seconds, return_inverse=True)

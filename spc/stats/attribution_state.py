@@ -3,11 +3,13 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, replace
+from functools import cached_property
 
 import numpy as np
 
 from spc.stats.attribution_candidates import (
     WHOLE,
+    Candidate,
     Column,
     Offsets,
     build_columns,
@@ -21,34 +23,18 @@ from spc.stats.attribution_evidence import (
     FloatArray,
     IntArray,
 )
-from spc.stats.attribution_fit import Fit, fit_effect, pattern_of
+from spc.stats.attribution_fit import Fit, Residuals, fit_effect, pattern_of
 from spc.stats.attribution_noise import Noise, estimate_noise
-from spc.stats.attribution_profile import Profile, profile_level
+from spc.stats.attribution_profile import Profile, Shape, profile_level
 from spc.stats.attribution_search import Plan, make_plan, scan, series_scores
 
 ALIAS = 0.97
 _KEEP = 8
 _CLOSE = 5.0
 _TIE = 2.0
-_REFINE = 3
+_REFINE = 2
+_REFINED_BINS = 32
 _CONJUNCTION_PRIOR = 0.1
-
-
-@dataclass(frozen=True)
-class Candidate:
-    """A level to look at: its column, level code, log prior of the level, `unknown` (F,) offset
-    variance and the score of the coarse scan."""
-
-    column: Column
-    level: int
-    log_prior: float
-    unknown: FloatArray
-    score: float
-
-    @property
-    def key(self) -> tuple[tuple[str, ...], tuple[str, ...]]:
-        """Factor names and level names."""
-        return self.column.factors, self.column.names[self.level]
 
 
 @dataclass(frozen=True)
@@ -76,7 +62,7 @@ class Found:
 @dataclass(frozen=True)
 class State:
     """Everything that does not change during a search. `residual` (n,) has the usual offsets of
-    levels taken out; `plans` cover what is new (options.since), `all_plans` everything."""
+    levels taken out; `plans` cover what is new (options.since)."""
 
     evidence: Evidence
     options: AttributionOptions
@@ -85,7 +71,6 @@ class State:
     offsets: Offsets
     residual: FloatArray
     plans: tuple[Plan, ...]
-    all_plans: tuple[Plan, ...]
 
     @classmethod
     def of(cls, evidence: Evidence, options: AttributionOptions) -> State:
@@ -95,12 +80,16 @@ class State:
         offsets = usual_offsets(evidence, rough, columns)
         residual = evidence.residual - offsets.total
         noise = estimate_noise(evidence, residual)
-        parts = (evidence, noise, columns, offsets)
-        plans = _plans(*parts, options)
-        everything = plans
-        if options.since is not None:
-            everything = _plans(*parts, replace(options, since=None))
-        return cls(evidence, options, noise, columns, offsets, residual, plans, everything)
+        plans = _plans(evidence, noise, columns, offsets, options)
+        return cls(evidence, options, noise, columns, offsets, residual, plans)
+
+    @cached_property
+    def all_plans(self) -> tuple[Plan, ...]:
+        """Plans over everything, new or not: made when something was found."""
+        if self.options.since is None:
+            return self.plans
+        options = replace(self.options, since=None)
+        return _plans(self.evidence, self.noise, self.columns, self.offsets, options)
 
     def whitened(self, residual: FloatArray) -> FloatArray:
         """Return whitened residuals, wild values brought in."""
@@ -150,32 +139,29 @@ class State:
 
     def candidate(self, column: Column, level: int, score: float = -np.inf) -> Candidate:
         """Return a level of one of the bay's columns as a candidate."""
-        plan = next((p for p in self.all_plans if p.column is column), None)
-        active = len(plan.active) if plan is not None else len(column.names)
         index = next(i for i, c in enumerate(self.columns) if c is column)
+        codes = column.codes[self.evidence.monitoring]
+        active = len(np.unique(codes[codes >= 0]))
         prior = column_prior(self.columns, column) - float(np.log(max(active, 1)))
         return Candidate(column, level, prior, self.offsets.variance[index][level], score)
 
     def look(self, candidate: Candidate, y: FloatArray, fresh: bool) -> Profile | None:
         """Look closely at a candidate."""
         options = self.options if fresh else replace(self.options, since=None)
-        return profile_level(
-            self.evidence, self.noise, candidate.column, candidate.level, y, candidate.unknown,
-            options, candidate.log_prior,
-        )  # fmt: skip
+        return profile_level(self.evidence, self.noise, candidate, y, options)
 
-    def fit(self, candidate: Candidate, profile: Profile, residual: FloatArray) -> Fit | None:
-        """Estimate the sizes of a candidate in its best window."""
-        return fit_effect(
-            self.evidence, self.noise, candidate.column, candidate.level, profile.shape, residual,
-            candidate.unknown, self.options,
-        )  # fmt: skip
+    def fit(
+        self, candidate: Candidate, shape: Shape, residual: FloatArray, y: FloatArray
+    ) -> Fit | None:
+        """Estimate the sizes of a candidate in a window; `y` are the whitened residuals."""
+        data = Residuals(residual, y)
+        return fit_effect(self.evidence, self.noise, candidate, shape, data, self.options)
 
     def best(
         self, residual: FloatArray, fresh: bool, touching: BoolArray | None = None
     ) -> Found | None:
         """Return the best explanation of the residuals, conjunctions below the best levels
-        included. None if there is nothing to look at."""
+        included; see `candidates`. None if there is nothing to look at."""
         rough = self.candidates(residual, fresh, touching)
         if not rough:
             return None
@@ -189,7 +175,7 @@ class State:
             Found(c, p, fit)
             for c, p in looked
             if p.score >= max(q.score for _, q in looked) - _TIE
-            and (fit := self.fit(c, p, residual)) is not None
+            and (fit := self.fit(c, p.shape, residual, y)) is not None
         ]
         if not found:
             return None
@@ -216,9 +202,9 @@ class State:
             if jaccard(found.fit.cells, np.flatnonzero(theirs)) < 0.5:
                 continue
             profile = self.look(candidate, y, fresh)
-            if profile is None or profile.gain < found.profile.gain / 2.0:
+            if profile is None:
                 continue
-            fit = self.fit(candidate, profile, residual)
+            fit = self.fit(candidate, profile.shape, residual, y)
             if fit is not None:
                 other = Found(candidate, profile, fit)
                 if self.same_cells(found, other):
@@ -251,7 +237,8 @@ class State:
         """Return conjunctions that score at least as well as their single parent level."""
         out: list[Candidate] = []
         whole = series_scores(self.evidence, y)
-        options = self.options if fresh else replace(self.options, since=None)
+        since = self.options.since if fresh else None
+        options = replace(self.options, since=since, bins=min(self.options.bins, _REFINED_BINS))
         singles = [c for c in self.columns if len(c.factors) == 1 and c.twin_of < 0]
         for parent in parents:
             if len(parent.column.factors) != 1 or parent.column.factors == (WHOLE,):

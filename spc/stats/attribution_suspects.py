@@ -2,21 +2,22 @@
 
 from __future__ import annotations
 
-from dataclasses import replace
+from dataclasses import dataclass, replace
 
 import numpy as np
 
 from spc.stats.attribution_calibration import Calibration
-from spc.stats.attribution_candidates import WHOLE, Column
+from spc.stats.attribution_candidates import WHOLE, Candidate, Column
 from spc.stats.attribution_effects import Level, RuledOut, Separation, Suspect
 from spc.stats.attribution_evidence import Evidence, FloatArray, statistic_class
-from spc.stats.attribution_fit import Fit, fit_effect, pattern_of
+from spc.stats.attribution_fit import Fit, pattern_of
 from spc.stats.attribution_profile import Profile, Shape
-from spc.stats.attribution_state import ALIAS, Candidate, Found, State, jaccard
+from spc.stats.attribution_state import ALIAS, Found, State, jaccard
 
 _SUSPECTS = 6
 _TOLERANCE = 1.5
 _HALF = 0.5
+_ALIKE = 0.6
 
 
 def form_of(evidence: Evidence, found: Found) -> str:
@@ -54,6 +55,15 @@ def level_of(candidate: Candidate) -> Level:
     return Level(*candidate.key)
 
 
+@dataclass(frozen=True)
+class _Rival:
+    """Another level: its close look, and its sizes over the found effect's own window."""
+
+    candidate: Candidate
+    profile: Profile
+    fit: Fit | None
+
+
 def suspects_of(
     state: State, found: Found, residual: FloatArray, calibration: Calibration
 ) -> tuple[tuple[Suspect, ...], tuple[RuledOut, ...], tuple[Separation, ...]]:
@@ -62,41 +72,53 @@ def suspects_of(
     `residual` (n,) is what the other effects leave. The first suspect is the effect's own level
     with its aliases.
     """
+    rivals = _rivals(state, found, residual)
+    aliases = _exact_aliases(state, found)
+    near = [
+        level_of(r.candidate)
+        for r in rivals
+        if r.profile.gain > found.profile.gain - _TOLERANCE
+        and _common(state, found, r.candidate, r.profile) > _ALIKE
+    ]
+    aliases += [level for level in near if level not in aliases]
+    own = level_of(found.candidate)
+    effect, se = _size(found, found.fit)
+    p = calibration.p_value(found.strength)
+    suspects = [Suspect(own, effect, se, p, found.score, tuple(aliases))]
+    others = [r for r in rivals if level_of(r.candidate) not in aliases]
+    for rival in others[:_SUSPECTS]:
+        effect, se = _size(found, rival.fit)
+        p = calibration.p_value(rival.candidate.score)
+        suspects.append(Suspect(level_of(rival.candidate), effect, se, p, rival.profile.score))
+    ruled = [_ruled_out(state, found, rival) for rival in others]
+    experiments = [e for alias in aliases for e in _separations(state, found, own, alias)]
+    experiments.sort(key=lambda e: -e.seen)
+    return tuple(suspects), tuple(ruled), tuple(experiments)
+
+
+def _rivals(state: State, found: Found, residual: FloatArray) -> list[_Rival]:
+    """Return the best other levels that share cells with an effect, best first."""
     touching = np.zeros(len(residual), dtype=bool)
     touching[found.fit.cells] = True
     y = state.whitened(residual)
-    rivals: list[tuple[Candidate, Profile]] = []
-    for candidate in state.candidates(residual, False, touching)[: _SUSPECTS + 3]:
+    out: list[_Rival] = []
+    for candidate in state.candidates(residual, False, touching)[: _SUSPECTS + 2]:
         if candidate.key == found.candidate.key:
             continue
         profile = state.look(candidate, y, False)
         if profile is not None:
-            rivals.append((candidate, profile))
-    rivals.sort(key=lambda pair: -pair[1].score)
-    aliases = _exact_aliases(state, found)
-    near = [
-        level_of(c)
-        for c, p in rivals
-        if p.gain > found.profile.gain - _TOLERANCE and _common(state, found, c, p) > 0.6
-    ]
-    aliases += [level for level in near if level not in aliases]
-    own = level_of(found.candidate)
-    suspects = [
-        _suspect(state, found, found.candidate, found.score, residual, calibration, aliases)
-    ]
-    suspects[0] = replace(suspects[0], p_adjusted=calibration.p_value(found.strength))
-    for candidate, profile in rivals:
-        if level_of(candidate) in aliases or len(suspects) > _SUSPECTS:
-            continue
-        suspects.append(_suspect(state, found, candidate, profile.score, residual, calibration, []))
-    ruled = [
-        _ruled_out(state, found, candidate, profile, residual)
-        for candidate, profile in rivals
-        if level_of(candidate) not in aliases
-    ]
-    experiments = [e for alias in aliases for e in _separations(state, found, own, alias)]
-    experiments.sort(key=lambda e: -e.seen)
-    return tuple(suspects), tuple(ruled), tuple(experiments)
+            fit = state.fit(candidate, found.profile.shape, residual, y)
+            out.append(_Rival(candidate, profile, fit))
+    return sorted(out, key=lambda rival: -rival.profile.score)
+
+
+def _size(found: Found, fit: Fit | None) -> tuple[float, float]:
+    """Amplitude and standard error in the found effect's leading family; (0, inf) if none."""
+    family = found.fit.families[found.fit.main()]
+    if fit is None or family not in fit.families:
+        return 0.0, float("inf")
+    i = int(np.searchsorted(fit.families, family))
+    return float(fit.amplitude[i]), float(fit.se[i])
 
 
 def _exact_aliases(state: State, found: Found) -> list[Level]:
@@ -132,33 +154,6 @@ def _common(state: State, found: Found, candidate: Candidate, profile: Profile) 
     return jaccard(mine, np.flatnonzero(on & relevant))
 
 
-def _suspect(
-    state: State, found: Found, candidate: Candidate, score: float, residual: FloatArray,
-    calibration: Calibration, aliases: list[Level],
-) -> Suspect:  # fmt: skip
-    fit = _fit_in_window(state, found, candidate, residual)
-    effect, se = 0.0, float("inf")
-    family = found.fit.families[found.fit.main()]
-    if fit is not None and family in fit.families:
-        i = int(np.searchsorted(fit.families, family))
-        effect, se = float(fit.amplitude[i]), float(fit.se[i])
-    return Suspect(
-        level_of(candidate), effect, se, calibration.p_value(score), score, tuple(aliases)
-    )
-
-
-def _fit_in_window(
-    state: State, found: Found, candidate: Candidate, residual: FloatArray
-) -> Fit | None:
-    """Fit a rival level over the effect's own window, so that sizes compare."""
-    if candidate is found.candidate:
-        return found.fit
-    return fit_effect(
-        state.evidence, state.noise, candidate.column, candidate.level, found.profile.shape,
-        residual, candidate.unknown, state.options,
-    )  # fmt: skip
-
-
 def moved_series(state: State, found: Found, fit: Fit) -> np.ndarray:
     """Return which series of a fit moved by themselves, with the sign of the found effect."""
     sign = dict(
@@ -171,11 +166,9 @@ def moved_series(state: State, found: Found, fit: Fit) -> np.ndarray:
     return direction * fit.series_value > 2.0 * fit.series_se
 
 
-def _ruled_out(
-    state: State, found: Found, candidate: Candidate, profile: Profile, residual: FloatArray
-) -> RuledOut:
+def _ruled_out(state: State, found: Found, rival: _Rival) -> RuledOut:
     """Say why a rival is not the cause."""
-    fit = _fit_in_window(state, found, candidate, residual)
+    candidate, profile, fit = rival.candidate, rival.profile, rival.fit
     odds = found.score - profile.score
     level = level_of(candidate)
     if fit is None:

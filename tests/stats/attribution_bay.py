@@ -125,7 +125,7 @@ class _Maker:
         track = self.track[lots]
         film = own == "film"
         return {
-            "tool": track if film else 10 + self.scanner[lots],
+            "tool": track if film else FIRST_SCANNER + self.scanner[lots],
             "module": cup if film else np.full(len(lots), -1),
             "gauge": gauge,
             "resist_batch": self.batch[lots],
@@ -187,8 +187,8 @@ class _Maker:
             ("coat.module", bay.offsets), ("gauge", 0.5 * bay.offsets),
             ("resist_batch", bay.batch_sigma),
         ):  # fmt: skip
-            table = size * rng.standard_normal((100, n_families))
-            key = data[name] + (10 * data["coat.tool"] if name == "coat.module" else 0)
+            table = size * rng.standard_normal((4 * FIRST_SCANNER, n_families))
+            key = data[name] + (4 * data["coat.tool"] if name == "coat.module" else 0)
             out += np.where((data[name] >= 0) & ~score, table[key, family], 0.0)
         soft = data["statistic"] > 0
         wild = soft & (rng.random(len(out)) < bay.flyers) & (data["characteristic"] < 2)
@@ -211,7 +211,7 @@ class _Maker:
         return out
 
     def _point_noise(self, data: dict[str, np.ndarray], family: np.ndarray) -> np.ndarray:
-        key = (family * 1000 + data["stream"]) * self.n + data["lot"]
+        key = (family * 10_000 + data["stream"]) * self.n + data["lot"]
         _, inverse = np.unique(key, return_inverse=True)
         return self.rng.standard_normal(int(inverse.max()) + 1)[inverse]
 
@@ -304,7 +304,8 @@ def _lag_one(
 
 
 SIGMA = float(np.sqrt(1.6))
-_TOOLS = tuple(f"T{i + 1}" for i in range(10)) + tuple(f"S{i + 1}" for i in range(20))
+FIRST_SCANNER = 200
+_TOOLS = tuple(f"T{i + 1}" for i in range(FIRST_SCANNER)) + tuple(f"S{i + 1}" for i in range(99))
 _CUPS = tuple(f"C{i + 1}" for i in range(10))
 LEVEL_NAMES: dict[str, tuple[str, ...]] = {
     "tool": _TOOLS,
@@ -313,6 +314,6 @@ LEVEL_NAMES: dict[str, tuple[str, ...]] = {
     "resist_batch": tuple(f"B{i}" for i in range(100)),
     "reticle": tuple(f"R{i}" for i in range(6)),
     "product": ("P1", "P2", "P3"),
-    "coat.tool": _TOOLS[:10],
+    "coat.tool": _TOOLS[:FIRST_SCANNER],
     "coat.module": _CUPS,
 }

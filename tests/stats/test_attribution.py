@@ -9,7 +9,7 @@ import pytest
 
 from spc.stats.attribution import AttributionOptions, Effect, Evidence, Level, attribute
 from spc.stats.attribution_state import State
-from tests.stats.attribution_bay import DAY, Bay, Fault
+from tests.stats.attribution_bay import DAY, FIRST_SCANNER, Bay, Fault
 
 BAY = Bay(days=20.0, lots_a_day=24.0)
 START = 17.3
@@ -139,7 +139,7 @@ def test_aliased_levels_are_named_together_with_an_experiment() -> None:
     fault = Fault({"tool": "S1"}, {WIDTH: 3.0}, start=16.0)
     evidence = BAY.with_faults(fault).simulate(7)
     j = evidence.factors.index("resist_batch")
-    on = (evidence.t_process >= 16.0 * DAY) & (evidence.levels[:, 0] == 10)
+    on = (evidence.t_process >= 16.0 * DAY) & (evidence.levels[:, 0] == FIRST_SCANNER)
     levels = evidence.levels.copy()
     levels[:, j] = np.where(on, 90, levels[:, j])
     effects = attribute(replace(evidence, levels=levels), OPTIONS, NOW * DAY)
