@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any
 
 from markupsafe import Markup
@@ -183,6 +183,8 @@ def _charts(view: InvestigationPage) -> tuple[list[ChartView], Markup | None]:
         strip = TimeLook(figures.STRIP, figures.STRIP_NARROW, axis, share)
         look = strip if i else TimeLook(axis=axis, most_points=_POINTS_LEADING)
         picture, spec = time_figure(name, series, view.edition, look)
+        if charts and picture.events == charts[0].figure.events:
+            picture = replace(picture, events=())  # explained under the first chart
         title = series_name(shown(series.characteristic), series.statistic)
         role = text("investigation.affected" if series.affected else "investigation.unaffected")
         title = text("investigation.chart", name=title, context=context_words(series.context))

@@ -194,7 +194,8 @@ def recent_points(series: ChartSeries, name: str, clock: LocalClock, most: int) 
     onset = series.onset
     own = [p for p in points if p.rules or (onset and p.at >= onset.earliest)] or list(points)
     few = tuple(own[:most])
-    caption = plural("night.points", len(few), count=len(few), all=len(own))
+    key = "night.points" if len(few) < len(own) else "night.points_all"
+    caption = plural(key, len(few), count=len(few), all=len(own))
     return points_table(series, few, f"{name}-points", caption, clock)
 
 

@@ -142,6 +142,14 @@ def probability(p: float | None) -> str:
     return number(p, places)
 
 
+def p_value(p: float | None) -> str:
+    """A p-value in a sentence: `p = 0.003`, `p < 0.0001`."""
+    written = probability(p)
+    if written.startswith("<"):
+        return f"p{THIN}{written}"
+    return f"p{THIN}={THIN}{written}"
+
+
 def index(value: float | None) -> str:
     """A capability index: two decimals, no unit."""
     return number(value, 2)

@@ -20,7 +20,7 @@ from reports.numbers import (
     index,
     interval,
     number,
-    probability,
+    p_value,
     quantity,
 )
 from reports.texts import has, join, plural, shown, text
@@ -133,7 +133,7 @@ def sureness(excursion: Excursion) -> str:
     """How sure: the chance that noise did it where known, else the size in sigmas."""
     found = excursion.magnitude
     if excursion.p_chance is not None:
-        return text("sure.chance", p=probability(excursion.p_chance))
+        return text("sure.chance", p=p_value(excursion.p_chance))
     if found is not None and found.sigmas is not None:
         return text("sure.sigmas", sigmas=number(abs(found.sigmas), 1))
     return ""
@@ -144,7 +144,7 @@ def cause(excursion: Excursion) -> str:
     if not excursion.suspects:
         return text("cause.none")
     first = excursion.suspects[0]
-    p = "" if first.p_adjusted is None else text("cause.p", p=probability(first.p_adjusted))
+    p = "" if first.p_adjusted is None else text("cause.p", p=p_value(first.p_adjusted))
     if first.aliased_with:
         names = [level_words(first), *(level_words(level) for level in first.aliased_with)]
         return text("cause.aliased", names=text("join.or").join(names), p=p)

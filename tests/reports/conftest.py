@@ -57,7 +57,7 @@ def pages() -> dict[str, str]:
     return {
         "nights/night.html": night_page(samples.night(bad)),
         "nights/quiet.html": night_page(samples.quiet_night()),
-        "excursions/x.html": investigation_page(samples_pages.investigation(bad, n_streams=3)),
+        "excursions/x.html": investigation_page(samples_pages.investigation(bad, n_streams=1)),
         "reviews/r.html": review_page(samples_pages.review(bad)),
         "index.html": index_page(samples_pages.index(bad)),
     }

@@ -64,7 +64,9 @@ def test_every_form_has_its_sentence(pattern: Any, bounded: bool) -> None:
 def test_levels_that_cannot_be_told_apart_are_named_together() -> None:
     suspect = Suspect("reticle", "RT-118", 3.0, 0.003, (Level("recipe", "EXP-M1-07"),))
     said = plain(sentence(samples.excursion(suspects=(suspect,)), CLOCK))
-    assert "reticle RT-118 or recipe EXP-M1-07, which the data cannot tell apart (p 0.003)" in said
+    assert (
+        "reticle RT-118 or recipe EXP-M1-07, which the data cannot tell apart (p = 0.003)" in said
+    )
     assert "no cause stands out" in sentence(samples.excursion(suspects=()), CLOCK)
 
 
