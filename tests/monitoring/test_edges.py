@@ -146,3 +146,22 @@ def test_readings_of_another_kind_of_unit_are_left_out_and_said_so(engine: Engin
     result = evaluate(engine, bay, hours(1000))
     assert result.notes == ("t: readings in 'kPa' do not convert to 'nm' and are left out",)
     assert result.points_evaluated == 2
+
+
+def test_streams_can_be_told_apart_by_another_step(engine: Engine) -> None:
+    wafers = lots_of(np.random.default_rng(9), 2)
+    steps = [
+        Step(
+            w.lot,
+            w.wafer,
+            w.measured - (hours(1) - hours(0)),
+            {"layer": "M1", "step": "expose", "tool": "EXP" + w.lot[-1]},
+        )
+        for w in wafers
+    ]
+    add(engine, wafers, steps)
+    points = listed(engine, {**PLAN, "stream_by": ("expose.tool",)})
+    assert {p["lot"]: p["context"] for p in points} == {
+        "TRK1C1L0000": {"expose.tool": "EXP0"},
+        "TRK1C1L0001": {"expose.tool": "EXP1"},
+    }
