@@ -13,7 +13,7 @@ import hashlib
 import os
 import stat
 import zlib
-from collections.abc import Iterator
+from collections.abc import Iterable
 from dataclasses import dataclass
 from pathlib import Path
 from typing import BinaryIO
@@ -21,6 +21,7 @@ from typing import BinaryIO
 from ingest.report import Refused
 
 CHUNK = 1 << 20
+_LONGEST_PATH = 1000  # bytes; PostgreSQL keeps no keys longer than some 2700
 
 
 class DropFolderError(Exception):
@@ -59,23 +60,44 @@ class Content:
     refused: Refused | None = None
 
 
-def find_drops(folder: Path) -> list[Drop]:
-    """All drops below the folder, sorted by path.
+@dataclass(frozen=True)
+class Found:
+    """The drops of a folder sorted by path, and the folders that could not be read, with why."""
+
+    drops: list[Drop]
+    unreadable: list[tuple[str, str]]
+
+
+def find_drops(folder: Path) -> Found:
+    """All drops below the folder.
 
     Raises
     ------
     DropFolderError
-        When the folder is missing or cannot be read.
+        When the folder itself is missing or cannot be read.
     """
     try:
         root = os.path.realpath(folder, strict=True)
-        found = list(_walk(root, root))
+        with os.scandir(root):
+            pass
     except OSError as error:
         raise DropFolderError(
             f"drop folder {folder}: {error.strerror or error}. "
             "Mount it, mend its permissions, or mend [drops] folder."
         ) from error
-    return sorted(found, key=lambda drop: drop.path)
+    found = Found([], [])
+    pending = [root]
+    while pending:
+        here = pending.pop()
+        try:
+            with os.scandir(here) as entries:
+                pending += _look_through(root, entries, found.drops)
+        except FileNotFoundError:
+            continue  # taken away meanwhile
+        except OSError as error:
+            found.unreadable.append((_shown(os.path.relpath(here, root)), str(error.strerror)))
+    found.drops.sort(key=lambda drop: drop.path)
+    return found
 
 
 def settled(drop: Drop, now_ns: int, settle_seconds: float) -> bool:
@@ -116,20 +138,19 @@ def _state(status: os.stat_result) -> tuple[int, int]:
     return status.st_size, status.st_mtime_ns
 
 
-def _walk(root: str, folder: str) -> Iterator[Drop]:
-    with os.scandir(folder) as entries:
-        for entry in entries:
-            if entry.name.startswith("."):
-                continue
-            if entry.is_dir(follow_symlinks=False):
-                try:
-                    yield from _walk(root, entry.path)
-                except FileNotFoundError:
-                    continue  # taken away meanwhile
-            elif entry.name.lower().endswith((".csv", ".csv.gz")):
-                drop = _drop(root, entry)
-                if drop is not None:
-                    yield drop
+def _look_through(root: str, entries: Iterable[os.DirEntry[str]], drops: list[Drop]) -> list[str]:
+    """Add the drops of one folder; return the folders in it."""
+    folders = []
+    for entry in entries:
+        if entry.name.startswith("."):
+            continue
+        if entry.is_dir(follow_symlinks=False):
+            folders.append(entry.path)
+        elif entry.name.lower().endswith((".csv", ".csv.gz")):
+            drop = _drop(root, entry)
+            if drop is not None:
+                drops.append(drop)
+    return folders
 
 
 def _drop(root: str, entry: os.DirEntry[str]) -> Drop | None:
@@ -148,8 +169,12 @@ def _drop(root: str, entry: os.DirEntry[str]) -> Drop | None:
 
 
 def _shown(path: str) -> str:
-    """Path that can be stored and printed, whatever bytes the name is made of."""
-    return path.replace(os.sep, "/").encode("utf-8", "backslashreplace").decode("utf-8")
+    """Path that can be stored and printed, whatever bytes the name is made of and however many."""
+    text = path.replace(os.sep, "/").encode("utf-8", "backslashreplace").decode("utf-8")
+    if len(text.encode()) <= _LONGEST_PATH:
+        return text
+    digest = hashlib.sha256(text.encode()).hexdigest()[:16]
+    return f"{text[:100]}…{digest}…{text[-100:]}"
 
 
 def _plain(file: BinaryIO, drop: Drop, max_bytes: int) -> Content:

@@ -70,8 +70,9 @@ def take_in(
         seen = ledger.sightings_of(connection)
         stale = ledger.stale_hashes(connection, feeds.digest)
         units = ledger.parameter_units(connection)
-    todo, waiting, unchanged = [], [], 0
-    for drop in found:
+    todo, unchanged = [], 0
+    waiting = [_unreadable(path, why) for path, why in found.unreadable]
+    for drop in found.drops:
         known = seen.get(drop.path)
         if (
             known is not None
@@ -158,6 +159,11 @@ def _in_hand(todo: Sequence[Drop], store: Store) -> Generator[_Claimed, None, No
         finally:
             if ahead is not None:
                 ahead.result().release()
+
+
+def _unreadable(folder: str, why: str) -> FileReport:
+    reason = Reason(None, None, None, f"the folder cannot be read: {why}; mend its permissions")
+    return FileReport(folder + "/", "waiting", reasons=(reason,))
 
 
 def _waiting(drop: Drop, why: str) -> FileReport:

@@ -16,7 +16,7 @@ from numpy.typing import NDArray
 from sqlalchemy import Connection
 
 from ingest.columns import Rows
-from ingest.readings import broken_names, contexts_of, stamps_of
+from ingest.readings import NAMES, check_names, contexts_of, stamps_of
 from ingest.sheet import Faults, Texts
 from spc.records.interned import Vocabulary
 from spc.records.readings import insert_events, insert_log, stored_events, stored_log
@@ -46,7 +46,9 @@ def read_log(rows: Rows, zone: tzinfo, stamp_format: str | None, faults: Faults)
     columns = {**rows.context, **rows.house}
     for name in ("lot", "wafer", "tool"):
         faults.add(columns[name].empty, f"{name} is empty", columns[name])
-        broken_names(columns[name], faults)
+    for name in NAMES:
+        if name in columns:
+            check_names(columns[name], faults)
     processed = stamps_of(rows.house["processed_at"], zone, stamp_format, faults)
     good = np.flatnonzero(faults.clean)
     context, contexts = contexts_of(rows.context, good)
@@ -61,6 +63,9 @@ def read_events(rows: Rows, zone: tzinfo, stamp_format: str | None, faults: Faul
     """Check bay events, mark the faulty ones, and return the others."""
     house = rows.house
     faults.add(house["kind"].empty, "kind is empty", house["kind"])
+    for name in ("kind", "tool", "module"):
+        if name in house:
+            check_names(house[name], faults)
     at = stamps_of(house["at"], zone, stamp_format, faults)
     good = np.flatnonzero(faults.clean)
     context, contexts = contexts_of(rows.context, good)

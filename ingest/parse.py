@@ -185,7 +185,13 @@ def _fast(
     end = _end_of_rows(data, header.body)
     if end == header.body:
         return [arrow.strings([]) for _ in header.names]
-    if text.damaged or data.find(b"\0") >= 0 or len(header.names) < 2 or _lone_returns(data):
+    if (
+        text.damaged
+        or not form.separator.isascii()
+        or data.find(b"\0") >= 0
+        or len(header.names) < 2
+        or _lone_returns(data)
+    ):
         return None
     names = [str(i) for i in range(len(header.names))]
     types = {

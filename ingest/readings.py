@@ -7,11 +7,12 @@ from dataclasses import dataclass
 from datetime import tzinfo
 
 import numpy as np
+import pyarrow.compute as pc
 from numpy.typing import NDArray
 
 from config.settings import PlausibleSettings
 from config.values import unit_factor
-from ingest import moments, sites, units
+from ingest import arrow, moments, sites, units
 from ingest.columns import Rows
 from ingest.numbers import parse_numbers, reason_of
 from ingest.sheet import Faults, Texts, combined, numbered
@@ -19,6 +20,12 @@ from spc.records.contexts import context_text
 from spc.records.readings import WaferKey
 
 NO_STAMP = np.iinfo(np.int64).min
+# PostgreSQL has no index for keys of more than some 2700 bytes; a key has up to four names.
+LONGEST_NAME = 128
+NAMES = (
+    *("parameter", "lot", "wafer", "site", "layer", "tool", "module", "gauge", "product"),
+    *("recipe", "step"),
+)
 _KEY_COLUMNS = ("parameter", "lot", "wafer")
 
 
@@ -71,9 +78,9 @@ def read_batch(rows: Rows, rules: Rules, faults: Faults, warnings: Faults) -> Ba
     house = rows.house
     for name in _KEY_COLUMNS:
         faults.add(house[name].empty, f"{name} is empty", house[name])
-    for name in (*_KEY_COLUMNS, "site"):
-        if name in house:
-            broken_names(house[name], faults)
+    for name in NAMES:
+        if name in house or name in rows.context:
+            check_names(house.get(name) or rows.context[name], faults)
     measured = stamps_of(house["measured_at"], rules.zone, rules.stamp_format, faults)
     processed = np.full(rows.n, NO_STAMP, np.int64)
     if "processed_at" in house:
@@ -109,12 +116,18 @@ def stamps_of(
     return stamps[column.codes] if len(stamps) else np.zeros(len(column.codes), np.int64)
 
 
-def broken_names(column: Texts, faults: Faults) -> None:
-    """Mark rows whose name holds a line break: a quote that was not closed."""
-    broken = np.array([("\n" in text or "\r" in text) for text in column.texts], bool)
+def check_names(column: Texts, faults: Faults) -> None:
+    """Mark rows whose name holds a line break (a quote that was not closed) or is too long."""
+    if not len(column.distinct):
+        return
+    broken = arrow.mask(pc.match_substring_regex(column.distinct, r"[\r\n]"))
     if broken.any():
         reason = f"{column.name} holds a line break; close the quote, or take the break out"
         faults.add(broken[column.codes], reason, column)
+    if arrow.lengths(column.distinct).max() > LONGEST_NAME:
+        long = np.array([len(text) > LONGEST_NAME for text in column.texts], bool)
+        reason = f"{column.name} is longer than {LONGEST_NAME} characters"
+        faults.add(long[column.codes], reason, column)
 
 
 def contexts_of(

@@ -7,6 +7,7 @@ from __future__ import annotations
 
 import gzip
 import os
+import random
 from collections.abc import Iterator
 from datetime import timedelta
 from pathlib import Path
@@ -14,8 +15,9 @@ from pathlib import Path
 import pytest
 from sqlalchemy import Engine
 
+import ingest.load
 import ingest.store
-from ingest.drops import DropFolderError
+from ingest.drops import DropFolderError, find_drops
 from tests.ingest.intake import CLOCK, Intake, reading, sheet
 
 LOG = "processed_at,lot,wafer,tool,module,step\n2026-05-01T08:00:00Z,N1,1,TRK1,C2,coat\n"
@@ -332,3 +334,65 @@ def test_gzip_of_several_members(night: Intake) -> None:
     text = sheet(reading(), reading(site="2")).encode()
     night.drop("a.csv.gz", gzip.compress(text[:70]) + gzip.compress(text[70:]))
     assert night.take().readings["loaded"] == 2
+
+
+def test_names_that_no_index_takes_are_rejected(night: Intake) -> None:
+    # PostgreSQL refuses index rows of more than about 2700 bytes; random letters do not compress.
+    rng = random.Random(1)
+    letters = [chr(0x4E00 + i) for i in range(20000)]
+    long, longest = ("".join(rng.choices(letters, k=n)) for n in (129, 128))
+    rows = [reading(lot=long), reading(tool=long)]
+    rows += [reading(lot=longest, wafer=longest, parameter=longest, layer=longest, site=longest)]
+    night.drop("a.csv", sheet(*rows))
+    [one] = night.take().files
+    assert [(r.line, r.column) for r in one.reasons] == [(2, "lot"), (3, "tool")]
+    assert one.counts.loaded == 1
+
+
+def test_long_paths_have_short_names(night: Intake) -> None:
+    deep = "/".join(["d" * 200] * 12)
+    night.drop(f"{deep}/a.csv", sheet(reading()))
+    [one] = night.take().files
+    assert one.outcome == "loaded"
+    assert len(one.path) < 250
+    assert one.path.endswith("/a.csv")
+    assert night.take().files == ()
+
+
+def test_a_folder_that_cannot_be_read_is_told(
+    night: Intake, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    night.drop("a.csv", sheet(reading()))
+    night.drop("shut/b.csv", sheet(reading()))
+    real = os.scandir
+
+    def scandir(path: str) -> object:
+        if path.endswith("shut"):
+            raise PermissionError(13, "Permission denied")
+        return real(path)
+
+    monkeypatch.setattr(os, "scandir", scandir)
+    report = night.take()
+    assert [(f.path, f.outcome) for f in report.files] == [
+        ("a.csv", "loaded"),
+        ("shut/", "waiting"),
+    ]
+    assert "Permission denied" in report.files[1].reasons[0].reason
+
+
+def test_files_that_change_or_vanish_under_our_eyes_wait(
+    night: Intake, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    paths = [night.drop(f"{name}.csv", sheet(reading(lot=name))) for name in "abc"]
+    found = find_drops(night.drops)
+    paths[0].unlink()
+    paths[1].write_text(sheet(reading()))
+    monkeypatch.setattr(ingest.load, "find_drops", lambda _folder: found)
+    report = night.take()
+    assert [(f.path, f.outcome) for f in report.files] == [
+        ("a.csv", "waiting"),
+        ("b.csv", "waiting"),
+        ("c.csv", "loaded"),
+    ]
+    assert "No such file" in report.files[0].reasons[0].reason
+    assert "changed" in report.files[1].reasons[0].reason

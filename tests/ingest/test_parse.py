@@ -194,3 +194,8 @@ def test_too_many_columns() -> None:
     header = ",".join(f"c{i}" for i in range(2500))
     with pytest.raises(Refused, match="more than 2000 columns"):
         read(header + "\n", parse.TextFormat())
+
+
+def test_a_separator_of_several_bytes() -> None:
+    form = replace(FORM, separator="¦", encoding="utf-8")
+    assert table(read("a¦b\n1¦2\n", form)) == [(2, "1", "2")]
