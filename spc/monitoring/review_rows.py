@@ -36,6 +36,7 @@ from spc.stats.capability_nonnormal import (
     goodness_of_fit,
     study_with_law,
 )
+from spc.stats.components import Components
 
 FloatArray = NDArray[np.float64]
 
@@ -108,7 +109,7 @@ def empty_row() -> dict[str, Any]:
     row: dict[str, Any] = {"n_lots": 0, "n_wafers": 0, "n_readings": 0}
     row |= dict.fromkeys(("mean", "mean_low", "mean_high", "sd_overall", "sd_within", "sd_total"))
     row["components"] = {"lot": None, "wafer": None, "site": None}
-    row |= dict.fromkeys(("site_signature_out", "pooled"))
+    row |= dict.fromkeys(("components_signature_out", "site_signature_out", "pooled"))
     for name in INDICES:
         row |= dict.fromkeys((name, f"{name}_low", f"{name}_high"))
     for name in ("ppm_expected", "ppm_observed"):
@@ -235,13 +236,13 @@ def finite(value: Any) -> float | None:
     return number if np.isfinite(number) else None
 
 
+def _parts(components: Components, unit: int) -> dict[str, float | None]:
+    return {name: finite(getattr(components, name)[unit]) for name in ("lot", "wafer", "site")}
+
+
 def _numbers(found: UnitStatistics, unit: int) -> dict[str, Any]:
     components = found.components
-    parts = {
-        "lot": finite(components.lot[unit]),
-        "wafer": finite(components.wafer[unit]),
-        "site": finite(found.site[unit]),
-    }
+    parts = _parts(found.plain, unit)
     known = [part for part in parts.values() if part is not None]
     return {
         "n_lots": int(found.n_lots[unit]),
@@ -254,6 +255,7 @@ def _numbers(found: UnitStatistics, unit: int) -> dict[str, Any]:
         "sd_within": finite(found.within.sd[unit]),
         "sd_total": finite(np.sqrt(sum(known))) if len(known) == 3 else None,
         "components": parts,
+        "components_signature_out": _parts(components, unit),
         "site_signature_out": finite(components.site[unit]),
         "pooled": components.pooled[unit] or None,
         "df_overall": finite(found.overall.df[unit]),

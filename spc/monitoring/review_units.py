@@ -52,6 +52,7 @@ class UnitStatistics:
     """Statistics of units; arrays (n_units,), in the characteristic's unit (squared: variances).
 
     components : as estimated, with the site pattern out. signature : variance of the pattern.
+    plain : components of the readings as they stand, sites taken as drawn at random.
     overall, within : sigmas with their degrees of freedom; NaN where the data do not tell.
     of_reading : (n,) unit of each reading that was used; values : these readings.
     complete : whether every wafer still has its sites.
@@ -64,6 +65,7 @@ class UnitStatistics:
     mean_low: FloatArray
     mean_high: FloatArray
     components: Components
+    plain: Components
     signature: FloatArray
     overall: Sigma
     within: Sigma
@@ -124,6 +126,7 @@ def unit_statistics(readings: Readings, units: Units, axis: int = 0) -> UnitStat
         mean_low=low,
         mean_high=high,
         components=components,
+        plain=_plain(readings, units, (count, mean, squares)),
         signature=np.where(np.isfinite(components.site), signature, np.nan),
         overall=overall,
         within=within,
@@ -206,6 +209,17 @@ def _reduced(
         np.column_stack([units.of_wafer, readings.lot])[used], axis=0, return_inverse=True
     )[1]
     return WaferSummary(units.of_wafer[used], lots.ravel(), count[used], mean[used], squares[used])
+
+
+def _plain(
+    readings: Readings, units: Units, sums: tuple[IntArray, FloatArray, FloatArray]
+) -> Components:
+    """Components of the usual nested model: the site pattern is part of the site variance."""
+    used = sums[0] > 0
+    pairs = np.column_stack([units.of_wafer, readings.lot])[used]
+    lots = np.unique(pairs, axis=0, return_inverse=True)[1].ravel()
+    parts = (part[used] for part in sums)
+    return _padded(nested_components(WaferSummary(units.of_wafer[used], lots, *parts)), units.n)
 
 
 def _padded(components: Components, n: int) -> Components:

@@ -178,12 +178,12 @@ def test_a_month_recomputed_from_its_readings(engine: Engine) -> None:
     site = (rest**2).sum() / ((lots * per_lot - 1) * (sites - 1))
     between = sites * ((wafer - wafer.mean(axis=1, keepdims=True)) ** 2).sum() / (lots * 2)
     level = per_lot * sites * values.mean(axis=(1, 2)).var(ddof=1)
-    pattern = (effect**2).mean() - site * (sites - 1) / values.size
-    expected = {
-        "lot": (level - between) / (per_lot * sites),
-        "wafer": (between - site) / sites,
-        "site": site + pattern,
-    }
+    lot = (level - between) / (per_lot * sites)
+    parted = {"lot": lot, "wafer": (between - site) / sites, "site": site}
+    assert row["components_signature_out"] == pytest.approx(parted, rel=1e-6)
+    # The usual nested model: sites as drawn at random, their pattern part of the site variance.
+    mixed = ((values - wafer) ** 2).sum() / (lots * per_lot * (sites - 1))
+    expected = {"lot": lot, "wafer": (between - mixed) / sites, "site": mixed}
     assert row["components"] == pytest.approx(expected, rel=1e-6)
     assert row["site_signature_out"] == pytest.approx(site, rel=1e-7)
     sd = values.std(ddof=1)
