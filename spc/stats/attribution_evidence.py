@@ -168,7 +168,8 @@ class AttributionOptions:
     look. `bins` is the number of onsets in the first, coarse scan. `null_cells` is the amount of
     null simulation (cells drawn in all) that calibrates the p-values; `seed` makes it repeat.
     `prior_sigmas` is the typical size of an effect in sigmas of a plotted point (of a single-lot
-    spike: twice that). `confidence` is that of all intervals.
+    spike: twice that); a new effect smaller than `min_sigmas` in every family is no excursion,
+    however many streams bear it out. `confidence` is that of all intervals.
     """
 
     alpha: float = 0.1
@@ -179,6 +180,7 @@ class AttributionOptions:
     null_cells: int = 400_000
     seed: int = 20240611
     prior_sigmas: float = 2.5
+    min_sigmas: float = 0.4
     confidence: float = 0.95
     shape_prior: dict[str, float] = field(
         default_factory=lambda: {"step": 0.35, "ramp": 0.35, "window": 0.1, "lot": 0.2}

@@ -95,14 +95,21 @@ class Search:
         self.refit()
         self._merge()
         self._absorb()
-        alpha = self.state.options.alpha
         for i, found in enumerate(self.found):
             left = self.left([found])
             strength = self.state.strength(found.candidate, left, fresh=False)
             self.found[i] = replace(found, strength=strength)
-        self.found = [
-            f for f in self.found if not f.fresh or self.calibration.p_value(f.strength) <= alpha
-        ]
+        self.found = [f for f in self.found if not f.fresh or self._counts(f)]
+
+    def _counts(self, found: Found) -> bool:
+        """Whether a new effect is beyond chance and large enough to matter."""
+        options, fit = self.state.options, found.fit
+        sigmas = np.abs(fit.amplitude) / self.state.noise.sigma[fit.families]
+        likely = fit.probability > 0.5
+        likely[fit.main()] = True
+        if sigmas[likely].max() < options.min_sigmas:
+            return False
+        return self.calibration.p_value(found.strength) <= options.alpha
 
     def _at(
         self, candidate: Candidate, residual: FloatArray, previous: int | None = None

@@ -2,10 +2,13 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 from functools import cached_property
+from hashlib import blake2b
+from typing import Any
 
 import numpy as np
+from numpy.typing import NDArray
 
 from spc.stats.attribution_candidates import (
     WHOLE,
@@ -62,7 +65,8 @@ class Found:
 @dataclass(frozen=True)
 class State:
     """Everything that does not change during a search. `residual` (n,) has the usual offsets of
-    levels taken out; `plans` cover what is new (options.since)."""
+    levels taken out; `plans` cover what is new (options.since); `memory` keeps what was looked at
+    before, by the content of the residuals."""
 
     evidence: Evidence
     options: AttributionOptions
@@ -71,6 +75,7 @@ class State:
     offsets: Offsets
     residual: FloatArray
     plans: tuple[Plan, ...]
+    memory: dict[Any, Any] = field(default_factory=dict, compare=False)
 
     @classmethod
     def of(cls, evidence: Evidence, options: AttributionOptions) -> State:
@@ -91,6 +96,12 @@ class State:
         options = replace(self.options, since=None)
         return _plans(self.evidence, self.noise, self.columns, self.offsets, options)
 
+    @cached_property
+    def _active(self) -> list[int]:
+        """How many levels of each column are in use, at least 1."""
+        on = self.evidence.monitoring
+        return [max(int((np.bincount(c.codes[on] + 1)[1:] > 0).sum()), 1) for c in self.columns]
+
     def whitened(self, residual: FloatArray) -> FloatArray:
         """Return whitened residuals, wild values brought in."""
         return self.noise.whiten(self.noise.clip(residual))
@@ -103,6 +114,9 @@ class State:
         `fresh`: only windows that hold something new (options.since). `touching` (n,) keeps only
         levels that share monitored cells with the mask.
         """
+        key = ("scan", digest(residual), fresh, None if touching is None else digest(touching))
+        if key in self.memory:
+            return list(self.memory[key])
         y = self.whitened(residual)
         whole = series_scores(self.evidence, y)
         out: list[Candidate] = []
@@ -117,6 +131,7 @@ class State:
             for i in np.flatnonzero(allowed)[np.argsort(-best.score[allowed])][:_KEEP].tolist():
                 out.append(self.candidate(plan.column, int(plan.active[i]), float(best.score[i])))
         out.sort(key=lambda c: -c.score)
+        self.memory[key] = list(out)
         return out
 
     def strength(self, candidate: Candidate, residual: FloatArray, fresh: bool) -> float:
@@ -140,15 +155,17 @@ class State:
     def candidate(self, column: Column, level: int, score: float = -np.inf) -> Candidate:
         """Return a level of one of the bay's columns as a candidate."""
         index = next(i for i, c in enumerate(self.columns) if c is column)
-        codes = column.codes[self.evidence.monitoring]
-        active = len(np.unique(codes[codes >= 0]))
-        prior = column_prior(self.columns, column) - float(np.log(max(active, 1)))
+        prior = column_prior(self.columns, column) - float(np.log(self._active[index]))
         return Candidate(column, level, prior, self.offsets.variance[index][level], score)
 
     def look(self, candidate: Candidate, y: FloatArray, fresh: bool) -> Profile | None:
         """Look closely at a candidate."""
-        options = self.options if fresh else replace(self.options, since=None)
-        return profile_level(self.evidence, self.noise, candidate, y, options)
+        key = ("look", candidate.key, digest(y), fresh)
+        if key not in self.memory:
+            options = self.options if fresh else replace(self.options, since=None)
+            self.memory[key] = profile_level(self.evidence, self.noise, candidate, y, options)
+        found: Profile | None = self.memory[key]
+        return found
 
     def fit(
         self, candidate: Candidate, shape: Shape, residual: FloatArray, y: FloatArray
@@ -273,6 +290,11 @@ def column_prior(columns: tuple[Column, ...], column: Column) -> float:
     searched = sum(c.twin_of < 0 for c in columns)
     weight = 0.1 if column.factors == (WHOLE,) else 1.0
     return float(np.log(weight / max(searched, 1)))
+
+
+def digest(values: NDArray[Any]) -> bytes:
+    """Return a short fingerprint of an array's content."""
+    return blake2b(values.tobytes(), digest_size=16).digest()
 
 
 def jaccard(a: IntArray, b: IntArray) -> float:

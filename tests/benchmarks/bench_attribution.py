@@ -95,7 +95,10 @@ def truth_of(evidence: Evidence, bay: Bay, fault: Fault) -> tuple[np.ndarray, se
         j = evidence.factors.index(name)
         on &= evidence.levels[:, j] == LEVEL_NAMES[name].index(level)
     lots = np.unique(evidence.lot[on])
-    return (lots[: fault.lots] if fault.lots else lots), set(fault.moves)
+    if fault.lots:
+        film = evidence.characteristic[evidence.series] == 0
+        lots = np.unique(evidence.lot[on & film])[: fault.lots]
+    return lots, set(fault.moves)
 
 
 def matches(effect: Effect, lots: np.ndarray, moves: set[tuple[int, str]]) -> bool:
