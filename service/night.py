@@ -78,7 +78,13 @@ def run_night(
             extra={"points": evaluation.points_evaluated, "streams": evaluation.streams},
         )
         with session.engine.begin() as connection:
-            changes = update_excursions(connection, session.bay, as_of, progress)
+            changes = update_excursions(
+                connection,
+                session.bay,
+                as_of,
+                progress,
+                new_points=bool(evaluation.touched or evaluation.points_evaluated),
+            )
             expected = expected_tonight(connection, session.bay, as_of)
         _LOG.info("triaged", extra={"opened": changes.opened, "updated": changes.updated})
         document = {

@@ -212,7 +212,7 @@ def budget(
     as_of_us : the clock (us); None for no history.
     shift : shift of the mean to be seen, in sigmas of the plotted point.
     """
-    from spc.monitoring.triage import EFFECT_SHARE
+    from spc.monitoring.book import EFFECT_SHARE
 
     known = connection is not None and as_of_us is not None
     nights, until = _window(connection, as_of_us) if known else (0.0, None)  # type: ignore[arg-type]

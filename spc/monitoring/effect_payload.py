@@ -159,8 +159,13 @@ def _suspects(
 def _streams(case: Case, effect: Effect, rows: pd.DataFrame) -> list[dict[str, Any]]:
     moved = [s.series for s in effect.series if s.moved]
     signalled = rows[rows["rules"] != ""]
+    lead = effect.sizes[effect.leading].family
+
+    def order(series: int) -> tuple[bool, int]:
+        return (int(case.evidence.family[series]) != lead, series)
+
     out = []
-    for series in sorted(set(moved) | set(signalled["series"].tolist())):
+    for series in sorted(set(moved) | set(signalled["series"].tolist()), key=order):
         stream, statistic = case.series[series]
         hits = signalled[signalled["series"] == series]
         rules = sorted({rule for text in hits["rules"] for rule in text.split(",")})

@@ -134,7 +134,7 @@ def payload_of(connection: Connection, case: Case, loose: Loose, as_of_us: int) 
         frame = lots_at_risk(connection, suspicion, characteristic.parameters, as_of_us)
         lots = _lots(frame, characteristic.unit)
     return {
-        "streams": _streams(case, rows, context),
+        "streams": _streams(rows, context, _lead(rows, pattern)),
         "onset": {
             "estimate_us": int(first["at_us"]),
             "earliest_us": begin,
@@ -167,9 +167,7 @@ def _run_begin(case: Case, rows: pd.DataFrame) -> int:
 
 def _mean_change(rows: pd.DataFrame, unit_of: Any) -> dict[str, Any]:
     """Mean departure from the centre of the statistic that departs most."""
-    z = rows["z"].abs().groupby(rows["statistic"]).mean()
-    means = [s for s in z.index if kind_of(str(s)) == "mean"]
-    statistic = str(z[means].idxmax() if means else z.idxmax())
+    statistic = _lead(rows, "shift")
     mine = rows[rows["statistic"] == statistic]
     change, sigma = (mine["value"] - mine["center"]), mine["sigma"]
     value = float(change.mean())
@@ -184,7 +182,17 @@ def _mean_change(rows: pd.DataFrame, unit_of: Any) -> dict[str, Any]:
     }
 
 
-def _streams(case: Case, rows: pd.DataFrame, context: Mapping[str, str]) -> list[dict[str, Any]]:
+def _lead(rows: pd.DataFrame, pattern: str) -> str:
+    """The statistic that departs most, of those that the pattern speaks of."""
+    z = rows["z"].abs().groupby(rows["statistic"]).max()
+    wanted = {
+        "spread": [s for s in z.index if kind_of(str(s)) == "spread"],
+        "map": [s for s in z.index if s in (*_MAP_TERMS, "map-distance")],
+    }.get(pattern, [s for s in z.index if kind_of(str(s)) == "mean"])
+    return str(z[wanted].idxmax() if wanted else z.idxmax())
+
+
+def _streams(rows: pd.DataFrame, context: Mapping[str, str], lead: str) -> list[dict[str, Any]]:
     out = []
     for statistic, some in rows.groupby("statistic"):
         rules = sorted({rule for text in some["rules"] for rule in text.split(",") if rule})
@@ -197,7 +205,24 @@ def _streams(case: Case, rows: pd.DataFrame, context: Mapping[str, str]) -> list
                 "rules": rules,
             }
         )
+    out.sort(key=lambda one: (one["statistic"] != lead, one["statistic"]))
     return out
+
+
+def carried_on(known: Mapping[str, Any], now: dict[str, Any]) -> dict[str, Any]:
+    """What is kept of a watched stream that rang again: its beginning stays, its streams add up."""
+    streams = {(s["characteristic"], s["statistic"]): s for s in now["streams"]}
+    for one in known["streams"]:
+        key = (one["characteristic"], one["statistic"])
+        new = streams.get(key, one)
+        rules = sorted({*one["rules"], *new["rules"]})
+        streams[key] = {**new, "rules": rules, "first_signal_at_us": one["first_signal_at_us"]}
+    return {
+        **now,
+        "streams": list(streams.values()),
+        "onset": known["onset"],
+        "out_of_spec": sorted({*known.get("out_of_spec", ()), *now["out_of_spec"]}),
+    }
 
 
 def _lots(frame: pd.DataFrame, unit: str) -> list[dict[str, Any]]:

@@ -7,7 +7,7 @@ from collections.abc import Sequence
 from sqlalchemy import Connection, func, select
 
 from spc.records.contexts import chunks
-from spc.records.tables import passes, points
+from spc.records.tables import files, passes, points
 
 
 def last_before(connection: Connection, as_of_us: int) -> int | None:
@@ -42,3 +42,9 @@ def mean_gaps(connection: Connection, stream_ids: Sequence[int]) -> dict[int, fl
 def newest(connection: Connection) -> int | None:
     """Clock of the newest finished pass, None when there was none."""
     return connection.scalar(select(func.max(passes.c.as_of_us)).where(passes.c.finished == 1))
+
+
+def files_since(connection: Connection, since_us: int) -> bool:
+    """Whether a file was loaded by a pass of a later clock."""
+    found = select(files.c.id).where(files.c.outcome == "loaded", files.c.loaded_us > since_us)
+    return connection.scalar(found.limit(1)) is not None

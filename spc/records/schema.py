@@ -40,8 +40,6 @@ def upgrade(engine: Engine) -> None:
     NewerSchemaError
         When the database has a revision that this program does not know.
     """
-    from alembic import command
-
     known = _known_revisions()
     current = current_revision(engine)
     if current == known[-1]:
@@ -51,6 +49,8 @@ def upgrade(engine: Engine) -> None:
             f"the database has schema {current}, this program knows up to {known[-1]}: "
             "install the newer yellowbay that wrote it"
         )
+    from alembic import command
+
     config = _alembic()
     with engine.begin() as connection:
         config.attributes["connection"] = connection
