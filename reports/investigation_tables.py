@@ -44,10 +44,10 @@ def lots_columns() -> tuple[Column, ...]:
     """Columns of the lots at risk, also for the hold list as a file."""
     return (
         Column(text("column.lot"), "lot"),
-        Column(text("column.wafers"), "wafers"),
+        Column(text("column.wafers"), "wafers", extra=True),
         Column(text("column.processed"), "processed_at", "time"),
         Column(text("column.measured"), "measured"),
-        Column(text("column.predicted"), "predicted", "number"),
+        Column(text("column.predicted"), "predicted", "number", extra=True),
         Column(text("column.p_out"), "p_out_of_spec", "number"),
     )
 

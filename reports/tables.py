@@ -16,6 +16,7 @@ from reports.numbers import LocalClock, iso
 from reports.texts import shown
 
 Kind = Literal["text", "number", "time"]
+_LONG_WORD = 16
 
 # Also behind blanks and marks of direction, and the wide forms that some programs read alike.
 _FORMULA = re.compile(
@@ -33,9 +34,14 @@ class Column:
     extra: bool = False  # left out on narrow screens where the table is tight
 
     @property
+    def code(self) -> str:
+        """Its kind for the page's script and styles: a text, a number or a stamp."""
+        return {"text": "s", "number": "n", "time": "t"}[self.kind]
+
+    @property
     def look(self) -> str:
         """Its classes in a page."""
-        return f"{self.kind[0]} extra" if self.extra else self.kind[0]
+        return f"{self.code} extra" if self.extra else self.code
 
 
 @dataclass(frozen=True)
@@ -45,6 +51,11 @@ class Cell:
     text: str
     raw: str | None = None
     href: str | None = None
+
+    @property
+    def long(self) -> bool:
+        """Whether it holds a word so long that it must be broken to keep the table whole."""
+        return any(len(word) > _LONG_WORD for word in self.text.split())
 
 
 @dataclass(frozen=True)
