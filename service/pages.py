@@ -15,6 +15,7 @@ if TYPE_CHECKING:
 
     from reports.model import FeedNotice
     from reports.outbox import Outgoing
+    from reports.views import Reader
     from service.context import Progress, Session
     from spc.stats.run_length import DesignRow
 
@@ -34,15 +35,12 @@ def write_night(
     """Write the page of a pass and those of what is to act on; make the mails."""
     from email.policy import SMTP
 
-    from reports.investigation import investigation_page
     from reports.message import MailOptions, messages
     from reports.night import night_page
     from reports.outbox import Outgoing
     from reports.sentences import night_sentence
     from reports.views import Reader
-    from reports.views_investigation import investigation_view
     from reports.views_night import night_view
-    from spc.records import findings
 
     reader = Reader(connection, session.bay, as_of)
     view = night_view(reader, document, _late_feeds(connection, session, as_of))
@@ -51,10 +49,7 @@ def write_night(
     file = folder / view.href
     document["sentence"] = night_sentence(view)
     write_whole(file, night_page(view))
-    for card in view.cards:
-        if card.href is not None:
-            known = findings.one(connection, card.excursion.id)
-            write_whole(folder / card.href, investigation_page(investigation_view(reader, known)))
+    _write_investigations(reader, folder, [c.excursion.id for c in view.cards if c.href])
     mail = session.bay.settings.mail
     made = messages(view, MailOptions(sender=mail.sender, shift_list=mail.to))
     outgoing = [
@@ -62,6 +57,20 @@ def write_night(
         for m in made
     ]
     return NightReport(file.absolute(), f"{night_sentence(view)}\nPage: {file}", outgoing)
+
+
+def _write_investigations(reader: Reader, folder: Path, numbers: list[int]) -> None:
+    """Write the pages of what is to act on tonight; a quiet night does not load what draws them."""
+    if not numbers:
+        return
+    from reports.investigation import investigation_page
+    from reports.views import investigation_href
+    from reports.views_investigation import investigation_view
+    from spc.records import findings
+
+    for number in numbers:
+        view = investigation_view(reader, findings.one(reader.connection, number))
+        write_whole(folder / investigation_href(number), investigation_page(view))
 
 
 def _late_feeds(
