@@ -116,7 +116,7 @@ def _effects(document: Mapping[str, Any], view: model.Excursion) -> tuple[model.
                 one["effect"] - 1.96 * error,
                 one["effect"] + 1.96 * error,
                 _unit(view),
-                one.get("n_lots") or len(view.lots_at_risk),
+                one.get("n_lots") or 0,
                 verdict,  # type: ignore[arg-type]
             )
         )

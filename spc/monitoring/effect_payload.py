@@ -60,7 +60,7 @@ def payload_of(connection: Connection, case: Case, effect: Effect, as_of_us: int
     characteristic = case.plan.characteristic[lead.characteristic]
     names = _Names(case, effect)
     magnitude = _magnitude(case, effect, rows, characteristic, lead)
-    suspects = _suspects(effect, names, magnitude["value"], lead)
+    suspects = _suspects(case, effect, names, magnitude["value"], lead)
     span = span_of(effect, as_of_us)
     lots = lots_of(connection, case, effect, suspects, span, as_of_us)
     return {
@@ -80,17 +80,7 @@ def payload_of(connection: Connection, case: Case, effect: Effect, as_of_us: int
         "p_chance": float(effect.p_adjusted),
         "out_of_spec": _out_of_spec(case, rows),
         "sizes": _sizes(case, effect),
-        "ruled_out": [
-            {
-                **names.level(one.level),
-                "reason": one.reason,
-                "moved": one.moved,
-                "members": one.members,
-                "odds": finite(one.odds),
-            }
-            for one in effect.ruled_out
-            if one.level.factors != (WHOLE,)
-        ],
+        "ruled_out": _ruled_out(effect, names),
         "separations": [
             {
                 "keep": names.level(one.keep),
@@ -127,8 +117,40 @@ class _Names:
         }
 
 
+def _ruled_out(effect: Effect, names: _Names) -> list[dict[str, Any]]:
+    found: dict[tuple[str, str], dict[str, Any]] = {}
+    for one in effect.ruled_out:
+        if one.level.factors == (WHOLE,):
+            continue
+        said = names.level(one.level)
+        found.setdefault(
+            (said["factor"], said["level"]),
+            {
+                **said,
+                "reason": one.reason,
+                "moved": one.moved,
+                "members": one.members,
+                "odds": finite(one.odds),
+            },
+        )
+    return list(found.values())
+
+
+def _lots_of(case: Case, level: Level, begin: float) -> int:
+    """Lots of a level that were searched since the effect began."""
+    evidence = case.evidence
+    mine = evidence.monitoring & (evidence.t_process >= begin)
+    for factor, name in zip(level.factors, level.names, strict=True):
+        if factor not in evidence.factors:
+            return 0
+        column = evidence.factors.index(factor)
+        names = evidence.level_names[column]
+        mine &= evidence.levels[:, column] == (names.index(name) if name in names else -2)
+    return int(np.unique(evidence.lot[mine]).size)
+
+
 def _suspects(
-    effect: Effect, names: _Names, value: float, lead: FamilySize
+    case: Case, effect: Effect, names: _Names, value: float, lead: FamilySize
 ) -> list[dict[str, Any]]:
     # The engine sizes spreads and maps in normal scores; their change is told in the unit of the
     # magnitude, in proportion.
@@ -150,6 +172,7 @@ def _suspects(
                 "effect": finite(one.effect * scale),
                 "effect_se": finite(one.se * abs(scale)),
                 "p_adjusted": finite(min(one.p_adjusted, 1.0)),
+                "n_lots": _lots_of(case, one.level, effect.onset.estimate),
                 "aliased_with": [{"factor": f, "level": v} for f, v in keys[1:]],
             }
         )
