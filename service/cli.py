@@ -89,7 +89,9 @@ def ingest(
     if as_json:
         print_json(report.as_json())
     else:
-        for line in report.lines():
+        from service.words import ingest_lines
+
+        for line in ingest_lines(report):
             say(line)
 
 

@@ -218,8 +218,9 @@ def _plain(
     used = sums[0] > 0
     pairs = np.column_stack([units.of_wafer, readings.lot])[used]
     lots = np.unique(pairs, axis=0, return_inverse=True)[1].ravel()
-    parts = (part[used] for part in sums)
-    return _padded(nested_components(WaferSummary(units.of_wafer[used], lots, *parts)), units.n)
+    count, mean, squares = sums
+    summary = WaferSummary(units.of_wafer[used], lots, count[used], mean[used], squares[used])
+    return _padded(nested_components(summary), units.n)
 
 
 def _padded(components: Components, n: int) -> Components:
