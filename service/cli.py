@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import logging
 import sys
+from functools import cache
 from pathlib import Path
 from typing import Annotated
 
@@ -130,21 +131,22 @@ def serve(config: ConfigOption = None) -> None:
     serve_forever(open_session(config))
 
 
-def _add_groups() -> None:
-    """Register the commands that live in modules of their own."""
+@cache
+def command_line() -> typer.Typer:
+    """The whole command line, with the commands that live in modules of their own."""
     from service import cli_baseline, cli_excursions, cli_reports, cli_upkeep
 
     app.add_typer(cli_baseline.app, name="baseline")
     app.add_typer(cli_excursions.app, name="excursions")
     cli_reports.register(app)
     cli_upkeep.register(app)
+    return app
 
 
 def main() -> None:
     """Run the command line; every foreseen failure is one clear line and a status."""
-    _add_groups()
     try:
-        app(standalone_mode=True)
+        command_line()(standalone_mode=True)
     except Exception as error:
         sys.stdout.flush()
         sys.exit(_explain(error))

@@ -22,9 +22,7 @@ def run(*words: str, cwd: Path = ROOT) -> subprocess.CompletedProcess[str]:
 
 @pytest.fixture(scope="module")
 def commands() -> dict[str, str]:
-    if not any(group.name == "excursions" for group in cli.app.registered_groups):
-        cli._add_groups()
-    root = typer.main.get_command(cli.app)
+    root = typer.main.get_command(cli.command_line())
     return {name: command.help or "" for name, command in root.commands.items()}  # type: ignore[attr-defined]
 
 
