@@ -10,7 +10,7 @@ from markupsafe import Markup
 from reports import figures, investigation_tables, render
 from reports.live import MARGINS, live_spec
 from reports.model import ChartSeries, Excursion, Magnitude
-from reports.model_pages import InvestigationPage, TrimAdvice
+from reports.model_pages import HandAction, InvestigationPage, TrimAdvice
 from reports.numbers import (
     LocalClock,
     count,
@@ -91,16 +91,7 @@ def investigation_page(view: InvestigationPage, href: str = "excursions/x.html")
         "action_plan": view.action_plan,
         "advices": _advices(view, clock),
         "owners": text("night.owners", owners=join(list(view.owners))) if view.owners else "",
-        "actions": [
-            {
-                "iso": iso(item.at, view.edition.zone),
-                "at": clock.moment(item.at),
-                "who": shown(item.who),
-                "action": text(f"action.{item.action}") if item.action in _ACTIONS else item.action,
-                "text": item.text,
-            }
-            for item in view.actions
-        ],
+        "actions": [_action(item, clock) for item in view.actions],
         "past": _past(view, clock),
         **_why(view, clock),
         **investigation_tables.tables(view, clock),
@@ -116,6 +107,17 @@ def investigation_page(view: InvestigationPage, href: str = "excursions/x.html")
 _ACTIONS = frozenset(
     ("contain", "close", "reopen", "comment", "merge", "split", "assign", "false-alarm")
 )
+
+
+def _action(item: HandAction, clock: LocalClock) -> dict[str, str]:
+    known = item.action in _ACTIONS
+    return {
+        "iso": iso(item.at, clock.zone),
+        "at": clock.moment(item.at),
+        "who": shown(item.who),
+        "action": text(f"action.{item.action}") if known else shown(item.action),
+        "text": item.text,
+    }
 
 
 def _live_code() -> str:

@@ -83,7 +83,7 @@ def _put(sheet: Any, row: int, column: int, value: Value, form: Any) -> None:
     if value is None or (isinstance(value, float) and value != value):
         sheet.write_blank(row, column, None, form)
     elif isinstance(value, str):
-        sheet.write_string(row, column, plain(value), form)
+        sheet.write_string(row, column, value, form)
     else:
         sheet.write_number(row, column, value, form)
 
@@ -99,13 +99,13 @@ def _words(book: Any, formats: dict[str, Any], view: ReviewPage) -> None:
         (text("review.changes"), [change_sentence(item) for item in view.changes]),
         (text("review.gaps"), [gap_sentence(gap) for gap in view.gaps]),
     ]
-    _put(sheet, 0, 0, review_sentence(view), formats["title"])
+    _put(sheet, 0, 0, plain(review_sentence(view)), formats["title"])
     row = 2
     for head, lines in blocks:
         _put(sheet, row, 0, head, formats["bold"])
         for line in lines or (text("sheet.nothing"),):
             row += 1
-            _put(sheet, row, 0, line, formats["words"])
+            _put(sheet, row, 0, plain(line), formats["words"])
         row += 2
 
 
@@ -249,7 +249,7 @@ def _excursions(view: ReviewPage) -> tuple[list[_Heading], list[list[Value]]]:
     rows: list[list[Value]] = [
         [
             item.excursion.id,
-            headline(item.excursion, clock),
+            plain(headline(item.excursion, clock)),
             iso(item.excursion.onset.estimate, view.edition.zone),
             text(f"status.{item.excursion.status}"),
             len(item.excursion.lots_at_risk),
