@@ -14,7 +14,7 @@ from collections.abc import Iterator
 from contextlib import contextmanager
 from dataclasses import dataclass, field
 from threading import Lock
-from typing import TYPE_CHECKING, TextIO
+from typing import TextIO
 
 import numpy as np
 import pyarrow as pa
@@ -23,13 +23,42 @@ from numpy.typing import NDArray
 from ingest import arrow
 from ingest.report import Reason
 
-if TYPE_CHECKING:
-    from ingest.parse import Header, TextFormat
-
 _CHUNK = 50_000
 _LONGEST_RECORD = 1000  # lines of one quoted field
-_SHOWN = 200
+SHOWN = 200
+NUL = "holds a NUL byte"
+NOT_IN_ENCODING = (
+    "is not in the encoding of the file; save it as UTF-8, or give its `encoding` in a [[feed]]"
+)
 _limit_lock = Lock()
+
+
+@dataclass(frozen=True)
+class TextFormat:
+    """How the bytes are written, and what is too much of them."""
+
+    separator: str = ","
+    encoding: str = "utf-8"
+    skip_lines: int = 0
+    max_field_characters: int = 4096
+    max_rejects: int = 10_000
+
+
+@dataclass(frozen=True)
+class Header:
+    """The names of the columns, the last line of the header and where the body begins."""
+
+    names: tuple[str, ...]
+    line: int
+    body: int
+
+
+@dataclass(frozen=True)
+class Text:
+    """A file as UTF-8 bytes without byte-order mark; `damaged` where bytes had to be replaced."""
+
+    data: bytes
+    damaged: bool
 
 
 @contextmanager
@@ -87,9 +116,12 @@ class Rows:
     n_rejected: int = 0
 
 
-def rows(data: bytes, header: Header, damaged: bool, form: TextFormat) -> Rows:
+def rows(text: Text, header: Header, form: TextFormat) -> Rows:
     """Read the body of a file row by row; never raises for what stands in it."""
-    lines = Lines(io.TextIOWrapper(io.BytesIO(data), encoding="utf-8", newline=""))
+    body = io.BytesIO(text.data)
+    body.seek(header.body)
+    lines = Lines(io.TextIOWrapper(body, encoding="utf-8", newline=""))
+    damaged = text.damaged
     width = len(header.names)
     collector = _Collector(width)
     reasons: list[Reason] = []
@@ -144,8 +176,8 @@ def _records(
             lines.give_back_all_but_first()
             source = _OneRecord(lines)
             reader = csv.reader(source, delimiter=form.separator)
-        shown = form.separator.join(row)[:_SHOWN] or None
-        yield first, row, (None, shown, reason or _ragged(len(row), width))
+        shown = form.separator.join(row)[:SHOWN] or None
+        yield first, row, (None, shown, reason or ragged(len(row), width))
 
 
 class _OneRecord:
@@ -174,28 +206,29 @@ class _OneRecord:
 
 def _said(error: csv.Error, form: TextFormat) -> str:
     if "field larger" in str(error):
-        return (
-            f"a field is longer than {form.max_field_characters} characters; "
-            "shorten it, or raise [drops] max_field_characters"
-        )
+        return too_long(form)
     return f"the row cannot be read: {error}"
 
 
-def _ragged(found: int, width: int) -> str:
+def too_long(form: TextFormat) -> str:
+    """Reason of a row with a huge field."""
+    return (
+        f"a field is longer than {form.max_field_characters} characters; "
+        "shorten it, or raise [drops] max_field_characters"
+    )
+
+
+def ragged(found: int, width: int) -> str:
+    """Reason of a row with too few or too many fields."""
     return f"has {found} fields where the header has {width}; quote fields that hold a separator"
 
 
 def _fault_of(row: list[str], damaged: bool) -> _FaultAt | None:
     for number, cell in enumerate(row):
         if "\0" in cell:
-            return number, cell[:_SHOWN].replace("\0", "\u2400"), "holds a NUL byte"
+            return number, cell[:SHOWN].replace("\0", "\u2400"), NUL
         if damaged and "\ufffd" in cell:
-            return (
-                number,
-                cell[:_SHOWN],
-                "is not in the encoding of the file; save it as UTF-8, or give its `encoding` in "
-                "a [[feed]]",
-            )
+            return number, cell[:SHOWN], NOT_IN_ENCODING
     return None
 
 

@@ -7,10 +7,10 @@ import io
 from dataclasses import replace
 
 import pytest
-from hypothesis import given
+from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from ingest import exact, parse
+from ingest import exact, fast, parse
 from ingest.report import Refused
 from ingest.sheet import Sheet
 
@@ -163,17 +163,47 @@ def test_what_the_csv_module_wrote_comes_back(
     assert found == expected
 
 
-@given(st.text(alphabet='ab, \n\r"\0é\ufffd', max_size=60))
-def test_the_fast_parser_agrees_with_the_exact_one(body: str) -> None:
-    text = parse.Text(("h,k\n" + body).encode(), damaged=False)
+BODIES = st.one_of(
+    st.text(alphabet='ab, \n\r"\0é\ufffd', max_size=60),
+    st.text(alphabet="a,\n", max_size=60),
+    st.lists(
+        st.sampled_from(
+            ["1,2", "", "\r", "3", "4,5,6", "\0,7", "é,\ufffd", ",", '"8",9', "x" * 65 + ",1", " "]
+        ),
+        max_size=12,
+    ).map("\n".join),
+)
+
+
+@given(BODIES, st.booleans(), st.sampled_from([(), ("k",)]))
+@settings(max_examples=400)
+def test_the_fast_way_agrees_with_the_exact_one(
+    body: str, damaged: bool, plain: tuple[str, ...]
+) -> None:
+    text = parse.Text(("h,k\n" + body).encode(), damaged)
     header = parse.read_header(text, FORM)
-    fast = parse._fast(text, header, FORM, ())
-    if fast is None:
+    quick = fast.rows(text, header, FORM, plain)
+    slow = exact.rows(text, header, FORM)
+    if quick is None:
+        assert set(body) & set('"\r')  # nothing else needs the exact way
         return
-    slow = exact.rows(text.data[header.body :], header, False, FORM)
-    assert slow.reasons == []
-    assert [c.to_pylist() for c in fast] == [c.to_pylist() for c in slow.columns]
-    assert slow.lines.tolist() == [header.line + 1 + i for i in range(len(slow.lines))]
+    assert [c.to_pylist() for c in quick.columns] == [c.to_pylist() for c in slow.columns]
+    assert quick.lines.tolist() == slow.lines.tolist()
+    assert quick.n_rejected == slow.n_rejected == len(quick.reasons)
+    for one, other in zip(quick.reasons, slow.reasons, strict=True):
+        assert one.line == other.line
+        assert other.value is None or one.value == other.value  # the csv module shows no long field
+
+
+def test_files_of_several_blocks(monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setattr(fast, "_BLOCK", 64)
+    rows = [f"{i},{i % 7}" for i in range(100)]
+    rows[50] = "ragged"
+    sheet = read("a,b\n" + "\n".join(rows) + "\n", plain=("a",))
+    assert [r.line for r in sheet.reasons] == [52]
+    assert [row[1:] for row in table(sheet)] == [
+        (str(i), str(i % 7)) for i in range(100) if i != 50
+    ]
 
 
 @given(st.binary(max_size=80), st.sampled_from(["utf-8", "cp1252", "utf-16", "utf-7"]))
