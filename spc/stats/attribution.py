@@ -135,7 +135,7 @@ def _report(
         suspects=suspects,
         onset=_onset(state, found),
         end=last if np.isfinite(shape.end) else None,
-        p_adjusted=calibration.p_value(found.strength),
+        p_adjusted=calibration.p_value(found.strength, found.score),
         evidence=found.score,
         gain=found.profile.gain,
         sizes=_sizes(state, found),

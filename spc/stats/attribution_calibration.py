@@ -38,9 +38,10 @@ class Calibration:
         tail = anchor / self.draws * np.exp(min(self.scores[anchor - 1] - score, 0.0))
         return float(tail)
 
-    def p_value(self, score: float) -> float:
-        """Return the multiplicity-adjusted p-value of a score: at most the Markov bound."""
-        return float(min(1.0, self.expected(score), np.exp(-min(score, 700.0))))
+    def p_value(self, score: float, close: float = -np.inf) -> float:
+        """Return the multiplicity-adjusted p-value of a coarse score; the score of the close look
+        bounds it as well (Markov)."""
+        return float(min(1.0, self.expected(score), np.exp(-min(max(score, close), 700.0))))
 
 
 def calibrate(

@@ -108,12 +108,12 @@ def build_columns(evidence: Evidence, options: AttributionOptions) -> tuple[Colu
 def make_column(evidence: Evidence, factors: tuple[int, ...]) -> Column:
     """Return the column of one factor (by index) or of the conjunction of two."""
     first = factors[0]
-    codes = evidence.levels[:, first]
+    codes = evidence.known_levels(first)
     names: tuple[tuple[str, ...], ...] = tuple((n,) for n in evidence.level_names[first])
     if len(factors) == 2:
         second = factors[1]
         width = len(evidence.level_names[second])
-        other = evidence.levels[:, second]
+        other = evidence.known_levels(second)
         both = np.where((codes >= 0) & (other >= 0), codes * width + other, -1)
         present, codes = np.unique(both, return_inverse=True)
         shift = int(present[0] == -1) if len(present) else 0

@@ -146,6 +146,14 @@ class Evidence:
         """Say whether a factor (or conjunction) acts at the time of measurement."""
         return any(self.factors[j] in self.measured_factors for j in factors)
 
+    def known_levels(self, factor: int) -> IntArray:
+        """Return the level codes of a factor; -1 also where it acted after the measurement, since
+        what came later explains nothing."""
+        codes = self.levels[:, factor]
+        if self.t_level is None:
+            return codes
+        return np.where(self.t_level[:, factor] > self.t_measure, -1, codes)
+
     def time_of(self, factors: tuple[int, ...]) -> FloatArray:
         """Return when a factor or conjunction acted on each cell, seconds, shape (n,)."""
         if self.is_measured(factors):

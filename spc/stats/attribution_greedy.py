@@ -25,6 +25,8 @@ _HOPELESS = -5.0
 _BORNE_OUT = 3.0
 _PASSES = 2
 _MERGE_SLACK = 1.0
+_BETTER = 0.5
+_CLEARLY_BETTER = 3.0
 
 
 class Search:
@@ -40,8 +42,9 @@ class Search:
         """The null of this design, drawn when first asked for."""
         if self._calibration is None:
             s = self.state
+            plans = s.plans or s.all_plans
             self._calibration = calibrate(
-                s.evidence, s.noise, s.columns, s.offsets, s.plans, s.options
+                s.evidence, s.noise, s.columns, s.offsets, plans, s.options
             )
         return self._calibration
 
@@ -126,7 +129,9 @@ class Search:
         best = self.state.best(self.left([found]), False, self._mask([found]))
         if best is None or best.candidate.key == found.candidate.key:
             return
-        if best.score > found.score + 0.5 and _overlap(best, found) > 0.3:
+        # A cause once named is only given up for one that is clearly better.
+        needed = _BETTER if found.fresh else _CLEARLY_BETTER
+        if best.score > found.score + needed and _overlap(best, found) > 0.3:
             self.found[i] = replace(best, previous=found.previous)
 
     def _mask(self, effects: Sequence[Found]) -> np.ndarray:

@@ -26,6 +26,7 @@ from spc.stats.attribution_evidence import (
 from spc.stats.attribution_noise import Noise
 from spc.stats.attribution_search import series_scores
 from spc.stats.attribution_windows import (
+    BORN,
     Cross,
     Normal,
     OffsetModel,
@@ -233,8 +234,8 @@ class _Look:
         weight /= weight.sum()
         step = weight.copy()
         if self.born:
-            step *= 0.5
-            step[0] += 0.5
+            step *= 1.0 - BORN
+            step[0] += BORN
         length = np.arange(k)[None, :] - np.arange(k)[:, None] + 1.0
         inside = (length >= 1.0) & (np.arange(k)[None, :] < k - 1)
         closed = np.where(inside, 1.0 / np.maximum(length, 1.0), 0.0)

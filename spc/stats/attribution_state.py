@@ -25,6 +25,7 @@ from spc.stats.attribution_evidence import (
     Evidence,
     FloatArray,
     IntArray,
+    sums,
 )
 from spc.stats.attribution_fit import Fit, Residuals, fit_effect, pattern_of
 from spc.stats.attribution_noise import Noise, estimate_noise
@@ -37,6 +38,7 @@ _CLOSE = 5.0
 _TIE = 2.0
 _REFINE = 2
 _REFINED_BINS = 32
+_UNEVEN = 6.0
 _CONJUNCTION_PRIOR = 0.1
 
 
@@ -229,11 +231,21 @@ class State:
         return found
 
     def _preferred(self, found: list[Found]) -> Found:
-        """Of levels that hold the same cells the earlier column is named; a whole characteristic
-        gives way to any level that does as well."""
+        """The best score wins; of levels that are one thing under two names the earlier column."""
         best = max(found, key=lambda f: f.score)
-        twins = [f for f in found if f is best or self.same_cells(best, f)]
+        twins = [
+            f
+            for f in found
+            if f is best or (self.same_cells(best, f) and self._same_thing(best, f))
+        ]
         return min(twins, key=lambda f: (self._rank(f.candidate.column), -f.score))
+
+    def _same_thing(self, a: Found, b: Found) -> bool:
+        """Whether the columns of two levels split all cells of the moved families alike."""
+        moved = a.fit.families[a.fit.probability > 0.5]
+        moved = moved if len(moved) else a.fit.families[[a.fit.main()]]
+        use = np.isin(self.evidence.cell_family, moved)
+        return split_alike(a.candidate.column.codes[use], b.candidate.column.codes[use])
 
     def _rank(self, column: Column) -> int:
         return next((i for i, c in enumerate(self.columns) if c is column), len(self.columns))
@@ -251,7 +263,8 @@ class State:
     def _conjunctions(
         self, parents: list[Candidate], y: FloatArray, fresh: bool
     ) -> list[Candidate]:
-        """Return conjunctions that score at least as well as their single parent level."""
+        """Return conjunctions that score better than their single parent level. Only factors
+        that split the parent's effect unevenly are tried."""
         out: list[Candidate] = []
         whole = series_scores(self.evidence, y)
         since = self.options.since if fresh else None
@@ -260,9 +273,7 @@ class State:
         for parent in parents:
             if len(parent.column.factors) != 1 or parent.column.factors == (WHOLE,):
                 continue
-            for other in singles:
-                if other.factors in (parent.column.factors, (WHOLE,)):
-                    continue
+            for other in self._uneven(parent, singles, y, fresh):
                 column = conjunction_within(self.evidence, parent.column, parent.level, other)
                 prior = parent.log_prior + np.log(_CONJUNCTION_PRIOR / max(len(singles) - 1, 1))
                 unknown = np.tile(parent.unknown, (len(column.names), 1))
@@ -273,13 +284,41 @@ class State:
                 i = int(scores.argmax())
                 if scores[i] > parent.score:
                     inner = float(prior - np.log(len(plan.active)))
-                    out.append(
-                        Candidate(
-                            column, int(plan.active[i]), inner, parent.unknown, float(scores[i])
-                        )
-                    )
+                    level = int(plan.active[i])
+                    out.append(Candidate(column, level, inner, parent.unknown, float(scores[i])))
         out.sort(key=lambda c: -c.score)
         return out[:_REFINE]
+
+    def _uneven(
+        self, parent: Candidate, singles: list[Column], y: FloatArray, fresh: bool
+    ) -> list[Column]:
+        """Return the factors whose levels share the parent's effect unevenly: the chi-square
+        between their own estimates, in the family that tells most, is beyond its degrees of
+        freedom by `_UNEVEN`."""
+        profile = self.look(parent, y, fresh)
+        if profile is None:
+            return []
+        x = pattern_of(parent.column, parent.level, profile.shape, self.evidence)
+        cells = np.flatnonzero(x)
+        if not len(cells):  # a ramp that begins with the last cell
+            return []
+        info, _ = self.noise.information(np.where(parent.column.cells(parent.level), 0, -1))
+        s, i = y[cells] * x[cells], np.maximum(info[cells] * x[cells] ** 2, 1e-300)
+        family = self.evidence.cell_family[cells]
+        best = int((sums(family, s) ** 2 / np.maximum(sums(family, i), 1e-300)).argmax())
+        mine = family == best
+        out = []
+        for other in singles:
+            codes = other.codes[cells[mine]]
+            known = codes >= 0
+            if other.factors in (parent.column.factors, (WHOLE,)) or not known.any():
+                continue
+            own = sums(codes[known], s[mine][known]), sums(codes[known], i[mine][known])
+            there = own[1] > 0
+            q = float((own[0][there] ** 2 / own[1][there]).sum() - own[0].sum() ** 2 / own[1].sum())
+            if q > 2.0 * (there.sum() - 1) + _UNEVEN:
+                out.append(other)
+        return out
 
 
 def column_prior(columns: tuple[Column, ...], column: Column) -> float:
@@ -290,6 +329,13 @@ def column_prior(columns: tuple[Column, ...], column: Column) -> float:
     searched = sum(c.twin_of < 0 for c in columns)
     weight = 0.1 if column.factors == (WHOLE,) else 1.0
     return float(np.log(weight / max(searched, 1)))
+
+
+def split_alike(a: IntArray, b: IntArray) -> bool:
+    """Return whether two codings split the same cells in the same way (names apart)."""
+    width = int(b.max(initial=-1)) + 2
+    pairs = np.unique((a + 1) * width + b + 1)
+    return len(np.unique(pairs // width)) == len(pairs) == len(np.unique(pairs % width))
 
 
 def digest(values: NDArray[Any]) -> bytes:

@@ -9,14 +9,15 @@ import numpy as np
 from spc.stats.attribution_calibration import Calibration
 from spc.stats.attribution_candidates import WHOLE, Candidate, Column
 from spc.stats.attribution_effects import Level, RuledOut, Separation, Suspect
-from spc.stats.attribution_evidence import Evidence, FloatArray, statistic_class
+from spc.stats.attribution_evidence import DAY, Evidence, FloatArray, statistic_class
 from spc.stats.attribution_fit import Fit, pattern_of
 from spc.stats.attribution_profile import Profile, Shape
-from spc.stats.attribution_state import ALIAS, Found, State, jaccard
+from spc.stats.attribution_state import ALIAS, Found, State, jaccard, split_alike
 
 _SUSPECTS = 6
 _TOLERANCE = 1.5
 _HALF = 0.5
+_SHORT = 0.5 * DAY
 _ALIKE = 0.6
 
 
@@ -45,9 +46,12 @@ def form_of(evidence: Evidence, found: Found) -> str:
 
 
 def _is_short(shape: Shape, fit: Fit) -> bool:
+    """One lot, or an ended fault of half a day or of one point a series."""
     if shape.lot >= 0:
         return True
-    return bool(np.isfinite(shape.end)) and float(np.median(fit.series_points)) <= 1.0
+    if not np.isfinite(shape.end):
+        return False
+    return shape.end - shape.start <= _SHORT or float(np.median(fit.series_points)) <= 1.0
 
 
 def level_of(candidate: Candidate) -> Level:
@@ -83,7 +87,7 @@ def suspects_of(
     aliases += [level for level in near if level not in aliases]
     own = level_of(found.candidate)
     effect, se = _size(found, found.fit)
-    p = calibration.p_value(found.strength)
+    p = calibration.p_value(found.strength, found.score)
     suspects = [Suspect(own, effect, se, p, found.score, tuple(aliases))]
     others = [r for r in rivals if level_of(r.candidate) not in aliases]
     for rival in others[:_SUSPECTS]:
@@ -199,8 +203,7 @@ def _separations(state: State, found: Found, own: Level, alias: Level) -> list[S
     if one is not None and two is not None:
         moved = np.append(found.fit.families[found.fit.probability > _HALF], _leading(found))
         use = np.isin(state.evidence.cell_family, moved)
-        pairs = np.unique(np.stack([one.codes[use], two.codes[use]]), axis=1)
-        if all(len(np.unique(row)) == pairs.shape[1] for row in pairs):
+        if split_alike(one.codes[use], two.codes[use]):
             return []
     both = (_separation(state, own, alias), _separation(state, alias, own))
     return [experiment for experiment in both if experiment is not None]

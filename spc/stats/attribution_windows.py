@@ -20,6 +20,8 @@ from spc.stats.attribution_noise import Noise, ar1_inflation
 
 _WIDTHS = (2, 3, 5, 8, 13, 21, 34)
 _TINY = 1e-300
+# A batch that is bad is mostly bad from its first lot on.
+BORN = 0.8
 
 
 @dataclass(frozen=True)
@@ -327,7 +329,7 @@ class WindowBuilder:
     def _onset_prior(self) -> tuple[FloatArray, FloatArray]:
         """Log priors of the onset of steps and of ramps, (L, K): recent onsets are likelier
         (earlier ones were looked for before), and a level that was not there in the baseline has
-        half its weight on its own beginning."""
+        most of its weight on its own beginning."""
         occupied = np.isfinite(self.edges)
         allowed = occupied & (suffix_sums(self._level_table(self.new.astype(float))) > 0)
         rank = suffix_sums(occupied.astype(float))
@@ -339,7 +341,7 @@ class WindowBuilder:
         active = np.unique(self.column.codes[self.cells])
         first = np.zeros_like(weight)
         first[np.arange(len(weight)), occupied.argmax(1)] = 1.0
-        half = 0.5 * born[active][:, None]
+        half = BORN * born[active][:, None]
         step = np.where(allowed, weight * (1.0 - half) + first * half, 0.0)
         with np.errstate(divide="ignore"):
             return np.log(step), np.log(weight)
