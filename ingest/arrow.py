@@ -15,6 +15,9 @@ import pyarrow.compute as pc
 from numpy.typing import NDArray
 
 T = TypeVar("T", bound=np.generic)
+Buffer = bytes | memoryview
+
+_PIECE = 4 * 1024 * 1024
 
 
 def _of(array: pa.Array, dtype: type[T]) -> NDArray[T]:
@@ -60,3 +63,12 @@ def strings(texts: Sequence[str]) -> pa.StringArray:
 def lengths(texts: pa.StringArray) -> NDArray[np.int32]:
     """Length of each text in bytes."""
     return codes(pc.binary_length(texts))
+
+
+def places(data: Buffer, byte: int) -> NDArray[np.int64]:
+    """Places of a byte in a buffer, looked for piece by piece to spare memory."""
+    whole = np.frombuffer(data, np.uint8)
+    pieces = [
+        np.flatnonzero(whole[at : at + _PIECE] == byte) + at for at in range(0, len(whole), _PIECE)
+    ]
+    return np.concatenate(pieces) if pieces else np.zeros(0, np.int64)

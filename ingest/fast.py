@@ -126,7 +126,7 @@ def _without_ragged(
     table: pa.Table, body: memoryview, header: Header, irregular: _Irregular
 ) -> Rows | None:
     """Rows with their lines where some lines are blank or ragged."""
-    breaks = np.append(np.flatnonzero(np.frombuffer(body, np.uint8) == ord("\n")), len(body))
+    breaks = np.append(arrow.places(body, ord("\n")), len(body))
     begins = np.append(0, breaks[:-1] + 1)
     length = breaks - begins
     one = length == 1

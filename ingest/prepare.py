@@ -12,7 +12,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from config.settings import Settings
-from ingest import parse
+from ingest import arrow, parse
 from ingest.columns import Rows, rows_of
 from ingest.drops import Content
 from ingest.feeds import Feed, Mapping, map_header
@@ -162,13 +162,12 @@ def with_text(reasons: list[Reason], data: bytes) -> list[Reason]:
     """Add the line as it stood, shortened, to each reason. Lines end at LF, CR LF or CR."""
     if not reasons:
         return []
-    found = np.frombuffer(data, np.uint8)
-    ends = found == ord("\n")
-    returns = found == ord("\r")
-    if returns.any():
-        ends[:-1] |= returns[:-1] & ~ends[1:]
-        ends[-1:] |= returns[-1:]
-    breaks = np.append(np.flatnonzero(ends), len(data))
+    breaks = arrow.places(data, ord("\n"))
+    returns = arrow.places(data, ord("\r"))
+    if len(returns):
+        alone = returns[~np.isin(returns + 1, breaks)]
+        breaks = np.sort(np.concatenate([breaks, alone]))
+    breaks = np.append(breaks, len(data))
     starts = np.append(0, breaks[:-1] + 1)
     result = []
     for one in reasons:
