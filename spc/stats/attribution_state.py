@@ -19,6 +19,7 @@ from spc.stats.attribution_candidates import (
     conjunction_within,
     usual_offsets,
 )
+from spc.stats.attribution_estimates import estimate_noise
 from spc.stats.attribution_evidence import (
     AttributionOptions,
     BoolArray,
@@ -28,7 +29,7 @@ from spc.stats.attribution_evidence import (
     sums,
 )
 from spc.stats.attribution_fit import Fit, Residuals, fit_effect, pattern_of
-from spc.stats.attribution_noise import Noise, estimate_noise
+from spc.stats.attribution_noise import Noise
 from spc.stats.attribution_profile import Profile, Shape, profile_level
 from spc.stats.attribution_search import Plan, make_plan, scan, series_scores
 

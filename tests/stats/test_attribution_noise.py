@@ -6,8 +6,9 @@ import numpy as np
 import pytest
 
 from spc.stats.attribution_candidates import build_columns, default_conjunctions, usual_offsets
+from spc.stats.attribution_estimates import estimate_noise
 from spc.stats.attribution_evidence import AttributionOptions, Evidence, statistic_class
-from spc.stats.attribution_noise import ar1_inflation, estimate_noise
+from spc.stats.attribution_noise import ar1_inflation
 from tests.stats.attribution_bay import Bay
 
 
