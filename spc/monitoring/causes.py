@@ -47,12 +47,7 @@ class _Causes:
     def effects(self) -> pd.Index[int]:
         known = [e for e in self._book.known() if "engine" in e.payload and self._may_go_on(e)]
         known.sort(key=lambda e: e.id)
-        previous = [
-            _Known(
-                Level(tuple(e.payload["engine"]["factors"]), tuple(e.payload["engine"]["names"]))
-            )
-            for e in known
-        ]
+        previous = [_Known(_level_of(e.payload["engine"])) for e in known]
         budget = self._book.bay.settings.nightly.false_excursions_per_night
         options = AttributionOptions(
             alpha=min(1.0, budget * EFFECT_SHARE),
@@ -91,6 +86,8 @@ class _Causes:
             self._book.connection, self._case, effect, self._book.now_us
         )
         same = known[effect.previous] if effect.previous is not None else None
+        if same is not None and not _same_thing(effect, payload, same):
+            same = None  # the engine took the name of an old effect for a new one
         same = same or self._alike(payload, effect.form, known)
         if same is not None and same.id in self._book.touched:
             return
@@ -150,6 +147,17 @@ class _Causes:
                 self._book.update(same, loose.tier, same.pattern, kept)
             elif loose.identity not in closed | merged:
                 self._book.open(loose.tier, pattern, loose.identity, payload)
+
+
+def _same_thing(effect: Effect, payload: dict[str, Any], known: Excursion) -> bool:
+    """An effect goes on under its own level, or under another one from the same time on."""
+    if effect.level == _level_of(known.payload["engine"]):
+        return True
+    return _overlap(payload["onset"], known.payload["onset"])
+
+
+def _level_of(engine: dict[str, Any]) -> Level:
+    return Level(tuple(engine["factors"]), tuple(engine["names"]))
 
 
 def _overlap(a: dict[str, Any], b: dict[str, Any]) -> bool:
