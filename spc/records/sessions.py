@@ -96,4 +96,7 @@ def _sqlite_begin(connection: Any) -> None:
 def reading(engine: Engine) -> Iterator[Connection]:
     """A connection for questions only: one consistent view, no wait for a writer."""
     with engine.connect() as connection:
+        if engine.dialect.name == "postgresql":
+            # The server's default takes a new view for every statement.
+            connection = connection.execution_options(isolation_level="REPEATABLE READ")
         yield connection.execution_options(read_only=True)

@@ -121,8 +121,9 @@ def _chunks(connection: Connection, table: Table) -> Iterator[Sequence[dict[str,
     keys = list(table.primary_key.columns)
     # Text sorts by bytes on both sides, or the checksums would depend on the collation.
     order = [_bytewise(connection, column) for column in keys]
-    result = connection.execution_options(stream_results=True).execute(
-        select(table).order_by(*order)
+    # An option of this statement alone: on the connection it would turn inserts into cursors too.
+    result = connection.execute(
+        select(table).order_by(*order), execution_options={"stream_results": True}
     )
     for part in result.mappings().partitions(_CHUNK):
         yield [dict(row) for row in part]
