@@ -62,6 +62,10 @@ class Fit:
         """Return the position of the family with the largest gain."""
         return int(self.gain.argmax())
 
+    def telling(self) -> IntArray:
+        """Return the families that tell of the effect: a tenth of the largest gain, or more."""
+        return self.families[self.gain >= max(0.1 * float(self.gain.max()), 0.0)]
+
 
 @dataclass(frozen=True)
 class Residuals:

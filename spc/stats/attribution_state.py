@@ -243,8 +243,7 @@ class State:
 
     def _same_thing(self, a: Found, b: Found) -> bool:
         """Whether the columns of two levels split all cells of the moved families alike."""
-        moved = a.fit.families[a.fit.probability > 0.5]
-        moved = moved if len(moved) else a.fit.families[[a.fit.main()]]
+        moved = a.fit.telling()
         use = np.isin(self.evidence.cell_family, moved)
         return split_alike(a.candidate.column.codes[use], b.candidate.column.codes[use])
 
@@ -253,9 +252,7 @@ class State:
 
     def same_cells(self, a: Found, b: Found) -> bool:
         """Whether two effects lie on the same cells of the families that `a` moved."""
-        moved = a.fit.families[a.fit.probability > 0.5]
-        if not len(moved):
-            moved = a.fit.families[[a.fit.main()]]
+        moved = a.fit.telling()
         mine, theirs = (
             f.fit.cells[np.isin(self.evidence.cell_family[f.fit.cells], moved)] for f in (a, b)
         )

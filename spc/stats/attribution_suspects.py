@@ -128,7 +128,7 @@ def _size(found: Found, fit: Fit | None) -> tuple[float, float]:
 def _exact_aliases(state: State, found: Found) -> list[Level]:
     """Levels of other columns that hold the same cells over the effect's window."""
     evidence, fit, shape = state.evidence, found.fit, found.profile.shape
-    moved = fit.families[(fit.probability > _HALF) | (np.arange(len(fit.gain)) == fit.main())]
+    moved = fit.telling()
     mine = fit.cells[np.isin(evidence.cell_family[fit.cells], moved)]
     affected = evidence.monitoring & np.isin(evidence.cell_family, moved)
     out: list[Level] = []
@@ -149,10 +149,9 @@ def _exact_aliases(state: State, found: Found) -> list[Level]:
 
 
 def _common(state: State, found: Found, candidate: Candidate, profile: Profile) -> float:
-    """Share of common cells of the moved families of an effect and a rival in its own window."""
+    """Share of common cells of an effect and a rival in its own window, in the leading family."""
     evidence, fit = state.evidence, found.fit
-    moved = fit.families[(fit.probability > _HALF) | (np.arange(len(fit.gain)) == fit.main())]
-    relevant = np.isin(evidence.cell_family, moved)
+    relevant = evidence.cell_family == fit.families[fit.main()]
     on = pattern_of(candidate.column, candidate.level, profile.shape, evidence) != 0.0
     mine = fit.cells[relevant[fit.cells]]
     return jaccard(mine, np.flatnonzero(on & relevant))
@@ -198,11 +197,10 @@ def _ruled_out(state: State, found: Found, rival: _Rival) -> RuledOut:
 
 def _separations(state: State, found: Found, own: Level, alias: Level) -> list[Separation]:
     """Both ways to tell two levels apart; none if they are one thing under two names (their
-    columns split all cells of the moved families alike)."""
+    columns split all cells of the leading family alike)."""
     one, two = _column(state, own.factors), _column(state, alias.factors)
     if one is not None and two is not None:
-        moved = np.append(found.fit.families[found.fit.probability > _HALF], _leading(found))
-        use = np.isin(state.evidence.cell_family, moved)
+        use = state.evidence.cell_family == found.fit.families[found.fit.main()]
         if split_alike(one.codes[use], two.codes[use]):
             return []
     both = (_separation(state, own, alias), _separation(state, alias, own))
@@ -229,10 +227,6 @@ def _separation(state: State, keep: Level, other: Level) -> Separation | None:
         return None
     best = int(together.argmax()) if together.any() else int(anyhow.argmax())
     return Separation(keep, other, Level(varied.factors, varied.names[best]), int(together[best]))
-
-
-def _leading(found: Found) -> int:
-    return int(found.fit.families[found.fit.main()])
 
 
 def _column(state: State, factors: tuple[str, ...]) -> Column | None:
