@@ -122,7 +122,7 @@ class Reader:
 
     def card(self, excursion: Excursion, change: str) -> model.ExcursionCard:
         """An excursion with its main chart."""
-        from reports.views_maps import map_of, overlay_of
+        from reports.views_maps import map_of
 
         view = excursion_of(self.document(excursion))
         plans = [self.bay.plan.named(s.characteristic) for s in view.streams]
@@ -136,7 +136,6 @@ class Reader:
             excursion=view,
             chart=None if lead is None else self.chart(lead, view),
             wafer_map=map_of(self, view) if is_map else None,
-            overlay=overlay_of(self, view) if act and known and known[0].is_overlay else None,
             action_plan=self.bay.action_plan(known[0]) if act and known else None,
             owners=tuple(owners),
             href=investigation_href(excursion.id) if excursion.tier == "act" else None,

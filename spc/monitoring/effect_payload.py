@@ -11,23 +11,19 @@ from typing import Any
 import numpy as np
 import pandas as pd
 from numpy.typing import NDArray
-from scipy.stats import chi2
+from scipy.special import chdtri
 from sqlalchemy import Connection
 
 from config.control_plan import Characteristic
 from spc.monitoring.effect_lots import WHOLE, Span, finite, lots_of, us
+from spc.monitoring.events import events_near
 from spc.monitoring.evidence import US, Case, stream_context
 from spc.monitoring.forecast import Line, crossing
 from spc.monitoring.limit_sets import kind_of
-from spc.records import history
 from spc.stats.attribution import Effect, FamilySize, Level
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
-
-_MOST_EVENTS = 20
-_EVENTS_BEFORE_US = 48 * 3600 * 1_000_000
-_EVENTS_AFTER_US = 6 * 3600 * 1_000_000
 
 
 def span_of(effect: Effect, as_of_us: int) -> Span:
@@ -247,8 +243,8 @@ def spread_change(
     unit = characteristic.unit
     if df_after <= 0 or not np.isfinite(sd_before):
         return {"value": None, "low": None, "high": None, "unit": unit, "sigmas": None}
-    low = sd_after * np.sqrt(df_after / chi2.ppf(0.975, df_after))
-    high = sd_after * np.sqrt(df_after / chi2.ppf(0.025, df_after))
+    low = sd_after * np.sqrt(df_after / chdtri(df_after, 0.025))
+    high = sd_after * np.sqrt(df_after / chdtri(df_after, 0.975))
     change = sd_after - sd_before
     plotted = case.points[
         case.points["stream_id"].isin(streams) & (case.points["statistic"] == statistic)
@@ -352,14 +348,3 @@ def _out_of_spec(case: Case, rows: pd.DataFrame) -> list[str]:
         bad = some[(some["value"] < low) | (some["value"] > high)]
         out += bad["lot"].tolist()
     return sorted(set(out))
-
-
-def events_near(connection: Connection, first_us: int, last_us: int) -> list[dict[str, Any]]:
-    """Bay events about an onset, oldest first: an event alone is never a proof."""
-    rows = history.events_between(
-        connection, first_us - _EVENTS_BEFORE_US, last_us + _EVENTS_AFTER_US
-    )
-    return [
-        {"at_us": at, "kind": kind, "tool": tool, "module": module, "text": text}
-        for at, kind, tool, module, text in rows[-_MOST_EVENTS:]
-    ]

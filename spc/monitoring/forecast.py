@@ -8,7 +8,7 @@ from typing import Literal
 import numpy as np
 from numpy.typing import NDArray
 from scipy.optimize import brentq
-from scipy.stats import norm
+from scipy.special import ndtri
 
 FloatArray = NDArray[np.float64]
 
@@ -65,7 +65,7 @@ def crossing(
     expected = line.reference + (limit - line.level) / line.slope
     if expected <= now or expected > now + HORIZON:
         return None
-    width = float(norm.ppf(0.5 + confidence / 2))
+    width = float(ndtri(0.5 + confidence / 2))
     sign = 1.0 if rising else -1.0
 
     def short(time: float, side: float) -> float:

@@ -164,7 +164,7 @@ def p_out_of_spec(lots: pd.DataFrame, outlook: Outlook) -> tuple[FloatArray, Flo
     A measured lot is judged by its own mean, another one by the fault's course. NaN where the
     characteristic does not apply to the lot's layer or has no specification.
     """
-    from scipy.stats import norm
+    from scipy.special import ndtr
 
     n = len(lots)
     predicted, sd = np.full(n, np.nan), np.full(n, outlook.sd)
@@ -181,9 +181,9 @@ def p_out_of_spec(lots: pd.DataFrame, outlook: Outlook) -> tuple[FloatArray, Flo
             predicted[i], sd[i] = value, outlook.measured_sd
     chance = np.zeros(n)
     if outlook.lower is not None:
-        chance += norm.cdf((outlook.lower - predicted) / sd)
+        chance += ndtr((outlook.lower - predicted) / sd)
     if outlook.upper is not None:
-        chance += norm.sf((outlook.upper - predicted) / sd)
+        chance += ndtr((predicted - outlook.upper) / sd)
     if outlook.lower is None and outlook.upper is None:
         chance[:] = np.nan
     return predicted, chance

@@ -11,6 +11,7 @@ import pandas as pd
 from sqlalchemy import Connection
 
 from config.control_plan import ControlPlan
+from spc.monitoring.events import events_near
 from spc.monitoring.lots_at_risk import Suspicion, lots_at_risk
 from spc.monitoring.silence import SilentStream
 from spc.records import plotted
@@ -132,8 +133,6 @@ def payload_of(
     connection: Connection, plan: ControlPlan, group: SilentGroup, as_of_us: int
 ) -> dict[str, Any]:
     """What is kept of a silence (see the contract's `excursions`)."""
-    from spc.monitoring.effect_payload import events_near
-
     last = max(s.last_measured_us for s in group.streams)
     lots = _unmeasured(connection, plan, group, as_of_us)
     suspects = []

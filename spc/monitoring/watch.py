@@ -15,7 +15,8 @@ import pandas as pd
 from sqlalchemy import Connection
 
 from spc.monitoring.effect_lots import finite
-from spc.monitoring.effect_payload import events_near, spread_change
+from spc.monitoring.effect_payload import spread_change
+from spc.monitoring.events import events_near
 from spc.monitoring.evidence import Case, stream_context
 from spc.monitoring.limit_sets import kind_of
 from spc.monitoring.lots_at_risk import Suspicion, lots_at_risk

@@ -9,7 +9,7 @@ import pandas as pd
 from sqlalchemy import Connection, or_, select
 
 from spc.records.contexts import chunks
-from spc.records.tables import bay_events, points, process_log, streams, wafer_results
+from spc.records.tables import points, process_log, streams, wafer_results
 
 _POINT_NAMES = (
     "stream_id",
@@ -106,16 +106,3 @@ def step_stamps(
             query = query.where(log.wafer.in_(numbers))
         rows += connection.execute(query).all()
     return pd.DataFrame([tuple(row) for row in rows], columns=list(names))
-
-
-def events_between(
-    connection: Connection, first_us: int, last_us: int
-) -> list[tuple[int, str, str | None, str | None, str | None]]:
-    """Bay events of a span: at_us, kind, tool, module, text; oldest first."""
-    event = bay_events.c
-    query = (
-        select(event.at_us, event.kind, event.tool, event.module, event.text)
-        .where(event.at_us >= first_us, event.at_us <= last_us)
-        .order_by(event.at_us, event.id)
-    )
-    return [(r[0], r[1], r[2], r[3], r[4]) for r in connection.execute(query)]
