@@ -91,7 +91,10 @@ class DropSettings(Strict):
         description="A file changed more recently than this waits for the next pass.",
     )
     max_file_bytes: int = Field(
-        default=512 * MIB, ge=1, description="Larger files, unpacked, are quarantined."
+        default=256 * MIB,
+        ge=1,
+        description="Larger files, unpacked, are quarantined. Taking a file in needs about 6 bytes "
+        "of memory a byte of it, up to 30 where every row has a lot and a context of its own.",
     )
     max_field_characters: int = Field(
         default=4096, ge=16, description="A row with a longer field is rejected."

@@ -9,10 +9,11 @@ from typing import Any
 
 from sqlalchemy import Connection, Table, select
 
-from spc.records.contexts import chunks
+from spc.records.bulk import any_of
 from spc.records.tables import contexts, layouts
 
 _KEPT = 200_000
+_TOGETHER = 20_000  # digests asked for at once
 
 
 @dataclass
@@ -39,8 +40,8 @@ class Interned:
         if lacking:
             # In the order of the digest, so that two writers cannot wait for each other.
             rows = sorted((hashlib.sha256(t.encode()).hexdigest(), t) for t in lacking)
-            for part in chunks(rows):
-                self._store(connection, part, lacking, sizes)  # type: ignore[arg-type]
+            for i in range(0, len(rows), _TOGETHER):
+                self._store(connection, rows[i : i + _TOGETHER], lacking, sizes)
         return [self._known[t] if t in self._known else self._fresh[t] for t in texts]
 
     def _store(
@@ -63,7 +64,7 @@ class Interned:
 
     def _find(self, connection: Connection, texts: dict[str, str]) -> None:
         table = self.table.c
-        query = select(table.id, table.digest).where(table.digest.in_(texts))
+        query = select(table.id, table.digest).where(any_of(connection, table.digest, list(texts)))
         for number, digest in connection.execute(query):
             self._fresh[texts[digest]] = number
 

@@ -8,6 +8,8 @@ from __future__ import annotations
 import gzip
 import os
 import random
+import subprocess
+import sys
 from collections.abc import Iterator
 from datetime import timedelta
 from pathlib import Path
@@ -396,3 +398,22 @@ def test_files_that_change_or_vanish_under_our_eyes_wait(
     ]
     assert "No such file" in report.files[0].reasons[0].reason
     assert "changed" in report.files[1].reasons[0].reason
+
+
+def test_ingest_does_not_load_pandas(intake: Intake) -> None:
+    # Loading it takes longer than a night's drops.
+    intake.drop("a.csv", sheet(reading(), reading(site="2")))
+    code = (
+        "import sys; from datetime import *; from config.load import load_bay; "
+        "from pathlib import Path; from ingest.load import take_in; "
+        "from spc.records.sessions import open_database; bay = load_bay(Path(sys.argv[1])); "
+        "r = take_in(open_database(bay.database_url), bay, datetime(2026, 5, 2, tzinfo=UTC)); "
+        "print(r.readings['loaded'], 'pandas' in sys.modules)"
+    )
+    done = subprocess.run(
+        [sys.executable, "-c", code, str(intake.root / "bay.toml")],
+        capture_output=True,
+        text=True,
+        check=True,
+    )
+    assert done.stdout == "2 False\n"
