@@ -1,13 +1,14 @@
 """The one pass, step by step, under its lock.
 
 Drop files -> records -> points and signals -> excursions -> the report -> the outbox -> mail.
-Each step can be run again without harm: what was done is found done. The report, the record of
-the pass and the messages land in one transaction, after which only sending is left.
+Each step can be run again without harm: what was done is found done. Each file lands in a
+transaction of its own; points and excursions land in one; the record of the pass and the messages
+land in one, after which only sending is left. A pass is recorded when it begins, so that one that
+dies is seen by the next one, which completes its work (`_make_good`).
 """
 
 from __future__ import annotations
 
-import json
 import logging
 from collections.abc import Callable
 from dataclasses import dataclass, field
@@ -16,10 +17,11 @@ from typing import TYPE_CHECKING, Any
 
 from service import clock
 from service.lock import pass_lock
+from spc.records import passes
+from spc.records.sessions import reading
+from spc.records.stamps import from_us, to_us
 
 if TYPE_CHECKING:
-    from sqlalchemy import Connection
-
     from ingest.report import IngestReport
     from service.context import Progress, Session
 
@@ -62,68 +64,127 @@ def run_night(
     service.lock.BusyError
         When another pass holds the lock for longer than `wait_seconds`.
     """
-    from spc.monitoring.evaluation import evaluate
-    from spc.monitoring.expected import expected_tonight
-    from spc.monitoring.triage import update_excursions
+    from reports.outbox import send_due
 
-    waiting = _tell_waiting
-    with pass_lock(session.engine, wait_seconds, waiting=waiting):
+    stamp = to_us(as_of)
+    with pass_lock(session.engine, wait_seconds, waiting=_tell_waiting):
+        _make_good(session, stamp, progress)
+        with session.engine.begin() as connection:
+            passes.begin(connection, stamp)
         intake = _take_in(session, as_of, stop, progress)
         _LOG.info("taken in", extra={**intake.drops, "readings": intake.readings["loaded"]})
         if intake.stopped:
             return _stopped(as_of, intake)
-        evaluation = evaluate(session.engine, session.bay, as_of, progress)
-        _LOG.info(
-            "evaluated",
-            extra={"points": evaluation.points_evaluated, "streams": evaluation.streams},
-        )
-        with session.engine.begin() as connection:
-            changes = update_excursions(
-                connection,
-                session.bay,
-                as_of,
-                progress,
-                new_points=bool(evaluation.touched or evaluation.points_evaluated),
-            )
-            expected = expected_tonight(connection, session.bay, as_of)
-        _LOG.info("triaged", extra={"opened": changes.opened, "updated": changes.updated})
         document = {
             "as_of": as_of.astimezone(session.bay.settings.bay.zone).isoformat(),
             "drops": intake.drops,
             "readings": intake.readings,
+        }
+        account = _judge(session, as_of, document, progress)
+        written = _write(session, as_of, account, progress)
+        document["report"] = account["report"]
+        document["sentence"] = account["sentence"]
+        delivery = send_due(session.engine, carrier(session), clock.now, stop=stop, every=True)
+        document["mail"] = {
+            "queued": written.queued,
+            "sent": delivery.sent,
+            "failed": delivery.failed,
+        }
+        return Night(document, written.text, delivery.errors)
+
+
+def _judge(
+    session: Session, as_of: datetime, document: dict[str, Any], progress: Progress
+) -> dict[str, Any]:
+    """Points, signals and excursions, in one transaction; completes the document of the pass.
+
+    Returns the account of the night: the same, with the counts of all passes of this clock summed.
+    A pass that died, or one run once more, leaves a page that tells the whole night all the same.
+    """
+    from spc.monitoring.evaluation import evaluate_in
+    from spc.monitoring.expected import expected_tonight
+    from spc.monitoring.triage import update_excursions
+
+    stamp = to_us(as_of)
+    with session.engine.begin() as connection:
+        evaluation = evaluate_in(connection, session.bay, as_of, progress)
+        _LOG.info(
+            "evaluated",
+            extra={"points": evaluation.points_evaluated, "streams": evaluation.streams},
+        )
+        changes = update_excursions(
+            connection,
+            session.bay,
+            as_of,
+            progress,
+            new_points=bool(evaluation.touched or evaluation.points_evaluated),
+        )
+        _LOG.info("triaged", extra={"opened": changes.opened, "updated": changes.updated})
+        document |= {
             "streams": evaluation.streams,
             "points_evaluated": evaluation.points_evaluated,
             "signals": evaluation.signals,
-            "expected_false_signals": expected,
+            "expected_false_signals": expected_tonight(connection, session.bay, as_of),
             "excursions": {
                 "opened": changes.opened,
                 "updated": changes.updated,
                 "open": changes.n_open,
             },
         }
-        return _report_and_send(session, as_of, document, stop, progress)
+        before, intake = passes.account_of(connection, stamp), passes.intake_of(connection, stamp)
+        waiting = {"waiting": document["drops"]["waiting"]}
+        account = {**document, "drops": intake["drops"] | waiting, "readings": intake["readings"]}
+        if stamp >= (passes.newest(connection) or 0):  # a pass that looks back counts afresh
+            for count in ("points_evaluated", "signals"):
+                account[count] += before.get(count, 0)
+        passes.keep(connection, stamp, account)
+    return account
 
 
-def _report_and_send(
-    session: Session,
-    as_of: datetime,
-    document: dict[str, Any],
-    stop: Callable[[], bool],
-    progress: Progress,
-) -> Night:
-    from reports.outbox import queue, send_due
+@dataclass(frozen=True)
+class _Written:
+    text: str
+    queued: int
+
+
+def _write(
+    session: Session, as_of: datetime, account: dict[str, Any], progress: Progress
+) -> _Written:
+    """The page, the record of the pass and the mails; completes the account of the night."""
+    from reports.outbox import queue
     from service.pages import write_index, write_night
 
     progress("writing the report", 0, 1)
     with session.engine.begin() as connection:
-        report = write_night(connection, session, as_of, document)
+        report = write_night(connection, session, as_of, account)
         queued = queue(connection, report.messages, as_of)
-        document["report"] = str(report.file)
-        _record_pass(connection, as_of, document)
+        account["report"] = str(report.file)
+        passes.keep(connection, to_us(as_of), account, finished=True)
     write_index(session, as_of)
-    delivery = send_due(session.engine, carrier(session), clock.now, stop=stop, every=True)
-    document["mail"] = {"queued": queued, "sent": delivery.sent, "failed": delivery.failed}
-    return Night(document, report.text, delivery.errors)
+    return _Written(report.text, queued)
+
+
+def _make_good(session: Session, stamp: int, progress: Progress) -> None:
+    """Complete what an earlier pass left when it died.
+
+    One that had its excursions gets its page and its mails, or nobody would hear of what it
+    opened. What one had only taken in becomes part of the pass that begins.
+    """
+    with reading(session.engine) as connection:
+        dead = [one for one in passes.left_over(connection) if one.as_of_us != stamp]
+    for one in dead:
+        _LOG.warning("a pass died; its work is completed", extra={"as_of_us": one.as_of_us})
+        if not one.account:
+            with session.engine.begin() as connection:
+                passes.take_over(connection, one.as_of_us, stamp)
+            continue
+        try:
+            _write(session, from_us(one.as_of_us, UTC), one.account, progress)
+        except OSError:
+            raise
+        except Exception as error:
+            # What cannot be told of an old night must not keep tonight from being told.
+            _LOG.error("its page cannot be written", extra={"reason": str(error)}, exc_info=error)
 
 
 def take_in_drops(session: Session, as_of: datetime, progress: Progress = _silent) -> IngestReport:
@@ -146,18 +207,8 @@ def send_mail(session: Session, stop: Callable[[], bool] = _never) -> None:
 
 def last_pass(session: Session) -> datetime | None:
     """Clock of the last finished pass up to now, None when there was none."""
-    from sqlalchemy import func, select
-
-    from spc.records.sessions import reading
-    from spc.records.stamps import from_us, to_us
-    from spc.records.tables import passes
-
     with reading(session.engine) as connection:
-        newest = connection.scalar(
-            select(func.max(passes.c.as_of_us)).where(
-                passes.c.finished == 1, passes.c.as_of_us <= to_us(clock.now())
-            )
-        )
+        newest = passes.last_before(connection, to_us(clock.now()) + 1)
     return None if newest is None else from_us(newest, UTC)
 
 
@@ -197,19 +248,3 @@ def _stopped(as_of: datetime, intake: IngestReport) -> Night:
         "stopped": True,
     }
     return Night(document, "Stopped after the file in hand; the next pass goes on from there.")
-
-
-def _record_pass(connection: Connection, as_of: datetime, document: dict[str, Any]) -> None:
-    from spc.records.stamps import to_us
-    from spc.records.tables import passes
-
-    stamp = to_us(as_of)
-    connection.execute(passes.delete().where(passes.c.as_of_us == stamp))
-    connection.execute(
-        passes.insert().values(
-            as_of_us=stamp,
-            finished=1,
-            result=json.dumps(document, ensure_ascii=False, sort_keys=True),
-            report=document["report"],
-        )
-    )

@@ -95,8 +95,14 @@ def close_entry(connection: Connection, file_id: int, values: dict[str, Any]) ->
 
 
 def record_sighting(connection: Connection, sighting: Sighting, seen_us: int) -> None:
-    """Remember that a content was seen at a path, so that it need not be read again."""
-    connection.execute(delete(sightings).where(sightings.c.path == sighting.path))
+    """Remember that a content was seen at a path, so that it need not be read again.
+
+    `seen_us` stays the clock at which this content was first seen there.
+    """
+    mine = sightings.c.path == sighting.path
+    same = mine & (sightings.c.content_hash == sighting.content_hash)
+    before = connection.scalar(select(sightings.c.seen_us).where(same))
+    connection.execute(delete(sightings).where(mine))
     connection.execute(
         insert(sightings),
         {
@@ -104,7 +110,7 @@ def record_sighting(connection: Connection, sighting: Sighting, seen_us: int) ->
             "bytes": sighting.bytes,
             "modified_ns": sighting.modified_ns,
             "content_hash": sighting.content_hash,
-            "seen_us": seen_us,
+            "seen_us": seen_us if before is None else before,
         },
     )
 
