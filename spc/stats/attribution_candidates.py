@@ -84,6 +84,11 @@ def default_conjunctions(factors: tuple[str, ...]) -> tuple[tuple[str, str], ...
     return tuple(pairs)
 
 
+def is_machine(factors: tuple[str, ...]) -> bool:
+    """Return whether factors name only tools and modules, of whatever step."""
+    return all(name.rpartition(".")[2] in ("tool", "module") for name in factors)
+
+
 def build_columns(evidence: Evidence, options: AttributionOptions) -> tuple[Column, ...]:
     """Return the columns to search: each factor, each conjunction after it, whole characteristics.
 

@@ -17,6 +17,7 @@ from spc.stats.attribution_candidates import (
     Offsets,
     build_columns,
     conjunction_within,
+    is_machine,
     usual_offsets,
 )
 from spc.stats.attribution_estimates import estimate_noise
@@ -201,34 +202,41 @@ class State:
             return None
         best = self._preferred(found)
         if best.candidate.column.factors == (WHOLE,):
-            return self._instead_of_whole(best, y, residual, fresh)
+            return self._instead(best, self.columns, y, residual)
+        if best.profile.shape.lot >= 0:
+            # One lot has one level of everything, and what spans many lots was good on the others:
+            # the machine comes first, then the caller's order.
+            ranked = sorted(self.columns, key=lambda c: not is_machine(c.factors))
+            at = next((i for i, c in enumerate(ranked) if c is best.candidate.column), len(ranked))
+            return self._instead(best, tuple(ranked[:at]), y, residual, slack=2.0 * _TIE)
         return best
 
-    def _instead_of_whole(
-        self, found: Found, y: FloatArray, residual: FloatArray, fresh: bool
-    ) -> Found:
-        """Return the level that holds the same cells as a whole characteristic in the window, if
-        there is one: a batch that is everywhere is to blame before everything is."""
-        for column in self.columns:
-            codes = column.codes[found.fit.cells]
+    def _instead(
+        self, found: Found, columns: tuple[Column, ...], y: FloatArray, residual: FloatArray,
+        slack: float = np.inf,
+    ) -> Found:  # fmt: skip
+        """Return the first of some columns whose level holds the same cells as the effect found,
+        if there is one: a batch that is everywhere is to blame before everything is. `slack` is
+        what it may score less."""
+        families = found.fit.telling()
+        mine = found.fit.cells[np.isin(self.evidence.cell_family[found.fit.cells], families)]
+        near = np.isin(self.evidence.cell_family, families)
+        for column in columns:
+            codes = column.codes[mine]
             known = codes[codes >= 0]
             if column.factors == (WHOLE,) or column.twin_of >= 0 or not len(known):
                 continue
             candidate = self.candidate(column, int(np.bincount(known).argmax()))
-            shape = found.profile.shape
             same_time = replace(column, time=found.candidate.column.time)
-            pattern = pattern_of(same_time, candidate.level, shape, self.evidence)
-            theirs = np.isin(self.evidence.cell_family, found.fit.families) & (pattern != 0.0)
-            if jaccard(found.fit.cells, np.flatnonzero(theirs)) < 0.5:
+            pattern = pattern_of(same_time, candidate.level, found.profile.shape, self.evidence)
+            if jaccard(mine, np.flatnonzero(near & (pattern != 0.0))) < ALIAS:
                 continue
-            profile = self.look(candidate, y, fresh)
-            if profile is None:
+            profile = self.look(candidate, y, False)
+            if profile is None or profile.score < found.score - slack:
                 continue
             fit = self.fit(candidate, profile.shape, residual, y)
-            if fit is not None:
-                other = Found(candidate, profile, fit)
-                if self.same_cells(found, other):
-                    return other
+            if fit is not None and self.same_cells(found, Found(candidate, profile, fit)):
+                return Found(candidate, profile, fit)
         return found
 
     def _preferred(self, found: list[Found]) -> Found:

@@ -81,7 +81,8 @@ def suspects_of(
     near = [
         level_of(r.candidate)
         for r in rivals
-        if r.profile.gain > found.profile.gain - _TOLERANCE
+        if r.candidate.column.factors != (WHOLE,)
+        and r.profile.gain > found.profile.gain - _TOLERANCE
         and _common(state, found, r.candidate, r.profile) > _ALIKE
     ]
     aliases += [level for level in near if level not in aliases]
