@@ -142,7 +142,8 @@ def _send_one(engine: Engine, carrier: Carrier, row_id: int, now: datetime) -> s
             "next_try_us": to_us(now + wait_after(attempts)),
             "last_error": str(failure),
         }
-        _LOG.warning(
+        # Information only: whoever asked gets the error back and says it, once.
+        _LOG.info(
             "mail not sent",
             extra={"recipient": row.recipient, "reason": str(failure), "final": final},
         )

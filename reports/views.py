@@ -254,9 +254,12 @@ def investigation_href(number: int) -> str:
 
 
 def night_href(as_of: datetime, bay: Bay) -> str:
-    """Where the page of a pass stands below the reports folder."""
+    """Where the page of a pass stands below the reports folder.
+
+    In the hour that happens twice, the second one is marked: it does not write over the first.
+    """
     local = as_of.astimezone(bay.settings.bay.zone)
-    return f"nights/night-{local:%Y-%m-%d-%H%M}.html"
+    return f"nights/night-{local:%Y-%m-%d-%H%M}{'-again' if local.fold else ''}.html"
 
 
 def stamp_text(stamp_us: int | None, bay: Bay) -> str | None:

@@ -37,12 +37,13 @@ def explain(error: BaseException) -> tuple[str, int]:
 
 
 def _known(error: BaseException) -> str | None:
+    from ingest.drops import DropFolderError
     from service.lock import BusyError
     from spc.monitoring.life import NotPossibleError
     from spc.records.findings import UnknownExcursionError
     from spc.records.schema import NewerSchemaError
 
-    plain = (NotPossibleError, UnknownExcursionError, NewerSchemaError, BusyError)
+    plain = (NotPossibleError, UnknownExcursionError, NewerSchemaError, BusyError, DropFolderError)
     if isinstance(error, plain):
         return str(error).strip("'\"")
     if isinstance(error, OSError):
@@ -71,6 +72,12 @@ def _of_database(error: BaseException) -> str | None:
             return "the database is locked by another program: end it, or wait and try again"
         if "disk is full" in text:
             return "the disk is full: free some space and run the pass again"
+        if "disk I/O error" in text:
+            # What SQLite says of a full disk where it maps its files into memory.
+            return (
+                "the disk is full or failing (disk I/O error): free some space, look at the disk, "
+                "and run the pass again"
+            )
         if "readonly" in text or "unable to open" in text:
             return f"the database cannot be opened for writing ({text}): mend its permissions"
     if "malformed" in text or "not a database" in text:

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import os
+from contextlib import suppress
 from dataclasses import dataclass
 from datetime import timedelta
 from pathlib import Path
@@ -177,10 +178,17 @@ def write_whole(file: Path, text: str) -> None:
 
     Raises OSError, with the file named.
     """
-    file.parent.mkdir(parents=True, exist_ok=True)
     part = file.with_name(f".{file.name}.part")
-    with part.open("w", encoding="utf-8", newline="\n") as stream:
-        stream.write(text)
-        stream.flush()
-        os.fsync(stream.fileno())
-    part.replace(file)
+    try:
+        file.parent.mkdir(parents=True, exist_ok=True)
+        with part.open("w", encoding="utf-8", newline="\n") as stream:
+            stream.write(text)
+            stream.flush()
+            os.fsync(stream.fileno())
+        part.replace(file)
+    except OSError as error:
+        with suppress(OSError):
+            part.unlink()  # on a full disk half a page is in the way
+        if error.filename is not None:
+            raise
+        raise OSError(error.errno, error.strerror, str(file)) from error

@@ -129,6 +129,8 @@ class Server:
             _LOG.error("the night failed", extra={"reason": text})
             return
         _LOG.info("the night is done", extra={"result": night.text.splitlines()[0]})
+        for reason in night.mail_errors:
+            _LOG.warning("mail waits or was refused", extra={"reason": reason})
 
     def _mail(self) -> None:
         from service.failures import explain

@@ -77,22 +77,17 @@ def intake_of(connection: Connection, as_of_us: int) -> dict[str, dict[str, int]
     The contract's `drops` and `readings`, without the files that wait.
     """
     mine = files.c.loaded_us == as_of_us
-    outcomes: dict[str, int] = dict(
-        connection.execute(
-            select(files.c.outcome, func.count()).where(mine).group_by(files.c.outcome)
-        )
-        .tuples()
-        .all()
-    )
+    asked = select(files.c.outcome, func.count()).where(mine).group_by(files.c.outcome)
+    outcomes = {row[0]: int(row[1]) for row in connection.execute(asked)}
     again = select(func.count()).where(
         sightings.c.seen_us == as_of_us,
         sightings.c.content_hash == files.c.content_hash,
         sightings.c.path != files.c.path,
     )
     drops = {
-        "loaded": int(outcomes.get("loaded", 0)),
+        "loaded": outcomes.get("loaded", 0),
         "duplicate": int(connection.scalar(again) or 0),
-        "quarantined": int(outcomes.get("quarantined", 0)),
+        "quarantined": outcomes.get("quarantined", 0),
     }
     names = ("loaded", "duplicate", "superseded", "rejected")
     sums = [func.coalesce(func.sum(files.c[name]), 0) for name in names]

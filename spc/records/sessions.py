@@ -11,6 +11,8 @@ from typing import Any
 from sqlalchemy import Connection, Engine, create_engine, event
 from sqlalchemy.engine import make_url
 
+# How long a writer of SQLite waits for another program before it gives up.
+BUSY_SECONDS = 60.0
 PASSWORD_VARIABLE = "YELLOWBAY_DATABASE_PASSWORD"
 
 
@@ -53,7 +55,7 @@ def _engine(url: str, pool_size: int, timeout: float) -> Engine:
     if parsed.get_backend_name() == "sqlite":
         if parsed.database and parsed.database != ":memory:":
             Path(parsed.database).parent.mkdir(parents=True, exist_ok=True)
-        engine = create_engine(parsed, connect_args={"timeout": 60})
+        engine = create_engine(parsed, connect_args={"timeout": BUSY_SECONDS})
         event.listen(engine, "connect", _sqlite_pragmas)
         # The driver would commit before DDL; we open every transaction ourselves.
         event.listen(engine, "begin", _sqlite_begin)

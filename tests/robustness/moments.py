@@ -41,10 +41,21 @@ HEAVY = (
 )
 
 
-def load_all() -> None:
-    """Import what a pass needs, in the parent, so that no child has to."""
+def load_all(folder: Path) -> None:
+    """Import what a pass needs, in the parent, so that no child has to.
+
+    The script for pages that zoom takes a second to bundle, and its engine does not survive a fork:
+    it is made once in a child, and its text handed to all others.
+    """
     for name in HEAVY:
         importlib.import_module(name)
+    from reports import render
+
+    file = folder / "script.js"
+    original = render.live_script
+    assert not fork_and_kill(lambda: file.write_text(original(), "utf-8"), None)
+    bundled = file.read_text("utf-8")
+    render.live_script = lambda: bundled  # type: ignore[assignment]
 
 
 def one_pass(bay: SmallBay, number: int) -> None:

@@ -127,7 +127,7 @@ class SmallBay:
 
     def page(self, number: int) -> bytes:
         """The report of a night."""
-        [file] = (self.root / "reports").glob(f"*{night(number):%Y-%m-%d}*.html")
+        [file] = (self.root / "reports").rglob(f"*{night(number):%Y-%m-%d}*.html")
         return file.read_bytes()
 
     def pages(self) -> dict[str, bytes]:

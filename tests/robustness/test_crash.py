@@ -46,8 +46,8 @@ def state(bay: SmallBay) -> dict[str, list[str]]:
 
 @pytest.fixture(scope="module")
 def undisturbed(tmp_path_factory: pytest.TempPathFactory) -> Undisturbed:
-    moments.load_all()
     folder = tmp_path_factory.mktemp("crash")
+    moments.load_all(folder)
     before = make(folder / "before", nights=NIGHT)
     moments.in_child(before, NIGHT - 1)
     before.drops_of(NIGHT)
