@@ -232,7 +232,7 @@ def _take_in(
     def show(done: int, total: int, what: str) -> None:
         progress(what, done, total)
 
-    return take_in(session.engine, session.bay, as_of, stop=stop, progress=show)
+    return take_in(session.engine, session.bay, as_of, now=clock.now(), stop=stop, progress=show)
 
 
 def _tell_waiting() -> None:

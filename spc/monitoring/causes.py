@@ -3,9 +3,8 @@
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass
 from datetime import timedelta
-from typing import Any, cast
+from typing import Any
 
 import pandas as pd
 
@@ -19,13 +18,6 @@ from spc.records.stamps import to_us
 from spc.stats.attribution import AttributionOptions, Effect, Level, attribute
 
 Progress = Callable[[str, int, int], None]
-
-
-@dataclass(frozen=True)
-class _Known:
-    """What the engine needs of an effect of an earlier night."""
-
-    level: Level
 
 
 def find_causes(book: Book, progress: Progress) -> None:
@@ -45,25 +37,21 @@ class _Causes:
         self._case = case
 
     def effects(self) -> pd.Index[int]:
+        """Open and update what the engine finds; returns the points that are explained by it.
+
+        Every pass looks at the whole window afresh, so that an early guess does not bind a later
+        one; what is the same thing as before is told by level, streams and time.
+        """
         known = [e for e in self._book.known() if "engine" in e.payload and self._may_go_on(e)]
         known.sort(key=lambda e: e.id)
-        previous = [_Known(_level_of(e.payload["engine"])) for e in known]
         budget = self._book.bay.settings.nightly.false_excursions_per_night
-        options = AttributionOptions(
-            alpha=min(1.0, budget * EFFECT_SHARE),
-            since=None if self._book.before_us is None else self._book.before_us / 1e6,
-        )
-        found = attribute(
-            self._case.evidence,
-            options,
-            self._book.as_of.timestamp(),
-            cast("list[Effect]", previous),
-        )
+        options = AttributionOptions(alpha=min(1.0, budget * EFFECT_SHARE))
+        found = attribute(self._case.evidence, options, self._book.as_of.timestamp())
         explained: pd.Index[int] = pd.Index([], dtype="int64")
         for effect in found:
             rows = affected_rows(self._case, effect)
-            explained = explained.union(self._explains(effect, rows))
-            self._keep_effect(effect, known)
+            if self._keep_effect(effect, rows, known):
+                explained = explained.union(self._explains(effect, rows))
         return explained
 
     def _may_go_on(self, excursion: Excursion) -> bool:
@@ -81,35 +69,39 @@ class _Causes:
         inside &= (points["at_us"] >= span.first_us) & (points["at_us"] <= span.last_us)
         return points.index[inside]
 
-    def _keep_effect(self, effect: Effect, known: list[Excursion]) -> None:
+    def _keep_effect(self, effect: Effect, rows: pd.DataFrame, known: list[Excursion]) -> bool:
+        """Keep an effect: as the excursion it goes on as, or as a new one if it rests on something
+        that this pass is the first to see. Returns whether it is kept."""
         payload = effect_payload.payload_of(
             self._book.connection, self._case, effect, self._book.now_us
         )
-        same = known[effect.previous] if effect.previous is not None else None
-        if same is not None and not _same_thing(effect, payload, same):
-            same = None  # the engine took the name of an old effect for a new one
-        same = same or self._alike(payload, effect.form, known)
-        if same is not None and same.id in self._book.touched:
-            return
+        same = self._same(effect, payload, known)
         if same is None:
+            before = self._book.before_us
+            if before is not None and not (rows["measured_us"] > before).any():
+                return False
             identity = f"effect:{'+'.join(effect.level.factors)}:{'+'.join(effect.level.names)}"
             number = self._book.open("act", effect.form, identity, payload)
             self._merge_loose(number, payload)
-        else:
-            self._book.touched.add(same.id)
-            if same.status != "closed":
-                self._book.update(same, "act", effect.form, payload)
-                self._merge_loose(same.id, payload)
+            return True
+        self._book.touched.add(same.id)
+        if same.status != "closed":
+            self._book.update(same, "act", effect.form, payload)
+            self._merge_loose(same.id, payload)
+        return True
 
-    def _alike(
-        self, payload: dict[str, Any], form: str, known: list[Excursion]
+    def _same(
+        self, effect: Effect, payload: dict[str, Any], known: list[Excursion]
     ) -> Excursion | None:
-        """An excursion that tells of the same thing under another level: most of its streams and
-        an onset that overlaps."""
+        """The excursion that an effect continues: under its own level while their spans meet, or
+        under another level with most of its streams and an onset that meets."""
         mine = stream_keys(payload)
-        for one in known:
-            if one.id in self._book.touched:
-                continue
+        free = [one for one in known if one.id not in self._book.touched]
+        for one in free:
+            named = _level_of(one.payload["engine"]) == effect.level
+            if named and _spans_meet(payload, one.payload, self._book.now_us):
+                return one
+        for one in free:
             theirs = stream_keys(one.payload)
             common = len(mine & theirs) / max(min(len(mine), len(theirs)), 1)
             if common >= 0.5 and _overlap(payload["onset"], one.payload["onset"]):
@@ -149,11 +141,11 @@ class _Causes:
                 self._book.open(loose.tier, pattern, loose.identity, payload)
 
 
-def _same_thing(effect: Effect, payload: dict[str, Any], known: Excursion) -> bool:
-    """An effect goes on under its own level, or under another one from the same time on."""
-    if effect.level == _level_of(known.payload["engine"]):
-        return True
-    return _overlap(payload["onset"], known.payload["onset"])
+def _spans_meet(a: dict[str, Any], b: dict[str, Any], now_us: int) -> bool:
+    """Whether two effects were on at the same time."""
+    ends = [one.get("end_us") or now_us for one in (a, b)]
+    starts = [one["onset"]["earliest_us"] for one in (a, b)]
+    return bool(starts[0] <= ends[1] and starts[1] <= ends[0])
 
 
 def _level_of(engine: dict[str, Any]) -> Level:

@@ -70,16 +70,23 @@ class Search:
     def run(self) -> list[Found]:
         """Find effects until chance could do as well; returns them, strongest first."""
         alpha = self.state.options.alpha
+        spent = np.zeros(len(self.state.residual), dtype=bool)
         for _ in range(self.state.options.max_effects):
-            left = self.left()
+            left = np.where(spent, 0.0, self.left())
             best = self.state.best(left, fresh=True)
             if best is None:
                 break
             strength = self.state.strength(best.candidate, left, fresh=True)
             if strength < _HOPELESS or self.calibration.p_value(strength) > alpha:
                 break
-            self.found.append(replace(best, strength=strength))
-            self.refit()
+            before = list(self.found)
+            if not any(_twins(best, f) for f in before):
+                self.found.append(replace(best, strength=strength))
+                self.refit()
+            if len(self.found) == len(before) or not all(self._sane(f) for f in self.found):
+                # What the effects at hand cannot take up there is no effect of its own.
+                self.found = before
+                spent[best.fit.cells] = True
         self.settle()
         return sorted(self.found, key=lambda f: -f.profile.gain)
 
@@ -90,6 +97,12 @@ class Search:
                 again = self._at(found.candidate, self.left([found]), found.previous)
                 if again is not None:
                     self.found[i] = again
+
+    def _sane(self, found: Found) -> bool:
+        """Whether an effect is no larger than what was seen: refits of effects that share their
+        cells must not run away from each other."""
+        seen = np.abs(self.state.residual[found.fit.cells]).max()
+        return bool(np.abs(found.fit.amplitude[found.fit.main()]) <= 2.0 * seen)
 
     def settle(self) -> None:
         """Let each effect change its level, make one of what one cause explains, drop the rest."""
@@ -206,6 +219,11 @@ class Search:
 
     def _column(self, factors: tuple[str, ...]) -> Column | None:
         return next((c for c in self.state.columns if c.factors == factors), None)
+
+
+def _twins(new: Found, old: Found) -> bool:
+    """Whether two effects are the same level at the same time."""
+    return new.candidate.key == old.candidate.key and _overlap(new, old) > 0.5
 
 
 def _overlap(a: Found, b: Found) -> float:
