@@ -45,8 +45,8 @@ def run_demo(folder: Path, progress: Progress) -> DemoResult:
     demo = write_demo(folder)
     session = Session(load_bay(demo.config))
     night = None
-    # Every second night, and the last: enough to see what opens and what goes on.
-    passes = [*demo.nights[:-1:2], demo.nights[-1]]
+    # Three of the nights: enough to see what opens, what goes on and what ends.
+    passes = [demo.nights[i] for i in (4, 7, 9)]
     for number, as_of in enumerate(passes):
         progress(f"night {as_of:%d %b}", number, len(passes))
         night = run_night(session, as_of)
