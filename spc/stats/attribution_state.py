@@ -208,16 +208,14 @@ class State:
             # the machine comes first, then the caller's order.
             ranked = sorted(self.columns, key=lambda c: not is_machine(c.factors))
             at = next((i for i, c in enumerate(ranked) if c is best.candidate.column), len(ranked))
-            return self._instead(best, tuple(ranked[:at]), y, residual, slack=2.0 * _TIE)
+            return self._instead(best, tuple(ranked[:at]), y, residual)
         return best
 
     def _instead(
-        self, found: Found, columns: tuple[Column, ...], y: FloatArray, residual: FloatArray,
-        slack: float = np.inf,
-    ) -> Found:  # fmt: skip
+        self, found: Found, columns: tuple[Column, ...], y: FloatArray, residual: FloatArray
+    ) -> Found:
         """Return the first of some columns whose level holds the same cells as the effect found,
-        if there is one: a batch that is everywhere is to blame before everything is. `slack` is
-        what it may score less."""
+        if there is one: a batch that is everywhere is to blame before everything is."""
         families = found.fit.telling()
         mine = found.fit.cells[np.isin(self.evidence.cell_family[found.fit.cells], families)]
         near = np.isin(self.evidence.cell_family, families)
@@ -231,12 +229,17 @@ class State:
             pattern = pattern_of(same_time, candidate.level, found.profile.shape, self.evidence)
             if jaccard(mine, np.flatnonzero(near & (pattern != 0.0))) < ALIAS:
                 continue
-            profile = self.look(candidate, y, False)
-            if profile is None or profile.score < found.score - slack:
+            if found.profile.shape.lot >= 0:
+                fit = self.fit(candidate, found.profile.shape, residual, y)
+                if fit is not None:
+                    return Found(candidate, found.profile, fit)
                 continue
-            fit = self.fit(candidate, profile.shape, residual, y)
-            if fit is not None and self.same_cells(found, Found(candidate, profile, fit)):
-                return Found(candidate, profile, fit)
+            profile = self.look(candidate, y, False)
+            fit = None if profile is None else self.fit(candidate, profile.shape, residual, y)
+            if profile is not None and fit is not None:
+                other = Found(candidate, profile, fit)
+                if self.same_cells(found, other):
+                    return other
         return found
 
     def _preferred(self, found: list[Found]) -> Found:
