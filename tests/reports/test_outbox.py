@@ -40,9 +40,7 @@ class Box:
         session.host_name = hostname
         return [self.refuse["EHLO"]] if "EHLO" in self.refuse else responses
 
-    async def handle_HELO(
-        self, server: Any, session: Any, envelope: Any, hostname: str
-    ) -> str:
+    async def handle_HELO(self, server: Any, session: Any, envelope: Any, hostname: str) -> str:
         session.host_name = hostname
         return self.refuse.get("EHLO", "250 here")
 
