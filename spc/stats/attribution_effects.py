@@ -123,11 +123,11 @@ class Effect:
     """One thing that happened.
 
     `form`: shift, drift, spike, spread or map; `shape` its form in time; `end` when it ended
-    (None: still on). `p_adjusted` is the expected number of false effects as strong in one look
-    at the whole bay, at most 1; `evidence` the log score, `gain` the log Bayes factor. `lots` are
-    the affected lots seen. `leading` is the index into `sizes` of the family that tells most;
-    `previous` the index of the earlier effect that this one continues, or None; `absorbed` are
-    levels of consequences counted into this effect.
+    (None: still on, or as long as the level itself lasted). `p_adjusted` is the expected number of
+    false effects as strong in one look at the whole bay, at most 1; `evidence` the log score,
+    `gain` the log Bayes factor. `lots` are the affected lots seen. `leading` is the index into
+    `sizes` of the family that tells most; `previous` the index of the earlier effect that this one
+    continues, or None; `absorbed` are levels of consequences counted into this effect.
     """
 
     form: str

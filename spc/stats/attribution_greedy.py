@@ -90,9 +90,9 @@ class Search:
         self.settle()
         return sorted(self.found, key=lambda f: -f.profile.gain)
 
-    def refit(self) -> None:
+    def refit(self, passes: int = 1) -> None:
         """Refit all effects in turn, level kept, onset, form and sizes free."""
-        for _ in range(_PASSES if len(self.found) > 1 else 0):
+        for _ in range(passes if len(self.found) > 1 else 0):
             for i, found in enumerate(self.found):
                 again = self._at(found.candidate, self.left([found]), found.previous)
                 if again is not None:
@@ -108,7 +108,7 @@ class Search:
         """Let each effect change its level, make one of what one cause explains, drop the rest."""
         for i in range(len(self.found)):
             self._relevel(i)
-        self.refit()
+        self.refit(_PASSES)
         self._merge()
         self._absorb()
         for i, found in enumerate(self.found):

@@ -1,6 +1,7 @@
 """Measure the attribution engine on the invented bay: detection, false effects, causes, onsets.
 
-Run by hand: `python -m tests.benchmarks.bench_attribution [--seeds N] [--only NAME] [--nights N]`.
+Run by hand: `python -m tests.benchmarks.bench_attribution [--seeds N] [--only NAME] [--nights N]
+[--alpha P]`.
 Each seed and scenario is watched night by night (05:30) from the night after the fault on, with the
 effects of the night before handed back in; `nothing` is watched over all nights after the baseline.
 Prints one row a scenario: detected by the next night, by the second, by the last; false effects a
@@ -113,7 +114,9 @@ def same_level(level: Level, fault: Fault) -> bool:
     return dict(zip(names, level.names, strict=True)) == wanted
 
 
-def watch(tally: Tally, bay: Bay, faults: tuple[Fault, ...], seed: int, nights: int) -> None:
+def watch(
+    tally: Tally, bay: Bay, faults: tuple[Fault, ...], seed: int, nights: int, alpha: float
+) -> None:
     """Watch one seed of a scenario night by night."""
     evidence = bay.with_faults(*faults).simulate(seed)
     truths = [truth_of(evidence, bay, f) for f in faults]
@@ -124,7 +127,7 @@ def watch(tally: Tally, bay: Bay, faults: tuple[Fault, ...], seed: int, nights: 
     seen: dict[int, int] = {}
     i = 0
     while night <= last + 1e-9:
-        options = AttributionOptions(since=(night - 1.0) * DAY)
+        options = AttributionOptions(alpha=alpha, since=(night - 1.0) * DAY)
         clock = time.process_time()
         effects = attribute(evidence, options, night * DAY, previous)
         tally.seconds += time.process_time() - clock
@@ -162,7 +165,8 @@ def main() -> None:
     parser.add_argument("--seeds", type=int, default=20)
     parser.add_argument("--first", type=int, default=0)
     parser.add_argument("--only", default="")
-    parser.add_argument("--nights", type=int, default=3)
+    parser.add_argument("--nights", type=int, default=4)
+    parser.add_argument("--alpha", type=float, default=0.1)
     args = parser.parse_args()
     bay = Bay()
     assert len(CHARACTERISTICS) == 3
@@ -174,7 +178,7 @@ def main() -> None:
         tally = Tally()
         for seed in range(args.first, args.first + args.seeds):
             faults = scenarios(np.random.default_rng(seed))[name]
-            watch(tally, bay, faults, seed, args.nights)
+            watch(tally, bay, faults, seed, args.nights, args.alpha)
         n, found = max(tally.faults, 1), max(tally.found, 1)
         cumulative = np.cumsum(tally.by_night) / n
         print(
