@@ -34,9 +34,8 @@ def _nights(reader: Reader, folder: Path) -> list[model_pages.IndexEntry]:
         .order_by(passes.c.as_of_us.desc())
         .limit(_MOST_NIGHTS)
     )
-    tiers = dict(
-        reader.connection.execute(select(excursions.c.id, excursions.c.tier)).tuples().all()
-    )
+    found = reader.connection.execute(select(excursions.c.id, excursions.c.tier))
+    tiers = {number: tier for number, tier in found}  # noqa: C416 - rows are no pairs to mypy
     out = []
     for as_of_us, text in rows:
         at = from_us(as_of_us, zone)

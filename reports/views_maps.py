@@ -43,7 +43,8 @@ def map_of(reader: Reader, view: model.Excursion) -> model.WaferMapPicture | Non
         return None
     before = table[~table["after"]].set_index("site")
     after = table[table["after"]].set_index("site")
-    both = before.join(after, lsuffix="_before", rsuffix="_after", how="inner").sort_index()
+    both = before.add_suffix("_before").join(after.add_suffix("_after"), how="inner")
+    both = both.sort_index()
     return model.WaferMapPicture(
         characteristic=plan.name,
         unit=plan.unit,

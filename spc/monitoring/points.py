@@ -151,6 +151,15 @@ def _wafer_to_wafer(groups: PointGroups, mean: FloatArray) -> Columns:
     return _rows(groups, "wafer-to-wafer", value, n - 1.0)
 
 
+def _steady(values: FloatArray) -> FloatArray:
+    """Values to ten significant digits."""
+    size = np.abs(values)
+    known = np.isfinite(values) & (size > 0)
+    unit = np.ones_like(values)
+    unit[known] = 10.0 ** (9 - np.floor(np.log10(size[known])))
+    return np.asarray(np.round(values * unit) / unit)
+
+
 def map_distances(
     wafers: Wafers, groups: PointGroups, assigned: Assignment
 ) -> tuple[Columns, FloatArray]:
@@ -178,6 +187,9 @@ def map_distances(
             points, local = np.unique(groups.of_wafer[rows], return_inverse=True)
             found = map_distance(reference, maps, groups=local, baseline=baseline)
             value[points], df[points], z[points] = found.distance, found.df, found.z
+    # A product of matrices may differ in the last bits with the rows that happen to be beside;
+    # what is kept must not.
+    value, z = _steady(value), _steady(z)
     distances = _rows(groups, "map-distance", value, df)
     return distances, z[distances["point"]]
 
