@@ -69,7 +69,8 @@ class SpinPlan(Strict):
 
 
 class ChartPlan(Strict):
-    """Memory charts beside the run rules; they feed the triage, not the rule hits."""
+    """Designs of memory charts. `yellowbay check` says whether they can exist; the nightly pass does
+    not chart them (triage pools small shifts over points and streams by itself)."""
 
     ewma: tuple[float, float] | None = Field(default=None, description="[lambda, L]")
     cusum: tuple[float, float] | None = Field(default=None, description="[k, h] in sigmas")

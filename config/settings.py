@@ -273,7 +273,7 @@ class PlausibleSettings(Strict):
 
 
 class ComputeSettings(Strict):
-    """Where large re-evaluations run."""
+    """Where large re-evaluations run. Read and checked; the distributed engine is not built yet."""
 
     scheduler: str | None = Field(
         default=None, description="tcp://host:port of a Dask scheduler; without it this machine."
@@ -284,7 +284,7 @@ class ComputeSettings(Strict):
 
 
 class RetentionSettings(Strict):
-    """What is kept and for how long; by default everything."""
+    """What is kept and for how long: everything. Read and checked; nothing is taken away yet."""
 
     archive_drops_after_days: float | None = Field(
         default=None, gt=0, description="Move older drop files into archive/YYYY-MM."
