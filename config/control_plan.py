@@ -69,8 +69,8 @@ class SpinPlan(Strict):
 
 
 class ChartPlan(Strict):
-    """Designs of memory charts. `yellowbay check` says whether they can exist; the nightly pass does
-    not chart them (triage pools small shifts over points and streams by itself)."""
+    """Designs of memory charts. `yellowbay check` says whether they can exist; the nightly pass
+    does not chart them (triage pools small shifts over points and streams by itself)."""
 
     ewma: tuple[float, float] | None = Field(default=None, description="[lambda, L]")
     cusum: tuple[float, float] | None = Field(default=None, description="[k, h] in sigmas")
