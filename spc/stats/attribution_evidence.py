@@ -191,7 +191,7 @@ class AttributionOptions:
     min_sigmas: float = 0.4
     confidence: float = 0.95
     shape_prior: dict[str, float] = field(
-        default_factory=lambda: {"step": 0.35, "ramp": 0.35, "window": 0.1, "lot": 0.2}
+        default_factory=lambda: {"step": 0.45, "ramp": 0.22, "window": 0.11, "lot": 0.22}
     )
 
     def __post_init__(self) -> None:
