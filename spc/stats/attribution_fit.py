@@ -197,7 +197,8 @@ def _explained(
     """Posterior mean of the effect on its cells, each series with its own amplitude.
 
     The spread of amplitudes between series is a robust moment estimate (median), at most 40 % of
-    the amplitude, so that one odd series is not explained away with the rest.
+    the amplitude; a series is followed at most two such spreads away. So one odd series, which has
+    a cause of its own, is not explained away with the rest.
     """
     code, value, se, _, at = series
     position = np.searchsorted(families, evidence.family[code])
@@ -210,7 +211,8 @@ def _explained(
             excess = np.median(away2[mine]) / 0.4549 - np.median(se[mine] ** 2)
             spread2[f] = np.clip(excess, 0.0, (0.4 * amplitude[f]) ** 2)
     own = spread2[position] / (spread2[position] + se**2)
-    size = shrink[position] * (mean + own * (value - mean))
+    room = 2.0 * np.sqrt(spread2[position])
+    size = shrink[position] * (mean + own * np.clip(value - mean, -room, room))
     out: FloatArray = size[at] * x
     return out
 
