@@ -21,6 +21,9 @@ from spc.records.sessions import open_database
 from tests.robustness import moments
 from tests.robustness.smallbay import NIGHTS, SHIFTED_FROM, SmallBay, content, fork_and_kill, make
 
+# Forks a process that has drawn nothing yet: see test_in_its_own_process.py.
+pytestmark = pytest.mark.forks
+
 NIGHT = SHIFTED_FROM  # the night that is killed opens an excursion
 
 

@@ -22,6 +22,10 @@ from tests.robustness.smallbay import SmallBay, make, night
 RECIPIENTS = ["b@example.com", "c@example.com", "d@example.com"]
 
 
+# Forks a process that has drawn nothing yet: see test_in_its_own_process.py.
+pytestmark = pytest.mark.forks
+
+
 @pytest.fixture(scope="module")
 def server(tmp_path_factory: pytest.TempPathFactory) -> Iterator[MailServer]:
     with mail_server(tmp_path_factory.mktemp("server")) as running:
