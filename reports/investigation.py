@@ -202,7 +202,7 @@ def _charts(view: InvestigationPage) -> tuple[list[ChartView], Markup | None]:
         "margins": MARGINS["left"] + MARGINS["right"],
         "words": text("zoom.shown"),
     }
-    return charts, Markup(render.live_json(steering))
+    return charts, Markup(render.live_json(steering))  # nosec B704
 
 
 def _shared_axis(charts: list[ChartSeries], view: InvestigationPage) -> TimeAxis:

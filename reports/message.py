@@ -295,7 +295,7 @@ def text_environment() -> Any:
 def _safe_css() -> Any:
     from markupsafe import Markup
 
-    return Markup((TEMPLATES / "mail.css").read_text("utf-8"))
+    return Markup((TEMPLATES / "mail.css").read_text("utf-8"))  # nosec B704
 
 
 def _inlined(page: str) -> str:

@@ -13,7 +13,7 @@ from sqlalchemy.engine import make_url
 
 # How long a writer of SQLite waits for another program before it gives up.
 BUSY_SECONDS = 60.0
-PASSWORD_VARIABLE = "YELLOWBAY_DATABASE_PASSWORD"
+PASSWORD_VARIABLE = "YELLOWBAY_DATABASE_PASSWORD"  # nosec B105
 
 
 def secret(variable: str) -> str | None:

@@ -14,7 +14,7 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
-from sqlalchemy import Connection, Engine, Table, func, insert, select, text
+from sqlalchemy import Connection, Engine, Table, func, insert, select
 
 from spc.records.sessions import open_database, reading
 from spc.records.tables import metadata
@@ -139,9 +139,6 @@ def _advance_sequence(connection: Connection, table: Table) -> None:
     """PostgreSQL numbers new rows from a sequence, which a copy with given ids leaves behind."""
     if connection.dialect.name != "postgresql" or "id" not in table.c:
         return
-    connection.execute(
-        text(
-            f"SELECT setval(pg_get_serial_sequence('{table.name}', 'id'), "
-            f"GREATEST((SELECT COALESCE(MAX(id), 0) FROM {table.name}), 1))"
-        )
-    )
+    sequence = func.pg_get_serial_sequence(table.name, "id")
+    largest = select(func.coalesce(func.max(table.c.id), 0)).scalar_subquery()
+    connection.execute(select(func.setval(sequence, func.greatest(largest, 1))))
