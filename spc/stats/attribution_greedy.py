@@ -107,7 +107,8 @@ class Search:
     def settle(self) -> None:
         """Let each effect change its level, make one of what one cause explains, drop the rest."""
         for i in range(len(self.found)):
-            self._relevel(i)
+            if self._matters(self.found[i]):
+                self._relevel(i)
         self.refit(_PASSES)
         self._merge()
         self._absorb()
@@ -119,13 +120,16 @@ class Search:
 
     def _counts(self, found: Found) -> bool:
         """Whether a new effect is beyond chance and large enough to matter."""
+        p_value = self.calibration.p_value(found.strength)
+        return self._matters(found) and p_value <= self.state.options.alpha
+
+    def _matters(self, found: Found) -> bool:
+        """Whether an effect is large enough in some family, in sigmas of a plotted point."""
         options, fit = self.state.options, found.fit
         sigmas = np.abs(fit.amplitude) / self.state.noise.sigma[fit.families]
         likely = fit.probability > 0.5
         likely[fit.main()] = True
-        if sigmas[likely].max() < options.min_sigmas:
-            return False
-        return self.calibration.p_value(found.strength) <= options.alpha
+        return bool(sigmas[likely].max() >= options.min_sigmas)
 
     def _at(
         self, candidate: Candidate, residual: FloatArray, previous: int | None = None
@@ -158,7 +162,7 @@ class Search:
         for found in list(self.found):
             if all(found is not f for f in self.found):
                 continue
-            group = [f for f in self.found if _onsets_meet(f, found)]
+            group = [f for f in self.found if _onsets_meet(f, found) and self._matters(f)]
             if len(group) < 2:
                 continue
             best = self.state.best(self.left(group), False, self._mask(group))
