@@ -10,6 +10,8 @@ import re
 from dataclasses import dataclass
 from typing import Any
 
+from config.values import PASSWORD_IN_URL
+
 _VALUE_WIDTH = 60
 
 
@@ -27,6 +29,11 @@ class Mistake:
     reason: str
     mend: str
 
+    def __post_init__(self) -> None:
+        """Take out what is or may be a secret: a mistake travels on into terminals and logs."""
+        name = re.sub(r"\[\d+\]$", "", self.key).rpartition(".")[2]
+        object.__setattr__(self, "value", _without_secrets(name, self.value))
+
     def __str__(self) -> str:
         """Say it in one line."""
         shown = "" if self.value is None else f" = {_shorten(self.value)}"
@@ -41,7 +48,21 @@ class ConfigurationError(Exception):
         super().__init__("\n".join(str(m) for m in mistakes))
 
 
+def _without_secrets(name: str, value: Any) -> Any:
+    """The value with passwords replaced by `***`, in tables and URLs too."""
+    if isinstance(value, dict):
+        return {k: _without_secrets(str(k), v) for k, v in value.items()}
+    if isinstance(value, list):
+        return [_without_secrets(name, v) for v in value]
+    if value is not None and re.search(r"pass(word|wd)?$|secret|token", name, re.IGNORECASE):
+        return "***"
+    return PASSWORD_IN_URL.sub(_starred, value) if isinstance(value, str) else value
+
+
+def _starred(match: re.Match[str]) -> str:
+    return f"{match[1] or match[3]}***"
+
+
 def _shorten(value: Any) -> str:
-    # A password in a URL must not travel on into logs and terminals.
-    text = re.sub(r"(://[^/@:\s]*:)[^/@\s]+@", r"\1***@", repr(value))
+    text = repr(value)
     return text if len(text) <= _VALUE_WIDTH else text[: _VALUE_WIDTH - 1] + "…"

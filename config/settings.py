@@ -15,7 +15,7 @@ from zoneinfo import ZoneInfo, ZoneInfoNotFoundError
 
 from pydantic import BaseModel, ConfigDict, Field, field_validator, model_validator
 
-from config.values import EMAIL, Duration, looks_like_url
+from config.values import EMAIL, Duration, has_password, looks_like_url
 
 MIB = 1024 * 1024
 
@@ -74,7 +74,7 @@ class DatabaseSettings(Strict):
             raise ValueError(
                 "no database URL; write sqlite:///bay.db or postgresql+psycopg://user@host/name"
             )
-        if re.match(r"^[^:]+://[^/@:]*:[^/@]+@", value):
+        if has_password(value):
             raise ValueError(
                 "a password stands in the file; take it out and set YELLOWBAY_DATABASE_PASSWORD"
             )

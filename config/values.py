@@ -10,6 +10,9 @@ from pydantic import BeforeValidator
 
 EMAIL = re.compile(r"[^@\s<>\"',;]+@[^@\s<>\"',;]+")
 
+# What stands between `user:` and the last `@` of a URL, or behind `password=`.
+PASSWORD_IN_URL = re.compile(r"(^[^:]+://[^:@/]*:(?!\d+/))(.+)(?=@)|([?&]password=)[^&]+")
+
 # Names of run rules; the numbers in them are free (`3of4-beyond-1.5s`). The engine reads the same.
 RULE_NAME = re.compile(
     r"beyond-\d+(\.\d+)?s|\d+of\d+-beyond-\d+(\.\d+)?s|\d+-one-side|\d+-trending"
@@ -57,6 +60,11 @@ def looks_like_url(value: str) -> bool:
     return value.startswith("sqlite:///") or bool(
         re.match(r"postgresql(\+psycopg)?://[^\s]+", value)
     )
+
+
+def has_password(url: str) -> bool:
+    """Whether a password stands in a database URL."""
+    return PASSWORD_IN_URL.search(url) is not None
 
 
 def house_unit(unit: str) -> tuple[str, float]:

@@ -85,6 +85,11 @@ class Carrier:
                 if self.settings.user is not None:
                     server.login(self.settings.user, self.password or "")
                 server.sendmail(self.settings.sender, [recipient], message)
+        except UnicodeEncodeError:
+            raise MailDelayedError(
+                "the SMTP user or password has characters outside ASCII, which the login cannot "
+                "send; set another YELLOWBAY_SMTP_PASSWORD"
+            ) from None
         except smtplib.SMTPRecipientsRefused as error:
             code, text = next(iter(error.recipients.values()))
             raise _sorted(code, text, f"recipient {recipient}") from None

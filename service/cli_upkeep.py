@@ -77,8 +77,18 @@ def move(
     as_json: JsonOption = False,
 ) -> None:
     """Copy the database to another one, for example from SQLite to PostgreSQL, and compare both."""
+    from config.values import has_password
+    from service.lock import pass_lock
+
+    if has_password(to):
+        raise CommandError(
+            "a password stands in --to, where every user of the machine can see it: take it out "
+            "and set YELLOWBAY_DATABASE_PASSWORD",
+            WRONG_USAGE,
+        )
     session = open_session(config)
-    _copy(session.bay.database_url, to, as_json)
+    with pass_lock(session.engine, 600.0):  # what a pass wrote meanwhile would be left behind
+        _copy(session.bay.database_url, to, as_json)
     if not as_json:
         say(f"Set database.url = {to!r} in {session.bay.file.name} to work with it from now on.")
 
