@@ -102,7 +102,9 @@ def test_a_night_killed_again_and_again(undisturbed: Undisturbed, tmp_path: Path
 def test_many_kills_at_chosen_moments(undisturbed: Undisturbed, tmp_path: Path, seed: int) -> None:
     """200 kills: 50 nights killed 1 to 7 times each."""
     kills = 1 + seed % 7
-    assert crash_and_recover(undisturbed, tmp_path / "bay", random.Random(seed), kills) >= 1
+    struck = crash_and_recover(undisturbed, tmp_path / "bay", random.Random(seed), kills)
+    print(f"seed {seed}: {struck} kills struck")  # the sum stands in docs/promises.md
+    assert struck >= 1
 
 
 @pytest.mark.slow
@@ -116,6 +118,7 @@ def test_many_kills_by_the_clock(undisturbed: Undisturbed, tmp_path: Path, seed:
     )
     moments.in_child(bay, NIGHT)
     assert_as_undisturbed(bay, undisturbed)
+    print(f"seed {seed}: {struck} kills struck")
     assert struck >= 1
 
 
