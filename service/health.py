@@ -89,12 +89,22 @@ def _last_night(session: Session) -> Finding:
 
 def _lock(session: Session) -> Finding:
     from service.lock import BusyError, pass_lock
+    from spc.records import passes
+    from spc.records.sessions import reading
+    from spc.records.stamps import from_us
 
     try:
-        with pass_lock(session.engine, 0):
-            return Finding("lock", True, "free", {"held": False})
+        with pass_lock(session.engine, 0), reading(session.engine) as connection:
+            left = passes.left_over(connection)
     except BusyError:
-        return Finding("lock", True, "a pass is running", {"held": True})
+        return Finding("lock", True, "a pass is running", {"held": True, "unfinished": []})
+    zone = session.bay.settings.bay.zone
+    stamps = [from_us(one.as_of_us, zone) for one in left]
+    text = "free"
+    if stamps:
+        text += f"; the pass of {stamps[0]:%Y-%m-%d %H:%M} was not finished, the next completes it"
+    unfinished = [stamp.isoformat() for stamp in stamps]
+    return Finding("lock", not left, text, {"held": False, "unfinished": unfinished})
 
 
 def _mail(session: Session) -> Finding:

@@ -10,9 +10,9 @@ from pathlib import Path
 from typing import Any
 
 import pytest
-from sqlalchemy import text
+from sqlalchemy import create_engine, text
 from sqlalchemy.engine import make_url
-from sqlalchemy.exc import OperationalError
+from sqlalchemy.exc import OperationalError, ProgrammingError
 
 from spc.records.sessions import open_database
 from tests.robustness.smallbay import SHIFTED_FROM, SmallBay, command, content, make, night
@@ -153,3 +153,28 @@ def test_a_server_that_is_not_there_is_one_line(tmp_path: Path) -> None:
     assert out == ""
     [line] = told.splitlines()
     assert "the database server is not to be reached" in line
+
+
+def test_the_privileges_of_the_documentation_are_enough(
+    postgres_server: Callable[[str], str], tmp_path: Path
+) -> None:
+    """The statements of docs/operations.md, run as they stand; then a night as that user."""
+    words = (Path(__file__).resolve().parents[2] / "docs" / "operations.md").read_text("utf-8")
+    block = words.split("```sql\n")[1].split("```")[0]
+    here = make_url(postgres_server(f"r_{uuid.uuid4().hex}"))
+    for line in block.splitlines():
+        if line.startswith("\\c "):
+            here = here.set(database=line.split()[1])
+            continue
+        server = create_engine(here, isolation_level="AUTOCOMMIT")
+        with server.connect() as connection:
+            connection.execute(text(line))
+        server.dispose()
+    mine = here.set(username="yellowbay").render_as_string(hide_password=False)
+    bay = use(make(tmp_path / "bay", nights=2), mine)
+    assert bay.nightly(1)["readings"]["loaded"] == 80
+    assert bay.json("health")["checks"][0]["well"]
+    server = create_engine(mine)
+    with server.connect() as connection, pytest.raises(ProgrammingError):
+        connection.execute(text("CREATE ROLE other"))
+    server.dispose()
