@@ -1,34 +1,149 @@
-"""The command line: parse, call one function below, print."""
+"""The command line: parse, call one function below, print.
+
+Each command lives in a module of its own kind, read when the command is called. What
+`yellowbay --help` says of them stands in a table here, so that it answers at once; a test holds
+the table against the commands themselves.
+"""
 
 from __future__ import annotations
 
-import logging
 import sys
+from collections.abc import Iterator, MutableMapping
 from functools import cache
-from pathlib import Path
-from typing import Annotated
+from importlib import import_module
+from typing import Annotated, Any
 
 import typer
+from typer.core import TyperGroup
 
-from service.context import (
-    COULD_NOT_FINISH,
-    WRONG_USAGE,
-    AsOfOption,
-    CommandError,
-    ConfigOption,
-    JsonOption,
-    open_session,
-    print_json,
-    progress_bar,
-    say,
-    tell,
-)
+# Without rich: its import takes longer than all the rest of `yellowbay --help`.
+_PLAIN: dict[str, Any] = {
+    "add_completion": False,
+    "pretty_exceptions_enable": False,
+    "rich_markup_mode": None,
+}
+
+# Command -> (module with a function `register`, what the help says of it).
+COMMANDS = {
+    "demo": (
+        "service.cli_pass",
+        "Write an invented bay to DIR and run the whole job on it.",
+    ),
+    "check": (
+        "service.cli_pass",
+        "Read the configuration, say every mistake, and reckon the false signals of a night.",
+    ),
+    "ingest": (
+        "service.cli_pass",
+        "Take in what has landed in the drop folder.",
+    ),
+    "nightly": (
+        "service.cli_pass",
+        "Run one pass: ingest, evaluate, open or update excursions, write the report, mail it.",
+    ),
+    "serve": (
+        "service.cli_pass",
+        "Stay up and run the pass every night at the bay's local time.",
+    ),
+    "excursions": (
+        "service.cli_excursions",
+        "List excursions; contain, close, reopen, comment on, merge or split one.",
+    ),
+    "investigate": (
+        "service.cli_reports",
+        "Write everything known on one excursion, as an HTML page and as JSON.",
+    ),
+    "points": (
+        "service.cli_reports",
+        "List the plotted points with their limits and rule hits, as of the last pass.",
+    ),
+    "baseline": (
+        "service.cli_baseline",
+        "Control limits: list, show, propose, approve and withdraw sets; every set is kept.",
+    ),
+    "capability": (
+        "service.cli_reports",
+        "Write the monthly capability review, as an HTML page, a workbook and as JSON.",
+    ),
+    "runlength": (
+        "service.cli_reports",
+        "Say how many points a chart design takes to signal.",
+    ),
+    "health": (
+        "service.cli_upkeep",
+        "Say whether the service is well: last night, mail, lock, schema, disk, feeds.",
+    ),
+    "backup": (
+        "service.cli_upkeep",
+        "Copy the whole database, SQLite or PostgreSQL, into one SQLite file.",
+    ),
+    "restore": (
+        "service.cli_upkeep",
+        "Fill the empty database of the configuration from a backup.",
+    ),
+    "move": (
+        "service.cli_upkeep",
+        "Copy the database to another one, say from SQLite to PostgreSQL, and compare both.",
+    ),
+    "audit": (
+        "service.cli_upkeep",
+        "Verify that the record of hand actions is whole and unchanged.",
+    ),
+}
+
+
+class Commands(MutableMapping[str, Any]):
+    """The commands by name; a command is built when it is first asked for."""
+
+    def __init__(self) -> None:
+        self._built: dict[str, Any] = {}
+
+    def __getitem__(self, name: str) -> Any:
+        if name not in self._built:
+            module, _ = COMMANDS[name]
+            self._built |= built(module)
+        return self._built[name]
+
+    def __setitem__(self, name: str, command: Any) -> None:
+        self._built[name] = command
+
+    def __delitem__(self, name: str) -> None:
+        del self._built[name]
+
+    def __iter__(self) -> Iterator[str]:
+        return iter(COMMANDS)
+
+    def __len__(self) -> int:
+        return len(COMMANDS)
+
+
+def built(module: str) -> dict[str, Any]:
+    """The commands of one module by name, ready to be called."""
+    app = typer.Typer(**_PLAIN)
+    app.callback()(_root)
+    import_module(module).register(app)
+    commands: dict[str, Any] = typer.main.get_command(app).commands  # type: ignore[attr-defined]
+    return commands
+
+
+class FrontDoor(TyperGroup):
+    """The root command, whose commands are read when they are called."""
+
+    def __init__(self, **attributes: Any) -> None:
+        super().__init__(**attributes)
+        self.commands = Commands()
+
+    def format_commands(self, ctx: Any, formatter: Any) -> None:
+        """List the commands from the table, without reading them."""
+        with formatter.section("Commands"):
+            formatter.write_dl([(name, text) for name, (_, text) in COMMANDS.items()])
+
 
 app = typer.Typer(
+    cls=FrontDoor,
     no_args_is_help=True,
-    add_completion=False,
-    pretty_exceptions_enable=False,
     help="Statistical process control for a litho bay: what moved, since when, why, which lots.",
+    **_PLAIN,
 )
 
 
@@ -38,108 +153,16 @@ def _root(
         bool, typer.Option("--verbose", "-v", help="Log what is being done to standard error.")
     ] = False,
 ) -> None:
+    import logging
+
     from service.log import start_logging
 
     start_logging(logging.INFO if verbose else logging.WARNING)
 
 
-@app.command()
-def demo(
-    folder: Annotated[Path, typer.Argument(help="Folder to write to.")] = Path("demo"),
-    config: ConfigOption = None,
-    as_json: JsonOption = False,
-) -> None:
-    """Write an invented bay to DIR and run the whole job on it."""
-    from service.demo import run_demo
-
-    if config is not None:
-        tell("demo writes a configuration of its own; --config is not used")
-    with progress_bar("demo") as show:
-        result = run_demo(folder, show)
-    if as_json:
-        print_json(result.as_json())
-    else:
-        say(result.text)
-
-
-@app.command()
-def check(config: ConfigOption = None, as_json: JsonOption = False) -> None:
-    """Read the configuration, say every mistake, and reckon the false signals of a night."""
-    from service.check import check_bay
-
-    outcome = check_bay(config)
-    if as_json:
-        print_json(outcome.as_json())
-    else:
-        for line in outcome.lines:
-            say(line)
-    if outcome.mistakes:
-        raise typer.Exit(WRONG_USAGE)
-
-
-@app.command()
-def ingest(
-    config: ConfigOption = None, as_of: AsOfOption = None, as_json: JsonOption = False
-) -> None:
-    """Take in what has landed in the drop folder."""
-    from service.night import take_in_drops
-
-    session = open_session(config)
-    with progress_bar("taking in") as show:
-        report = take_in_drops(session, session.stamp(as_of), show)
-    if as_json:
-        print_json(report.as_json())
-    else:
-        from service.words import ingest_lines
-
-        for line in ingest_lines(report):
-            say(line)
-
-
-@app.command()
-def nightly(
-    config: ConfigOption = None,
-    as_of: AsOfOption = None,
-    wait: Annotated[
-        float, typer.Option("--wait", min=0, help="Seconds to wait for a pass that is running.")
-    ] = 600.0,
-    as_json: JsonOption = False,
-) -> None:
-    """Run one pass: ingest, evaluate, open or update excursions, write the report, mail it."""
-    from service.night import run_night
-
-    session = open_session(config)
-    with progress_bar("night") as show:
-        night = run_night(session, session.stamp(as_of), wait_seconds=wait, progress=show)
-    if as_json:
-        print_json(night.as_json())
-    else:
-        say(night.text)
-    for error in night.mail_errors:
-        tell(f"yellowbay: mail: {error}")
-    if night.mail_errors:
-        raise typer.Exit(COULD_NOT_FINISH)
-
-
-@app.command()
-def serve(config: ConfigOption = None) -> None:
-    """Stay up and run the pass every night at the bay's local time."""
-    from service.log import start_logging
-    from service.schedule import serve_forever
-
-    start_logging(logging.INFO)
-    serve_forever(open_session(config))
-
-
 @cache
 def command_line() -> typer.Typer:
-    """The whole command line, with the commands that live in modules of their own."""
-    from service import cli_baseline, cli_excursions, cli_reports, cli_upkeep
-
-    app.add_typer(cli_baseline.app, name="baseline")
-    app.add_typer(cli_excursions.app, name="excursions")
-    cli_reports.register(app)
-    cli_upkeep.register(app)
+    """The whole command line."""
     return app
 
 
@@ -154,6 +177,8 @@ def main() -> None:
 
 def _explain(error: Exception) -> int:
     """Say what failed; returns the exit status."""
+    from service.context import CommandError, tell
+
     if isinstance(error, CommandError):
         tell(f"yellowbay: {error}")
         return error.status

@@ -13,6 +13,7 @@ from service.context import (
     ConfigOption,
     JsonOption,
     Session,
+    WholeLines,
     WhoOption,
     open_session,
     person,
@@ -24,6 +25,7 @@ if TYPE_CHECKING:
     from spc.monitoring.life import Hand
 
 app = typer.Typer(
+    cls=WholeLines,
     no_args_is_help=False,
     invoke_without_command=True,
     help="Control limits: list, show, propose, approve and withdraw sets; every set is kept.",
@@ -34,6 +36,11 @@ WhyOption = Annotated[str, typer.Option("--why", help="The reason, kept with the
 CharacteristicOption = Annotated[
     str | None, typer.Option("--characteristic", help="Name as in the control plan.")
 ]
+
+
+def register(door: typer.Typer) -> None:
+    """Add the command and what stands under it to the front door."""
+    door.add_typer(app, name="baseline")
 
 
 @app.callback()

@@ -14,6 +14,7 @@ from service.context import (
     ConfigOption,
     JsonOption,
     Session,
+    WholeLines,
     WhoOption,
     open_session,
     person,
@@ -25,6 +26,7 @@ if TYPE_CHECKING:
     from spc.monitoring.life import Hand
 
 app = typer.Typer(
+    cls=WholeLines,
     no_args_is_help=False,
     invoke_without_command=True,
     help="List excursions; contain, close, reopen, comment on, merge or split one.",
@@ -49,6 +51,11 @@ class Outcome(StrEnum):
 
 NumberArgument = Annotated[int, typer.Argument(help="Number of the excursion.")]
 TextOption = Annotated[str, typer.Option("--comment", "-m", help="Words kept with the act.")]
+
+
+def register(door: typer.Typer) -> None:
+    """Add the command and what stands under it to the front door."""
+    door.add_typer(app, name="excursions")
 
 
 @app.callback()

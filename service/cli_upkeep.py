@@ -76,7 +76,7 @@ def move(
     config: ConfigOption = None,
     as_json: JsonOption = False,
 ) -> None:
-    """Copy the database to another one, for example from SQLite to PostgreSQL, and compare both."""
+    """Copy the database to another one, say from SQLite to PostgreSQL, and compare both."""
     from config.values import has_password
     from service.lock import pass_lock
 

@@ -14,6 +14,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING, Annotated, Any
 
 import typer
+from typer.core import TyperGroup
 
 if TYPE_CHECKING:
     from sqlalchemy import Engine
@@ -44,6 +45,15 @@ AsOfOption = Annotated[
         show_default=False,
     ),
 ]
+
+
+class WholeLines(TyperGroup):
+    """A group of commands whose help says the line of each one whole."""
+
+    def format_commands(self, ctx: Any, formatter: Any) -> None:
+        """List the commands without cutting what they say."""
+        with formatter.section("Commands"):
+            formatter.write_dl([(n, c.get_short_help_str(200)) for n, c in self.commands.items()])
 
 
 class CommandError(Exception):

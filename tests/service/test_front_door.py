@@ -9,6 +9,7 @@ from pathlib import Path
 
 import pytest
 import typer
+from typer.testing import CliRunner
 
 from service import cli
 
@@ -33,6 +34,38 @@ def test_every_command_of_the_contract_is_there_with_help(commands: dict[str, st
     )
     assert set(contract.split()) <= set(commands)
     assert all(len(text.split()) >= 4 for text in commands.values())
+
+
+def test_the_table_of_the_help_says_what_the_commands_say() -> None:
+    modules = {f"service.{file.stem}" for file in (ROOT / "service").glob("cli_*.py")}
+    found = {
+        name: (module, command.get_short_help_str(200))
+        for module in sorted(modules)
+        for name, command in cli.built(module).items()
+    }
+    assert found == cli.COMMANDS
+
+
+def test_the_help_reads_nothing_heavy() -> None:
+    heavy = {"numpy", "pandas", "scipy", "pyarrow", "sqlalchemy", "pydantic", "rich", "altair"}
+    script = (
+        "import sys; from service.cli import command_line\n"
+        "try: command_line()(['--help'])\n"
+        f"except SystemExit: print(sorted({heavy!r} & set(sys.modules)))"
+    )
+    command = [sys.executable, "-S", "-c", f"import sys; sys.path[:] = {sys.path!r}\n{script}"]
+    done = subprocess.run(command, cwd=ROOT, capture_output=True, text=True, check=True)
+    assert "Commands:" in done.stdout
+    assert done.stdout.splitlines()[-1] == "[]"
+
+
+def test_every_command_has_a_help_of_its_own(commands: dict[str, str]) -> None:
+    assert "--holds-from" in run("baseline", "approve", "--help").stdout
+    runner = CliRunner()
+    for name in commands:
+        done = runner.invoke(cli.command_line(), [name, "--help"])
+        assert done.exit_code == 0
+        assert f" {name} [OPTIONS]" in done.stdout
 
 
 def test_every_command_is_named_in_the_readme(commands: dict[str, str]) -> None:
