@@ -56,8 +56,11 @@ def run_night(
     wait_seconds: float = 600.0,
     stop: Callable[[], bool] = _never,
     progress: Progress = _silent,
+    tell: bool = True,
 ) -> Night:
     """Run one pass with the given clock.
+
+    Without `tell` no page is written and nothing is mailed: for proofs of what triage finds.
 
     Raises
     ------
@@ -81,6 +84,10 @@ def run_night(
             "readings": intake.readings,
         }
         account = _judge(session, as_of, document, progress)
+        if not tell:
+            with session.engine.begin() as connection:
+                passes.keep(connection, stamp, account, finished=True)
+            return Night(document, "")
         written = _write(session, as_of, account, progress)
         document["report"] = account["report"]
         document["sentence"] = account["sentence"]

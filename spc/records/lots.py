@@ -4,6 +4,8 @@ from __future__ import annotations
 
 import json
 from collections.abc import Callable, Mapping, Sequence
+from functools import lru_cache
+from types import MappingProxyType
 from typing import Any
 
 import pandas as pd
@@ -20,8 +22,14 @@ def matching_contexts(
 ) -> dict[int, dict[str, str]]:
     """Contexts whose columns pass, by id. There are few contexts; all are read."""
     rows = connection.execute(select(contexts.c.id, contexts.c.columns))
-    found = ((int(number), json.loads(text)) for number, text in rows)
-    return {number: columns for number, columns in found if wanted(columns)}
+    found = ((int(number), _columns(text)) for number, text in rows)
+    return {number: dict(columns) for number, columns in found if wanted(columns)}
+
+
+@lru_cache(maxsize=20_000)
+def _columns(text: str) -> Columns:
+    """Columns of a context. Contexts never change, and one night asks for all of them often."""
+    return MappingProxyType(json.loads(text))
 
 
 def processed_between(
