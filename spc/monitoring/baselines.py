@@ -20,7 +20,7 @@ from spc.monitoring.estimates import estimate
 from spc.monitoring.grouping import PointGroups, group_points
 from spc.monitoring.limit_sets import APPROVED, AUTOMATIC, WITHDRAWN, LimitSet, payload_text
 from spc.monitoring.serial import add_autocorrelation
-from spc.monitoring.wafers import Wafers, subset
+from spc.monitoring.wafers import Wafers, dense_streams, subset
 from spc.monitoring.work import ENGINE
 from spc.records import limits
 from spc.records.columns import Columns, order_of
@@ -83,6 +83,31 @@ def _members(payload: str) -> Any:
 
 
 @dataclass(frozen=True)
+class Decision:
+    """What is to become of the automatic limits of a stream.
+
+    withdraw : number of the set to withdraw, and `reason` why. new : the set to put in force.
+    """
+
+    stream_id: int
+    withdraw: int | None
+    reason: str
+    new: limits.NewSet | None
+
+
+def carry_out(connection: Connection, decisions: Iterable[Decision], as_of_us: int) -> list[int]:
+    """Write decisions; returns the numbers of the new sets, in their order."""
+    made = []
+    for one in decisions:
+        if one.withdraw is not None:
+            at = from_us(as_of_us)
+            limits.decide(connection, one.withdraw, WITHDRAWN, at, ENGINE, one.reason)
+        if one.new is not None:
+            made.append(limits.add(connection, one.new))
+    return made
+
+
+@dataclass(frozen=True)
 class Maker:
     """Sets the automatic limits of the streams of one characteristic."""
 
@@ -91,19 +116,16 @@ class Maker:
     wafer_radius_mm: float
     as_of_us: int
 
-    def renew(
+    def decisions(
         self, wafers: Wafers, groups: PointGroups, ids: IntArray, streams: frozenset[int]
-    ) -> int:
-        """Set, keep or withdraw the automatic limits of streams given with all their points.
-
-        Returns the number of streams whose limits are new.
-        """
+    ) -> list[Decision]:
+        """Which automatic limits to set or withdraw, of streams given with all their points."""
         rows = limits.of_streams(self.connection, streams, (AUTOMATIC,))
         old = {row.stream_id: row for row in rows}
         drafts = self._drafts(wafers, groups, ids, streams)
         read = np.bincount(wafers.wafer, minlength=len(wafers.table)) > 0
         bare = set(ids[wafers.table["stream"][~read]].tolist())
-        made = 0
+        found = []
         for stream in sorted(streams):
             draft, before = drafts.get(stream), old.get(stream)
             if before is not None and draft is not None:
@@ -111,19 +133,17 @@ class Maker:
                     continue
                 if stream in bare and _members(before.payload) == _members(draft.payload):
                     continue  # the same points, whose site values were since kept as sums alone
+            reason = ""
             if before is not None:
                 reason = "its first points are not what they were: readings came late or changed"
                 if draft is not None and draft.n_points != before.n_points:
                     reason = f"the plan asks for {draft.n_points} baseline points"
                 if draft is None:
                     reason = "the stream has fewer points than a baseline needs"
-                limits.decide(
-                    self.connection, before.id, WITHDRAWN, from_us(self.as_of_us), ENGINE, reason
-                )
-            if draft is not None:
-                limits.add(self.connection, draft)
-                made += 1
-        return made
+            if before is not None or draft is not None:
+                withdraw = None if before is None else int(before.id)
+                found.append(Decision(stream, withdraw, reason, draft))
+        return found
 
     def _drafts(
         self, wafers: Wafers, groups: PointGroups, ids: IntArray, streams: frozenset[int]
@@ -165,17 +185,7 @@ class Maker:
 
         `chosen` marks the points of the baselines.
         """
-        part = subset(wafers, chosen[groups.of_wafer])
-        codes, dense = np.unique(part.table["stream"], return_inverse=True)
-        part = Wafers(
-            tuple(wafers.keys[c] for c in codes),
-            part.table.having(stream=dense.astype(np.int64)),
-            part.wafer,
-            part.place,
-            part.value,
-            part.places,
-            part.notes,
-        )
+        part, codes = dense_streams(subset(wafers, chosen[groups.of_wafer]))
         base = Baseline(
             part,
             group_points(part.table, self.characteristic.point),

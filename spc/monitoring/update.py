@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Collection, Sequence
 from dataclasses import dataclass, field
 
 import numpy as np
@@ -22,12 +23,13 @@ from spc.monitoring.points import (
     with_limits,
 )
 from spc.monitoring.wafer_statistics import WaferStatistics, without_flyers
-from spc.monitoring.wafers import Stores, Wafers, build_wafers, subset
+from spc.monitoring.wafers import Stores, Wafers, build_wafers, dense_streams, subset
 from spc.monitoring.work import Work
+from spc.monitoring.writer import Writer
 from spc.records import series
-from spc.records.columns import Columns, joined, order_of, row_codes, text
-from spc.records.contexts import ContextStore
-from spc.records.measurements import LayoutStore, Marker, log_rows, measurement_rows
+from spc.records.columns import Columns, joined, of_rows, order_of, row_codes, text
+from spc.records.contexts import chunks
+from spc.records.measurements import WHOLE_TABLE, LayoutStore, Marker, log_rows, measurement_rows
 from spc.records.tables import points as points_table
 from spc.records.tables import wafer_results as wafer_results_table
 
@@ -73,17 +75,25 @@ class _Changes:
 class Update:
     """One pass over the characteristics, in one transaction."""
 
-    def __init__(self, connection: Connection, bay: Bay, now: Marker) -> None:
+    def __init__(
+        self,
+        connection: Connection,
+        bay: Bay,
+        now: Marker,
+        writer: Writer | None = None,
+    ) -> None:
+        """`writer` takes what is found; without one it is written on the same connection."""
         self._connection = connection
         self._radius = bay.settings.bay.wafer_radius_mm
         self._now = now
-        self._stores = Stores(ContextStore(connection), LayoutStore(connection))
+        self._writer = writer or Writer(connection)
+        self._stores = Stores(self._writer.contexts, LayoutStore(connection))
 
     def run(self, one: Characteristic, work: Work) -> Updated:
         """Bring one characteristic up to date."""
-        known = series.stream_ids(self._connection, one.name)
         if work.everything:
-            series.clear(self._connection, known.values())
+            known = series.stream_ids(self._connection, one.name)
+            self._writer.clear(known.values())
         lots = None if work.everything else sorted(work.lots)
         wafers, ids = self.read(one, lots)
         known = series.stream_ids(self._connection, one.name)
@@ -97,10 +107,45 @@ class Update:
         self._make(one, _needed(wafers, ids, changes), ids, changes, result)
         return result
 
+    def run_streams(
+        self, one: Characteristic, keys: Collection[str], lots: Sequence[str]
+    ) -> Updated:
+        """Make everything of some streams anew, as `run` does of all of them.
+
+        `keys` are their contexts (JSON); `lots` has every lot that one of their wafers is in.
+        """
+        known = series.stream_ids(self._connection, one.name)
+        self._writer.clear(known[key] for key in keys if key in known)
+        if not lots:
+            return Updated()
+        blocks = [[str(lot) for lot in part] for part in chunks(sorted(lots), WHOLE_TABLE)]
+        rows = [self._rows(one, block) for block in blocks]
+        frame, log = (joined(tables) for tables in zip(*rows, strict=True))
+        wafers = build_wafers(frame, log, self._stores, one)
+        mine = np.array([key in keys for key in wafers.keys], bool)
+        wafers, _ = dense_streams(subset(wafers, mine[wafers.table["stream"]]))
+        result = Updated(notes=list(wafers.notes))
+        if len(wafers.table):
+            ids = self._ids(one, wafers)
+            everything = Work(everything=True)
+            changes = self._changes(one, wafers, ids, of_rows([], series.RESULT), everything)
+            self._make(one, wafers, ids, changes, result)
+        return result
+
     # ---- reading ---------------------------------------------------------------------------
 
     def read(self, one: Characteristic, lots: list[str] | None) -> tuple[Wafers, IntArray]:
         """Wafers of lots (None: all), and the id of each of their streams."""
+        frame, log = self._rows(one, lots)
+        wafers = build_wafers(frame, log, self._stores, one)
+        return wafers, self._ids(one, wafers)
+
+    def _ids(self, one: Characteristic, wafers: Wafers) -> IntArray:
+        known = self._writer.stream_ids(one.name, wafers.keys)
+        return np.array([known[key] for key in wafers.keys], np.int64)
+
+    def _rows(self, one: Characteristic, lots: list[str] | None) -> tuple[Columns, Columns]:
+        """Measurements of lots, and the process log that goes with them."""
         layer = one.where.get("layer")
         frame = measurement_rows(
             self._connection,
@@ -118,13 +163,7 @@ class Update:
             layers=None if "" in known_layers else sorted(known_layers | {""}),
             parameters=one.parameters,
         )
-        wafers = build_wafers(frame, log, self._stores, one)
-        known = series.stream_ids(self._connection, one.name)
-        new = [key for key in wafers.keys if key not in known]
-        if new:
-            series.add_streams(self._connection, one.name, new)
-            known = series.stream_ids(self._connection, one.name)
-        return wafers, np.array([known[key] for key in wafers.keys], np.int64)
+        return frame, log
 
     def _old_results(self, known: dict[str, int], work: Work) -> Columns:
         ids = [] if work.everything else list(known.values())
@@ -159,11 +198,12 @@ class Update:
         result: Updated,
     ) -> None:
         groups = group_points(wafers.table, one.point)
-        made = baselines.Maker(self._connection, one, self._radius, self._now.as_of_us)
-        result.new_baselines = made.renew(wafers, groups, ids, changes.anew)
+        maker = baselines.Maker(self._connection, one, self._radius, self._now.as_of_us)
+        decisions = maker.decisions(wafers, groups, ids, changes.anew)
+        result.new_baselines = self._writer.decide(decisions, self._now.as_of_us)
         stream_id = ids[groups.table["stream"]]
         concerned = set(stream_id.tolist()) | changes.anew
-        sets = baselines.in_force(self._connection, concerned)
+        sets = self._writer.in_force(concerned)
         assigned = assignment(groups, sets, assign_sets(stream_id, groups.table["at_us"], sets))
         found = wafer_statistics(wafers, groups, assigned, one, self._radius)
         values = point_values(wafers, groups, found, one)
@@ -174,13 +214,13 @@ class Update:
         points = _point_rows(groups, stream_id, with_limits(values, assigned, scores))
         self._clear(one, changes)
         points = self._signal(one, points, sets, changes, result)
-        series.insert(self._connection, points_table, points)
+        self._writer.insert(points_table, points)
         results = _wafer_rows(one, wafers, ids, found)
-        series.insert(self._connection, wafer_results_table, results)
+        self._writer.insert(wafer_results_table, results)
         result.notes += found.notes
 
     def _clear(self, one: Characteristic, changes: _Changes) -> None:
-        series.clear(self._connection, changes.anew)
+        self._writer.clear(changes.anew)
         rest = changes.groups.take(~np.isin(changes.groups["stream_id"], list(changes.anew)))
         series.delete_lots(self._connection, rest, one.charted)
 

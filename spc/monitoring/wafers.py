@@ -6,7 +6,7 @@ What depends on a baseline (the site signature, the map reference) is not here: 
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -228,3 +228,11 @@ def subset(wafers: Wafers, wanted: NDArray[np.bool_]) -> Wafers:
         wafers.places,
         wafers.notes,
     )
+
+
+def dense_streams(wafers: Wafers) -> tuple[Wafers, IntArray]:
+    """The same with the streams that have wafers alone, and their codes in what was given."""
+    codes, dense = np.unique(wafers.table["stream"], return_inverse=True)
+    keys = tuple(wafers.keys[code] for code in codes)
+    table = wafers.table.having(stream=dense.astype(np.int64))
+    return replace(wafers, keys=keys, table=table), codes.astype(np.int64)
