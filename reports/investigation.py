@@ -155,6 +155,9 @@ def _facts(found: Excursion, clock: LocalClock) -> list[tuple[str, str]]:
     facts.append((text("fact.span"), clock.span(onset.earliest, onset.latest)))
     if onset.lot:
         facts.append((text("fact.lot"), shown(onset.lot)))
+    if found.end is not None:
+        name = "fact.end_silence" if found.pattern == "silence" else "fact.end"
+        facts.append((text(name), clock.moment(found.end)))
     if found.p_chance is not None:
         facts.append((text("fact.chance"), probability(found.p_chance)))
     risk = [lot.p_out_of_spec for lot in found.lots_at_risk if lot.p_out_of_spec is not None]

@@ -124,7 +124,8 @@ class Forecast:
 
 @dataclass(frozen=True)
 class Excursion:
-    """One thing that happened. `p_chance`: probability that noise alone gives as much."""
+    """One thing that happened. `p_chance`: probability that noise alone gives as much; `end`: when
+    it was last seen (silence: when readings came again), None while it lasts."""
 
     id: int
     status: Status
@@ -140,6 +141,7 @@ class Excursion:
     events: tuple[BayEvent, ...] = ()
     forecast: Forecast | None = None
     p_chance: float | None = None
+    end: datetime | None = None
 
     @property
     def n_lots_measured(self) -> int:

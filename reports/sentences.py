@@ -182,8 +182,22 @@ def moved(excursion: Excursion, clock: LocalClock) -> str:
 
 def sentence(excursion: Excursion, clock: LocalClock) -> str:
     """The finding in one sentence: what, where, how much, since when, how sure, why, which lots."""
-    parts = [moved(excursion, clock), sureness(excursion), cause(excursion), lots(excursion)]
+    parts = [
+        moved(excursion, clock),
+        ended(excursion, clock),
+        sureness(excursion),
+        cause(excursion),
+        lots(excursion),
+    ]
     return text("sentence.end", body=text("join.semicolon").join(part for part in parts if part))
+
+
+def ended(excursion: Excursion, clock: LocalClock) -> str:
+    """That it is over, and since when; empty while it lasts."""
+    if excursion.end is None:
+        return ""
+    key = "ended.silence" if excursion.pattern == "silence" else "ended.moved"
+    return text(key, end=clock.moment(excursion.end))
 
 
 def headline(excursion: Excursion, clock: LocalClock) -> str:

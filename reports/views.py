@@ -48,6 +48,7 @@ def excursion_of(document: Mapping[str, Any]) -> model.Excursion:
         events=tuple(_event(one) for one in document["events"]),
         forecast=None if forecast is None else _forecast(forecast),
         p_chance=document.get("p_chance"),
+        end=_maybe(document.get("end")),
     )
 
 

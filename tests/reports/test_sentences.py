@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import replace
+from datetime import timedelta
 from typing import Any
 
 import pytest
@@ -39,6 +40,15 @@ def test_a_shift_says_everything_in_one_sentence() -> None:
         assert part in said
     assert said.endswith(".")
     assert said.count(". ") == 0
+
+
+def test_what_is_over_says_so() -> None:
+    last = samples.AS_OF - timedelta(hours=12)
+    said = plain(sentence(samples.excursion(end=last), CLOCK))
+    assert f"over by now: last seen {plain(CLOCK.moment(last))}" in said
+    silent = plain(sentence(samples.excursion(pattern="silence", magnitude=None, end=last), CLOCK))
+    assert "readings came again by" in silent
+    assert "over by now" not in plain(sentence(samples.excursion(), CLOCK))
 
 
 def test_the_headline_reads_as_in_a_subject() -> None:
