@@ -8,27 +8,20 @@ It is tried again when its content changes, or when the feeds of the configurati
 
 from __future__ import annotations
 
-from collections.abc import Callable, Generator, Sequence
-from concurrent.futures import Future, ThreadPoolExecutor
-from contextlib import ExitStack, closing
+from collections.abc import Callable
+from contextlib import closing
 from dataclasses import dataclass
 from datetime import datetime
 
 from sqlalchemy import Connection, Engine
 
 from config.load import Bay
-from ingest.drops import Drop, NotSettledError, find_drops, read_drop, settled
+from ingest.drops import Drop, find_drops, settled
 from ingest.feeds import feeds_of
-from ingest.prepare import Rulebook
-from ingest.report import FileReport, IngestReport, LateFeed, Reason
-from ingest.store import Fetched, Store
-from ingest.units import planned_units
+from ingest.report import FileReport, IngestReport, LateFeed, waiting
 from spc.records import ledger
 from spc.records.sessions import reading
 from spc.records.stamps import to_us
-
-# Larger files are not read ahead: two of the largest at once would need too much memory.
-READ_AHEAD_BYTES = 16 * 1024 * 1024
 
 Progress = Callable[[int, int, str], None]
 
@@ -62,16 +55,34 @@ def take_in(
         When the database fails; the file in hand is not in, those before it are.
     """
     clock_us = to_us(clock)
-    now_ns = to_us(now or clock) * 1000
+    found = _sorted_out(engine, bay, to_us(now or clock) * 1000)
+    stopped = _store_all(engine, bay, clock_us, found, stop, progress) if found.todo else False
+    with reading(engine) as connection:
+        late = late_feeds(connection, bay, clock_us)
+    return IngestReport(
+        files=tuple(sorted(found.reports, key=lambda one: one.path)),
+        late=late,
+        stopped=stopped,
+        unchanged=found.unchanged,
+    )
+
+
+@dataclass
+class _Sorted:
+    """The files of the drop folder: to be taken in, reported on, and how many are in already."""
+
+    todo: list[Drop]
+    reports: list[FileReport]
+    unchanged: int = 0
+
+
+def _sorted_out(engine: Engine, bay: Bay, now_ns: int) -> _Sorted:
     settings = bay.settings
-    feeds = feeds_of(settings)
     found = find_drops(bay.path(settings.drops.folder))
     with reading(engine) as connection:
         seen = ledger.sightings_of(connection)
-        stale = ledger.stale_hashes(connection, feeds.digest)
-        units = ledger.parameter_units(connection)
-    todo, unchanged = [], 0
-    waiting = [_unreadable(path, why) for path, why in found.unreadable]
+        stale = ledger.stale_hashes(connection, feeds_of(settings).digest)
+    result = _Sorted([], [_unreadable(path, why) for path, why in found.unreadable])
     for drop in found.drops:
         known = seen.get(drop.path)
         if (
@@ -79,95 +90,42 @@ def take_in(
             and (known.bytes, known.modified_ns) == (drop.size, drop.modified_ns)
             and known.content_hash not in stale
         ):
-            unchanged += 1
+            result.unchanged += 1
         elif settled(drop, now_ns, settings.drops.settle_seconds):
-            todo.append(drop)
+            result.todo.append(drop)
         else:
-            waiting.append(_waiting(drop, "was changed just now and may still be written"))
-    rulebook = Rulebook(settings, planned_units(bay.plan), units)
-    store = Store(engine, clock_us, feeds, rulebook)
-    reports: list[FileReport] = []
-    stopped = False
-    with closing(_in_hand(todo, store)) as in_hand:
-        for done, drop in enumerate(todo):
+            result.reports.append(
+                waiting(drop.path, "was changed just now and may still be written")
+            )
+    return result
+
+
+def _store_all(
+    engine: Engine,
+    bay: Bay,
+    clock_us: int,
+    found: _Sorted,
+    stop: Callable[[], bool],
+    progress: Progress | None,
+) -> bool:
+    """Take in the files to do; True when asked to stop before the last."""
+    # A pass with nothing to take in does without these imports.
+    from ingest.in_hand import reports_of, store_of
+
+    with closing(reports_of(found.todo, store_of(engine, bay, clock_us), progress)) as reports:
+        for _ in found.todo:
             if stop():
-                stopped = True
-                break
-            if progress is not None:
-                progress(done, len(todo), drop.path)
-            claimed = next(in_hand)
-            report = claimed.waiting
-            if claimed.fetched is not None:
-                report = store.store(claimed.fetched)
+                return True
+            report = next(reports)
             if report is None:
-                unchanged += 1
+                found.unchanged += 1
             else:
-                reports.append(report)
-    with reading(engine) as connection:
-        late = late_feeds(connection, bay, clock_us)
-    return IngestReport(
-        files=tuple(sorted([*reports, *waiting], key=lambda one: one.path)),
-        late=late,
-        stopped=stopped,
-        unchanged=unchanged,
-    )
-
-
-@dataclass(frozen=True)
-class _Claimed:
-    """A file in hand: read, or the reason why it has to wait. `release` gives it back."""
-
-    fetched: Fetched | None
-    waiting: FileReport | None
-    release: Callable[[], None]
-
-
-def _fetch(drop: Drop, store: Store) -> _Claimed:
-    """Claim, read and prepare one file; needs no transaction and may run beside the storing."""
-    with ExitStack() as stack:
-        if not stack.enter_context(ledger.claimed(store.engine, drop.path)):
-            return _Claimed(None, _waiting(drop, "another worker has it in hand"), _nothing)
-        try:
-            content = read_drop(drop, store.rulebook.settings.drops.max_file_bytes)
-        except NotSettledError as error:
-            return _Claimed(None, _waiting(drop, str(error)), _nothing)
-        with reading(store.engine) as connection:
-            entry = ledger.entry_of(connection, content.digest)
-        prepared = store.prepare(drop, content) if store.deserves_a_try(entry) else None
-        return _Claimed(Fetched(drop, content, prepared), None, stack.pop_all().close)
-    raise AssertionError  # pragma: no cover - the stack swallows nothing
-
-
-def _nothing() -> None:
-    """Release of what was never claimed."""
-
-
-def _in_hand(todo: Sequence[Drop], store: Store) -> Generator[_Claimed, None, None]:
-    """Each file in turn; while one is stored the next is read already, if it is not too large."""
-    with ThreadPoolExecutor(1, thread_name_prefix="ingest") as pool:
-        ahead: Future[_Claimed] | None = None
-        try:
-            for i, drop in enumerate(todo):
-                current = ahead.result() if ahead is not None else _fetch(drop, store)
-                ahead = None
-                if i + 1 < len(todo) and todo[i + 1].size <= READ_AHEAD_BYTES:
-                    ahead = pool.submit(_fetch, todo[i + 1], store)
-                try:
-                    yield current
-                finally:
-                    current.release()
-        finally:
-            if ahead is not None:
-                ahead.result().release()
+                found.reports.append(report)
+    return False
 
 
 def _unreadable(folder: str, why: str) -> FileReport:
-    reason = Reason(None, None, None, f"the folder cannot be read: {why}; mend its permissions")
-    return FileReport(folder + "/", "waiting", reasons=(reason,))
-
-
-def _waiting(drop: Drop, why: str) -> FileReport:
-    return FileReport(drop.path, "waiting", reasons=(Reason(None, None, None, why),))
+    return waiting(folder + "/", f"the folder cannot be read: {why}; mend its permissions")
 
 
 def late_feeds(connection: Connection, bay: Bay, clock_us: int) -> tuple[LateFeed, ...]:

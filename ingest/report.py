@@ -91,6 +91,11 @@ class FileReport:
         }
 
 
+def waiting(path: str, why: str) -> FileReport:
+    """The report of a file, or a folder, left for the next pass."""
+    return FileReport(path, "waiting", reasons=(Reason(None, None, None, why),))
+
+
 @dataclass(frozen=True)
 class LateFeed:
     """A feed that should have brought something by now. `last_us` is None when it never did."""

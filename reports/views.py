@@ -122,26 +122,32 @@ class Reader:
         return findings.as_contract(excursion, self.bay.settings.bay.zone)
 
     def card(self, excursion: Excursion, change: str) -> model.ExcursionCard:
-        """An excursion with its main chart."""
-        from reports.views_maps import map_of
-
+        """An excursion, with its pictures if it opened or moved on tonight."""
         view = excursion_of(self.document(excursion))
         plans = [self.bay.plan.named(s.characteristic) for s in view.streams]
         known = [plan for plan in plans if plan is not None]
         owners = dict.fromkeys(owner for plan in known for owner in plan.owners)
-        # What is only watched is listed briefly: no picture, no plan.
+        # What is only watched is listed briefly: no picture, no plan. What has not changed is one
+        # line of the page, so that a quiet night is not slowed down by what it draws from.
         act = view.tier == "act"
-        lead = self.lead(view) if act else None
-        is_map = act and view.pattern in ("map", "spread")
+        draw = act and change != "unchanged"
+        lead = self.lead(view) if draw else None
         return model.ExcursionCard(
             excursion=view,
             chart=None if lead is None else self.chart(lead, view),
-            wafer_map=map_of(self, view) if is_map else None,
+            wafer_map=self._map(view) if draw else None,
             action_plan=self.bay.action_plan(known[0]) if act and known else None,
             owners=tuple(owners),
             href=investigation_href(excursion.id) if excursion.tier == "act" else None,
             change=change,  # type: ignore[arg-type]
         )
+
+    def _map(self, view: model.Excursion) -> model.WaferMapPicture | None:
+        if view.pattern not in ("map", "spread"):
+            return None
+        from reports.views_maps import map_of
+
+        return map_of(self, view)
 
     def lead(self, view: model.Excursion) -> model.ExcursionStream | None:
         """The stream that shows an excursion best: with the most rules, a mean before others."""

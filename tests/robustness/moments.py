@@ -36,7 +36,9 @@ HEAVY = (
     "reports.night",
     "reports.smtp",
     "reports.views_investigation",
+    "reports.views_maps",
     "reports.views_night",
+    "ingest.in_hand",
     "ingest.load",
 )
 
