@@ -8,6 +8,7 @@ naming a file that holds it).
 
 from __future__ import annotations
 
+import os
 import re
 from pathlib import Path
 from typing import Annotated, Literal
@@ -273,24 +274,59 @@ class PlausibleSettings(Strict):
 
 
 class ComputeSettings(Strict):
-    """Where large re-evaluations run. Read and checked; the distributed engine is not built yet."""
+    """Where `yellowbay reevaluate` runs; see docs/distributed.md. The nightly pass needs none."""
 
     scheduler: str | None = Field(
-        default=None, description="tcp://host:port of a Dask scheduler; without it this machine."
+        default=None,
+        description="tcp://host:port or tls://host:port of a Dask scheduler; without it this "
+        "machine. Needs PostgreSQL and `pip install 'yellowbay[fab]'`.",
     )
     workers: Annotated[int, Field(ge=0)] = Field(
         default=0, description="Processes on this machine; 0 for one a core."
     )
+    partition_measurements: int = Field(
+        default=20_000, ge=1, description="Wafer measurements a partition, about; 1 GB at most."
+    )
+    ca_file: Path | None = Field(default=None, description="tls:// only: whom to trust.")
+    cert_file: Path | None = Field(default=None, description="tls:// only: our certificate.")
+    key_file: Path | None = Field(default=None, description="tls:// only: its key.")
+
+    @field_validator("scheduler")
+    @classmethod
+    def _address(cls, value: str | None) -> str | None:
+        if value is not None and not re.fullmatch(r"(tcp|tls)://[^\s/@]+:\d{1,5}", value):
+            raise ValueError("no address of a scheduler; write tcp://host:8786 or tls://host:8786")
+        return value
+
+    @model_validator(mode="after")
+    def _files_go_with_tls(self) -> ComputeSettings:
+        given = [one is not None for one in (self.ca_file, self.cert_file, self.key_file)]
+        tls = (self.scheduler or "").startswith("tls://")
+        if tls and not all(given):
+            raise ValueError("tls:// needs three files; set ca_file, cert_file and key_file")
+        if not tls and any(given):
+            raise ValueError("files for TLS without tls://; write scheduler = 'tls://host:8786'")
+        return self
 
 
 class RetentionSettings(Strict):
-    """What is kept and for how long: everything. Read and checked; nothing is taken away yet."""
+    """What is kept and for how long. Without these settings everything is kept where it is."""
 
     archive_drops_after_days: float | None = Field(
-        default=None, gt=0, description="Move older drop files into archive/YYYY-MM."
+        default=None,
+        gt=0,
+        description="Drops taken in longer ago are packed into archive/YYYY-MM. The service then "
+        "needs the right to write in the drop folder.",
     )
+    archive: Path = Field(default=Path("archive"), description="Folder of the packed drops.")
     aggregate_sites_after_days: float | None = Field(
-        default=None, gt=0, description="Keep only the sums of older site readings."
+        default=None,
+        gt=0,
+        description="A month that ended longer ago keeps the sums and statistics of its wafers, "
+        "and the capability they gave, but not the value of each site. There is no way back.",
+    )
+    minutes_a_night: float = Field(
+        default=10.0, gt=0, le=600, description="Longest time that a pass spends on both."
     )
 
 
@@ -323,6 +359,27 @@ class Settings(Strict):
         if twice:
             raise ValueError(f"two feeds are named {twice[0]!r}; give each its own name")
         return value
+
+    @model_validator(mode="after")
+    def _retention_fits(self) -> Settings:
+        drops, archive = (
+            os.path.normpath(one) for one in (self.drops.folder, self.retention.archive)
+        )
+        if os.path.commonpath([os.path.abspath(drops), os.path.abspath(archive)]) == (
+            os.path.abspath(drops)
+        ):
+            raise ValueError(
+                "retention.archive lies in drops.folder, and would be taken in again; "
+                "name a folder beside it"
+            )
+        days = self.retention.aggregate_sites_after_days
+        if days is not None and days < self.nightly.keep_history_days:
+            raise ValueError(
+                "retention.aggregate_sites_after_days is shorter than nightly.keep_history_days, "
+                "and would take away what triage looks back on; raise it to at least "
+                f"{self.nightly.keep_history_days:g}"
+            )
+        return self
 
     @property
     def plausibility(self) -> dict[str, PlausibleSettings]:

@@ -22,7 +22,7 @@ from spc.monitoring.limit_sets import APPROVED, AUTOMATIC, WITHDRAWN, LimitSet, 
 from spc.monitoring.serial import add_autocorrelation
 from spc.monitoring.wafers import Wafers, dense_streams, subset
 from spc.monitoring.work import ENGINE
-from spc.records import limits
+from spc.records import aggregation, limits
 from spc.records.columns import Columns, order_of
 from spc.records.stamps import from_us
 
@@ -125,6 +125,9 @@ class Maker:
         drafts = self._drafts(wafers, groups, ids, streams)
         read = np.bincount(wafers.wafer, minlength=len(wafers.table)) > 0
         bare = set(ids[wafers.table["stream"][~read]].tolist())
+        one = self.characteristic
+        if bare and aggregation.kept_units(self.connection, one.name) - {one.unit}:
+            bare = set()  # limits in the unit of then would be wrong now, by a factor
         found = []
         for stream in sorted(streams):
             draft, before = drafts.get(stream), old.get(stream)

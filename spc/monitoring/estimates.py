@@ -43,6 +43,7 @@ def estimate(base: Baseline) -> list[dict[str, Any]]:
     """Payload of each stream from the points of its baseline."""
     n = base.n_streams
     draft = Draft([[] for _ in range(n)], [{} for _ in range(n)], [[] for _ in range(n)])
+    _note_wafers_without_sites(base, draft)
     keep = np.ones(base.groups.n, bool)
     if base.characteristic.is_overlay:
         found = overlay_statistics(base.wafers)
@@ -53,6 +54,18 @@ def estimate(base: Baseline) -> list[dict[str, Any]]:
     add_spreads(base, draft, found, keep)
     draft.maps = map_references(base, draft, without_flyers(base.wafers, found), keep)
     return _payloads(base, draft)
+
+
+def _note_wafers_without_sites(base: Baseline, draft: Draft) -> None:
+    """Say of each stream how many wafers have sums alone; their pattern is not taken out."""
+    stream = base.wafers.table["stream"]
+    bare = np.bincount(base.wafers.wafer, minlength=len(stream)) == 0
+    count = np.bincount(stream[bare], minlength=base.n_streams)
+    for s in np.flatnonzero(count).tolist():
+        draft.notes[s].append(
+            f"{count[s]} wafers have no site values any more (retention): they count in the mean, "
+            "not in the statistics of the sites"
+        )
 
 
 def _scalar(base: Baseline, draft: Draft) -> tuple[BoolArray, WaferStatistics]:

@@ -15,6 +15,15 @@ from sqlalchemy import Connection
 
 from config.control_plan import Characteristic
 from config.load import Bay
+from spc.monitoring.kept_studies import (
+    READ,
+    SUMS,
+    WHOLE,
+    chosen,
+    notes_of,
+    tool_key,
+    wafers_of,
+)
 from spc.monitoring.review_rows import Ask, UnitStudy, empty_row, study_units, with_stability
 from spc.monitoring.review_sites import LogBook, Readings, Window, read_months
 from spc.monitoring.review_stability import (
@@ -28,7 +37,9 @@ from spc.monitoring.review_stability import (
 )
 from spc.monitoring.review_units import units_of
 from spc.monitoring.wafers import Stores
+from spc.records import aggregation
 from spc.records import review as records
+from spc.records.aggregation import KeptStudy, StudyKey
 from spc.records.contexts import ContextStore
 from spc.records.measurements import LayoutStore
 from spc.records.stamps import to_us
@@ -130,14 +141,18 @@ def review_month(
     tools: list[ReviewUnit] = []
     notes: list[str] = []
     plan = bay.plan.characteristic
+    # With the gauge's share taken out the figures are others than those that were kept.
+    kept = {} if gauge_out else aggregation.studies_of(connection, window.months)
     book = LogBook(connection, window, tuple({p for one in plan for p in one.parameters}))
     for done, one in enumerate(plan):
         progress(one.name, done, len(plan))
         readings = read_months(connection, stores, one, book)
-        room = _Room(connection, one, window, readings, rung, timed, Ask.of(one, gauge_out))
+        ask = Ask.of(one, gauge_out)
+        room = _Room(connection, one, window, readings, rung, timed, ask, kept)
         units += room.units()
         tools += room.tools()
         notes += readings.notes
+        notes += notes_of(one, room.states, kept, bay)
         if gauge_out and not one.gauge_sd:
             notes.append(f"{one.name}: the plan has no gauge_sd, so the gauge is still in it")
     progress("done", len(plan), len(plan))
@@ -165,8 +180,11 @@ class _Room:
         rung: Mapping[StreamMonth, Rung],
         timed: list[TimedExcursion],
         ask: Ask,
+        kept: Mapping[StudyKey, KeptStudy],
     ) -> None:
         self._one, self._window, self._readings, self._ask = one, window, readings, ask
+        self._kept = kept
+        self.states: dict[str, str] = {}  # of months without site values, see `kept_studies`
         known = records.streams_of(connection, one.name, window.as_of_us)
         self._ids = [known.get(key) for key in readings.keys]
         self._rung = rung
@@ -176,9 +194,12 @@ class _Room:
         """The whole and every stream, in every month."""
         readings, months = self._readings, len(self._window.months)
         every = list(range(len(readings.keys)))
-        whole = self._studies(readings, readings.month)
-        streams = self._studies(readings, readings.stream * months + readings.month)
-        out = [self._unit({}, every, lambda m: whole.get(m))]
+        labels = readings.stream * months + readings.month
+        whole = self._studies(readings, readings.month, lambda m: (WHOLE, m))
+        streams = self._studies(
+            readings, labels, lambda label: (readings.keys[label // months], label % months)
+        )
+        out = [self._unit({}, every, whole.get)]
         for s in every:
             found = {m: streams[s * months + m] for m in range(months) if s * months + m in streams}
             context = json.loads(readings.keys[s])
@@ -197,7 +218,7 @@ class _Room:
         code = np.array([names.index(c["tool"]) for c in contexts], np.int64)
         last = len(self._window.months) - 1
         now = narrowed(self._readings, self._readings.month == last)
-        found = self._studies(now, code[now.stream])
+        found = self._studies(now, code[now.stream], lambda i: (tool_key(names[i]), last))
         out = []
         for i, name in enumerate(names):
             mine = np.flatnonzero(code == i).tolist()
@@ -205,24 +226,42 @@ class _Room:
             out.append(self._unit({"tool": name}, mine, of_month.get))
         return out
 
-    def _studies(self, readings: Readings, labels: IntArray) -> dict[int, UnitStudy]:
+    def _studies(
+        self, readings: Readings, labels: IntArray, meaning: Callable[[int], tuple[str, int]]
+    ) -> dict[int, tuple[UnitStudy | None, str]]:
+        """Study of each label, and where its figures come from.
+
+        `meaning` gives the context (JSON) and the number of the month of a label.
+        """
         if not len(labels):
             return {}
         units, behind = units_of(labels)
-        return dict(zip(behind.tolist(), study_units(readings, units, self._ask), strict=True))
+        counts = wafers_of(readings, labels)
+        out = {}
+        studies = study_units(readings, units, self._ask)
+        for label, study in zip(behind.tolist(), studies, strict=True):
+            context, m = meaning(label)
+            key = (self._one.name, context, self._window.months[m])
+            out[label] = chosen(self._kept, key, self._one, counts[label], study)
+            state = out[label][1]
+            if state == SUMS or (state != READ and context == WHOLE):
+                # Of one month: that some figures are from sums is said before all else.
+                self.states[key[2]] = SUMS if SUMS in (state, self.states.get(key[2])) else state
+        return out
 
     def _unit(
         self,
         context: dict[str, str],
         streams: list[int],
-        of_month: Callable[[int], UnitStudy | None],
+        of_month: Callable[[int], tuple[UnitStudy | None, str] | None],
     ) -> ReviewUnit:
         rows: dict[str, dict[str, Any]] = {}
         study, verdict = None, Stability(None)
         for m, month in enumerate(self._window.months):
-            study = of_month(m)
+            study, source = of_month(m) or (None, READ)
             verdict = self._stability(streams, m, bool(context), study is not None)
-            rows[month] = _row(self._one, context, month, study, verdict)
+            row = _row(self._one, context, month, study, verdict)
+            rows[month] = row | {"site_values": source}
         return ReviewUnit(self._one, context, rows, study, verdict)
 
     def _stability(self, streams: list[int], m: int, narrow: bool, known: bool) -> Stability:

@@ -11,7 +11,7 @@ from sqlalchemy import Connection
 
 from config.control_plan import Characteristic
 from config.load import Bay
-from spc.monitoring import baselines, signals
+from spc.monitoring import baselines, kept, signals
 from spc.monitoring.grouping import PointGroups, group_points
 from spc.monitoring.limit_sets import LimitSet
 from spc.monitoring.point_limits import assign_sets
@@ -206,10 +206,14 @@ class Update:
         sets = self._writer.in_force(concerned)
         assigned = assignment(groups, sets, assign_sets(stream_id, groups.table["at_us"], sets))
         found = wafer_statistics(wafers, groups, assigned, one, self._radius)
+        kept.restore(self._connection, wafers, one, (groups, assigned), found)
         values = point_values(wafers, groups, found, one)
         scores = np.full(len(values), np.nan)
         if "map-distance" in one.charted:
-            distances, z = map_distances(without_flyers(wafers, found), groups, assigned)
+            made = map_distances(without_flyers(wafers, found), groups, assigned)
+            distances, z = kept.with_kept_distances(
+                self._connection, wafers, stream_id, (groups, assigned), made
+            )
             values, scores = joined([values, distances]), np.append(scores, z)
         points = _point_rows(groups, stream_id, with_limits(values, assigned, scores))
         self._clear(one, changes)

@@ -104,7 +104,12 @@ def build_wafers(
     wafer, place, values = _by_axis(wafer, place, value, axis, characteristic.is_overlay)
     bare = _bare_sums(short, of_row, factor[rows], len(table))
     table = _with_sums(table, wafer, values, bare, characteristic)
-    return Wafers(placed.keys, table, wafer, place, values, sites.places, notes)
+    found = Wafers(placed.keys, table, wafer, place, values, sites.places, notes)
+    if not (frame["site_values"] == None).any():  # noqa: E711
+        return found
+    from spc.monitoring.kept import with_kept_sums  # which knows wafers, and so this room
+
+    return with_kept_sums(stores.layouts.connection, found, characteristic)
 
 
 def _factors(frame: Columns, c: Characteristic) -> tuple[FloatArray, tuple[str, ...]]:

@@ -16,8 +16,8 @@ from typing import Any
 
 from sqlalchemy import Connection, Engine, Table, func, insert, select
 
+from spc.records.retention_tables import metadata  # of all tables, these included
 from spc.records.sessions import open_database, reading
-from spc.records.tables import metadata
 
 _CHUNK = 5000
 Progress = Callable[[str, int, int], None]

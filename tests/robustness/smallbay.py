@@ -25,7 +25,7 @@ from typing import Any
 import numpy as np
 from sqlalchemy import Engine, LargeBinary, select
 
-from spc.records.tables import metadata
+from spc.records.retention_tables import metadata
 
 FIRST = datetime(2026, 10, 17, 5, 30, tzinfo=UTC)
 NIGHTS = 10

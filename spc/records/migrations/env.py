@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from alembic import context
 
-from spc.records.tables import metadata
+from spc.records.retention_tables import metadata  # of all tables, these included
 
 connection = context.config.attributes["connection"]
 context.configure(
