@@ -69,6 +69,10 @@ COMMANDS = {
         "service.cli_reports",
         "Say how many points a chart design takes to signal.",
     ),
+    "reevaluate": (
+        "service.cli_reevaluate",
+        "Evaluate all history anew, on all cores or on the machines of [compute] scheduler.",
+    ),
     "health": (
         "service.cli_upkeep",
         "Say whether the service is well: last night, mail, lock, schema, disk, feeds.",
@@ -88,6 +92,10 @@ COMMANDS = {
     "audit": (
         "service.cli_upkeep",
         "Verify that the record of hand actions is whole and unchanged.",
+    ),
+    "retention": (
+        "service.cli_retention",
+        "Say what is archived, summed up and due; do it now; find an archived drop.",
     ),
 }
 

@@ -16,7 +16,7 @@ from sqlalchemy import Connection, Engine
 from config.control_plan import Characteristic
 from config.load import Bay
 from spc.monitoring.work import Work, digest_of, hand_digests, work_of
-from spc.records import evaluations
+from spc.records import evaluations, reevaluations
 from spc.records.measurements import Changed, Marker, changed_lots, newest_ids
 from spc.records.stamps import to_us
 
@@ -36,7 +36,8 @@ class Evaluation:
     streams : streams known after it.
     points_evaluated : points made from readings that were new, changed or newly past the clock.
     signals : those of them in monitoring that complete a rule.
-    touched : stream id -> stamp (us) of its first point that is new or changed.
+    touched : stream id -> stamp (us) of its first point that is new or changed, here or by a
+        re-evaluation since the last pass.
     new_baselines : streams whose automatic limits were set or set anew.
     notes : readings that could not be used, and why.
     """
@@ -76,8 +77,8 @@ def evaluate_in(
     """As `evaluate`, in a transaction of the caller."""
     measurement, log = newest_ids(connection)
     now = Marker(to_us(as_of), measurement, log)
+    touched = reevaluations.take_note(connection)
     tasks, quiet = _tasks(connection, bay, now)
-    touched: dict[int, int] = {}
     points = signals = made = 0
     notes: list[str] = []
     if tasks:

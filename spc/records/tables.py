@@ -341,3 +341,34 @@ outbox = Table(
     Column("sent_us", BigInteger),
     Column("last_error", Text),
 )
+
+# ---- re-evaluation -----------------------------------------------------------------------------
+
+# Runs of `yellowbay reevaluate`. Who works for one names its `epoch`; a run that goes on after a
+# crash, and a pass that overtakes it, shut out whoever still works for the old one.
+reevaluations = Table(
+    "reevaluations",
+    metadata,
+    Column("id", Id, primary_key=True),
+    Column("key", String(64), nullable=False),  # digest of all that the results follow from
+    Column("status", String(12), nullable=False),  # running | finished | overtaken
+    Column("epoch", Integer, nullable=False, default=1),
+    Column("as_of_us", BigInteger, nullable=False),
+    Column("last_measurement_id", BigInteger, nullable=False),
+    Column("last_log_id", BigInteger, nullable=False),
+    Column("plan_digests", Text, nullable=False),  # JSON {characteristic: digest}
+    Column("whole", Text, nullable=False),  # JSON list: characteristics with all their streams
+    Column("told", Integer, nullable=False, default=0),  # whether a pass has taken note of it
+    Column("result", Text, nullable=False, default="{}"),  # JSON
+)
+
+# The partitions of a run: streams of one characteristic, and the lots that they are in.
+reevaluation_parts = Table(
+    "reevaluation_parts",
+    metadata,
+    Column("run_id", ForeignKey("reevaluations.id"), primary_key=True),
+    Column("number", Integer, primary_key=True),
+    Column("characteristic", Text, nullable=False),
+    Column("content", LargeBinary, nullable=False),  # packed JSON {streams, lots}
+    Column("result", Text),  # JSON once it is done
+)
