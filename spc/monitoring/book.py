@@ -16,8 +16,9 @@ from spc.records.stamps import to_us
 
 DAY_US = 86_400_000_000
 ENGINE = "yellowbay"  # who acts when the program closes or merges by itself
-# The part of the alarm budget that effects may spend; the rest is for what else is acted on.
-EFFECT_SHARE = 0.5
+# The part of the alarm budget that one look for effects may spend. Looks of following nights share
+# most of their data, so the rate of new false effects is well below that of one look alone.
+EFFECT_SHARE = 1.0
 QUIET_DAYS = 3  # a watched stream without a new signal for so long is closed
 
 

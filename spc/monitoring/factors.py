@@ -17,7 +17,7 @@ FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
 
 # Where the data cannot tell two levels apart, the earlier factor is named first.
-PREFERENCE = ("tool", "module", "gauge", "reticle", "resist_batch", "recipe")
+PREFERENCE = ("tool", "module", "reticle", "gauge", "resist_batch", "recipe")
 # A column of which nearly every lot has its own value names lots, not causes.
 _MOST_LEVELS = 400
 _LEAST_LOTS_A_LEVEL = 1.5
@@ -102,12 +102,12 @@ def _columns_of_wafers(
 
 
 def _ordered(names: set[str]) -> list[str]:
-    """Bare columns before those of steps, tools first, layer and product last."""
+    """Machines first, whatever their step, then what they are fed with; layer and product last."""
 
-    def place(name: str) -> tuple[bool, bool, int, str]:
+    def place(name: str) -> tuple[bool, int, bool, str]:
         bare = name.rpartition(".")[2]
         rank = PREFERENCE.index(bare) if bare in PREFERENCE else len(PREFERENCE)
-        return (name in ("layer", "product"), "." in name, rank, name)
+        return (name in ("layer", "product"), rank, "." in name, name)
 
     return sorted(names, key=place)
 

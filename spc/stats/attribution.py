@@ -126,7 +126,7 @@ def _report(
             state.evidence, state.noise, fit, found.candidate.column, residual, family
         )
         drift = Drift(family, *line)
-    last = float(found.candidate.column.time[fit.cells].max())
+    last = float(found.candidate.column.last[fit.cells].max())
     return Effect(
         form=form,
         shape=shape,
@@ -174,6 +174,8 @@ def _onset(state: State, found: Found) -> Onset:
         before = time[same & (time < earliest)]
         if estimate <= earliest and len(before):
             earliest = float(before.max())
+    # It may have begun in the middle of a lot.
+    latest = float(column.last[members & (time <= latest)].max(initial=latest))
     first = fit.cells[np.argmin(time[fit.cells])]
     between = np.unique(evidence.lot[members & (time > earliest) & (time <= latest)])
     return Onset(

@@ -9,7 +9,7 @@ estimate of DerSimonian and Laird (Controlled Clinical Trials 7, 1986).
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -30,7 +30,9 @@ WHOLE = "characteristic"
 class Column:
     """One searched factor: `factors` (names), `codes` (n,) with -1 for none, `names` of levels.
 
-    `time` (n,) is when it acted, seconds; `measured` tells that this is the time of measurement.
+    `time` (n,) is when it first acted on the cell's lot, `last` (n,) when it last did, seconds: all
+    cells of a lot with the level in a family have one time, since the lot's common part is told
+    apart from an effect only by whole lots. `measured` tells that this is the time of measurement.
     `twin_of` is the index of an earlier column that splits the monitored cells in the same way
     (it is not searched, only named as an alias), or -1.
     """
@@ -39,6 +41,7 @@ class Column:
     codes: IntArray
     names: tuple[tuple[str, ...], ...]
     time: FloatArray
+    last: FloatArray
     measured: bool
     twin_of: int = -1
 
@@ -127,23 +130,40 @@ def make_column(evidence: Evidence, factors: tuple[int, ...]) -> Column:
             (evidence.level_names[first][c // width], evidence.level_names[second][c % width])
             for c in present[shift:].tolist()
         )
+    time, last = _lot_times(evidence, codes, evidence.time_of(factors))
     return Column(
         factors=tuple(evidence.factors[j] for j in factors),
         codes=codes.astype(np.int64),
         names=names,
-        time=evidence.time_of(factors),
+        time=time,
+        last=last,
         measured=evidence.is_measured(factors),
     )
+
+
+def _lot_times(
+    evidence: Evidence, codes: IntArray, time: FloatArray
+) -> tuple[FloatArray, FloatArray]:
+    """Return the first and the last time of each cell's lot, level and family."""
+    group = evidence.lot * evidence.n_families + evidence.cell_family
+    _, at = np.unique(group * (int(codes.max(initial=-1)) + 2) + codes + 1, return_inverse=True)
+    first = np.full(int(at.max(initial=-1)) + 1, np.inf)
+    last = -first
+    np.minimum.at(first, at, time)
+    np.maximum.at(last, at, time)
+    return first[at], last[at]
 
 
 def conjunction_within(evidence: Evidence, parent: Column, level: int, other: Column) -> Column:
     """Return the conjunction of one level of `parent` with every level of the single `other`."""
     codes = np.where(parent.cells(level), other.codes, -1)
+    time, last = _lot_times(evidence, codes, (other if other.measured else parent).time)
     return Column(
         factors=parent.factors + other.factors,
         codes=codes,
         names=tuple(parent.names[level] + name for name in other.names),
-        time=other.time if other.measured else parent.time,
+        time=time,
+        last=last,
         measured=parent.measured or other.measured,
     )
 
@@ -216,11 +236,13 @@ def _random_effect(
 def _whole_characteristic(evidence: Evidence) -> Column:
     codes = evidence.characteristic[evidence.series]
     count = int(codes.max(initial=-1)) + 1
+    time, last = _lot_times(evidence, codes, evidence.t_process)
     return Column(
         factors=(WHOLE,),
         codes=codes,
         names=tuple((str(c),) for c in range(count)),
-        time=evidence.t_process,
+        time=time,
+        last=last,
         measured=False,
     )
 
@@ -237,11 +259,5 @@ def _mark_twins(columns: list[Column], monitoring: BoolArray) -> tuple[Column, .
         canonical = np.where(codes < 0, -1, rank[inverse])
         key = canonical.tobytes() + bytes([column.measured])
         twin = seen.setdefault(key, i)
-        out.append(
-            column
-            if twin == i
-            else Column(
-                column.factors, column.codes, column.names, column.time, column.measured, twin
-            )
-        )
+        out.append(column if twin == i else replace(column, twin_of=twin))
     return tuple(out)

@@ -185,7 +185,7 @@ class AttributionOptions:
     conjunctions: tuple[tuple[str, str], ...] | None = None
     max_effects: int = 12
     bins: int = 64
-    null_cells: int = 400_000
+    null_cells: int = 250_000
     seed: int = 20240611
     prior_sigmas: float = 2.5
     min_sigmas: float = 0.4

@@ -44,6 +44,29 @@ def test_a_resist_batch_on_all_tracks_is_one_effect() -> None:
     assert effect.p_adjusted < 1e-6
 
 
+@pytest.mark.parametrize("seed", [3, 5])
+def test_wafers_of_one_lot_at_different_times_are_not_told_apart_by_an_onset(seed: int) -> None:
+    """A window that cut a lot in two would take the lot's common part for an effect."""
+    evidence = BAY.simulate(seed)
+    later = np.random.default_rng(seed).uniform(0.0, 2400.0, len(evidence.series))
+    assert evidence.t_level is not None
+    jittered = replace(
+        evidence,
+        t_process=evidence.t_process + later,
+        t_measure=evidence.t_measure + later,
+        t_level=evidence.t_level + later[:, None],
+    )
+    state = State.of(jittered, OPTIONS)
+    for column in state.columns:
+        whole = jittered.lot * jittered.n_families + jittered.cell_family
+        _, at = np.unique(np.stack([whole, column.codes]), axis=1, return_inverse=True)
+        first = np.full(at.max() + 1, np.inf)
+        np.minimum.at(first, at.ravel(), column.time)
+        assert np.array_equal(first[at.ravel()], column.time)
+        assert np.all(column.last >= column.time)
+    assert attribute(jittered, OPTIONS, NOW * DAY + 2400.0) == ()
+
+
 def test_a_drifting_cup_is_one_drift_of_its_tool_and_module() -> None:
     where = {"coat.tool": "T2", "coat.module": "C3"}
     fault = Fault(where, {FILM: 5.0}, start=15.0, ramp=4.0, form="drift")
