@@ -83,6 +83,22 @@ class Report:
     digest: str
 
 
+@dataclass(frozen=True)
+class _Course:
+    """What a run works with; `chosen` are the characteristics wanted."""
+
+    engine: Engine
+    bay: Bay
+    wanted: Wanted
+    runner: Runner
+    progress: Progress
+
+    @property
+    def chosen(self) -> list[Characteristic]:
+        names = self.wanted.characteristics
+        return [one for one in self.bay.plan.characteristic if not names or one.name in names]
+
+
 def reevaluate(
     engine: Engine, bay: Bay, wanted: Wanted, runner: Runner, progress: Progress
 ) -> Report:
@@ -95,14 +111,10 @@ def reevaluate(
     spc.monitoring.reevaluation_engines.EngineError
         When workers keep dying or the scheduler is lost.
     """
-    chosen = [
-        one
-        for one in bay.plan.characteristic
-        if not wanted.characteristics or one.name in wanted.characteristics
-    ]
-    run = _begun(engine, bay, chosen, wanted, runner, progress)
+    course = _Course(engine, bay, wanted, runner, progress)
+    run = _begun(course)
     job = replace(_job(bay, run.marker), run=run.id, epoch=run.epoch)
-    named = {one.name: one for one in chosen}
+    named = {one.name: one for one in course.chosen}
     with reading(engine) as connection:
         left = reevaluations.to_do(connection, run.id)
         before = len(reevaluations.results(connection, run.id))
@@ -119,65 +131,57 @@ def reevaluate(
 # ---- beginning, or going on ----------------------------------------------------------------------
 
 
-def _begun(
-    engine: Engine,
-    bay: Bay,
-    chosen: Sequence[Characteristic],
-    wanted: Wanted,
-    runner: Runner,
-    progress: Progress,
-) -> Run:
+def _begun(course: _Course) -> Run:
     """The run to go on with, or a new one with its partitions."""
-    with engine.begin() as connection:
+    with course.engine.begin() as connection:
         run = reevaluations.running(connection)
-        marker, digests = _looked_at(connection, bay, chosen, wanted, run)
-        key = _key(digests, marker, wanted, bay)
+        marker, digests = _looked_at(connection, course, run)
+        key = _key(digests, marker, course)
         if run is not None and run.key == key:
             return reevaluations.take_over(connection, run)
         reevaluations.overtake(connection)
         reevaluations.drop_parts(connection)
         lots = reevaluations.read_lots(connection, marker.as_of_us)
-    blocks = list(_blocks(_job(bay, marker), chosen, lots))
-    found: Survey = {}
-    progress("looking for streams", 0, len(blocks))
-    for done, some in enumerate(runner.each(survey, blocks), 1):
-        _add(found, some)
-        progress("looking for streams", done, len(blocks))
-    with engine.begin() as connection:
-        size = bay.settings.compute.partition_measurements
-        parts, whole = _parts(connection, chosen, found, wanted.since_us, size)
+    found = _surveyed(course, list(_blocks(_job(course.bay, marker), course.chosen, lots)))
+    with course.engine.begin() as connection:
+        parts, whole = _parts(connection, course, found)
         reevaluations.begin(connection, NewRun(key, marker, digests, whole), parts)
         begun = reevaluations.running(connection)
     assert begun is not None  # it was written in this transaction
     return begun
 
 
+def _surveyed(course: _Course, blocks: Sequence[Block]) -> Survey:
+    found: Survey = {}
+    course.progress("looking for streams", 0, len(blocks))
+    for done, some in enumerate(course.runner.each(survey, blocks), 1):
+        _add(found, some)
+        course.progress("looking for streams", done, len(blocks))
+    return found
+
+
 def _looked_at(
-    connection: Connection,
-    bay: Bay,
-    chosen: Sequence[Characteristic],
-    wanted: Wanted,
-    run: Run | None,
+    connection: Connection, course: _Course, run: Run | None
 ) -> tuple[Marker, dict[str, str]]:
     """How far to look, and the digest of the plan of each characteristic."""
-    kept = evaluations.all_kept(connection)
+    bay, kept = course.bay, evaluations.all_kept(connection)
     clocks = [kept[c.name][1].as_of_us for c in bay.plan.characteristic if c.name in kept]
     if clocks:
         as_of_us = max(clocks)
     else:
-        as_of_us = wanted.clock_us if run is None else run.marker.as_of_us
+        as_of_us = course.wanted.clock_us if run is None else run.marker.as_of_us
     by_hand, radius = hand_digests(connection), bay.settings.bay.wafer_radius_mm
-    digests = {one.name: digest_of(one, radius, by_hand) for one in chosen}
+    digests = {one.name: digest_of(one, radius, by_hand) for one in course.chosen}
     return Marker(as_of_us, *newest_ids(connection)), digests
 
 
-def _key(digests: dict[str, str], marker: Marker, wanted: Wanted, bay: Bay) -> str:
+def _key(digests: dict[str, str], marker: Marker, course: _Course) -> str:
     """Digest of all that the results and their partitions follow from."""
     shape = [
         digests,
         [marker.as_of_us, marker.last_measurement_id, marker.last_log_id],
-        wanted.since_us,
-        bay.settings.compute.partition_measurements,
+        course.wanted.since_us,
+        course.bay.settings.compute.partition_measurements,
         versions(),
     ]
     return hashlib.sha256(json.dumps(shape, sort_keys=True).encode()).hexdigest()
@@ -222,22 +226,16 @@ def _add(found: Survey, some: Survey) -> None:
 # ---- partitions ----------------------------------------------------------------------------------
 
 
-def _parts(
-    connection: Connection,
-    chosen: Sequence[Characteristic],
-    found: Survey,
-    since_us: int | None,
-    size: int,
-) -> tuple[list[Part], list[str]]:
-    """Partitions of about so many measurements, and the characteristics covered whole."""
+def _parts(connection: Connection, course: _Course, found: Survey) -> tuple[list[Part], list[str]]:
+    """The partitions, and the characteristics that they cover whole."""
+    since_us, size = course.wanted.since_us, course.bay.settings.compute.partition_measurements
     parts: list[Part] = []
     whole: list[str] = []
-    for one in chosen:
-        seen = found.get(one.name, {})
-        if since_us is not None:
-            seen = {key: s for key, s in seen.items() if s.last_us >= since_us}
-        gone = series.stream_ids(connection, one.name).keys() - found.get(one.name, {}).keys()
-        if len(seen) == len(found.get(one.name, {})):
+    for one in course.chosen:
+        every = found.get(one.name, {})
+        seen = {k: s for k, s in every.items() if since_us is None or s.last_us >= since_us}
+        gone = series.stream_ids(connection, one.name).keys() - every.keys()
+        if len(seen) == len(every):
             whole.append(one.name)
             if gone:  # no reading is in them any more: what they had is taken away
                 parts.append(Part(one.name, tuple(sorted(gone)), ()))
