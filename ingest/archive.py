@@ -122,9 +122,13 @@ def archive_drops(
             with engine.begin() as connection:
                 archived.record(connection, moved)
             _remove(one)
-        except (OSError, ArchiveError) as error:
-            failed.append(f"{one.drop.path}: {_why(error)}")
+        except ArchiveError as error:
+            failed.append(f"{one.drop.path}: {error}")
             continue
+        except OSError as error:
+            # A full or failing disk fails every drop alike: it is said once.
+            failed.append(f"{one.drop.path}: {_why(error)}")
+            break
         done, total = done + 1, total + moved.bytes
     return ArchiveReport(done, total, len(due) - done, tuple(failed))
 
@@ -215,7 +219,5 @@ def _sync(folder: Path) -> None:
         os.close(handle)
 
 
-def _why(error: Exception) -> str:
-    if isinstance(error, OSError):
-        return f"{error.strerror or error}{f' ({error.filename})' if error.filename else ''}"
-    return str(error)
+def _why(error: OSError) -> str:
+    return f"{error.strerror or error}{f' ({error.filename})' if error.filename else ''}"

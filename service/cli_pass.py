@@ -101,7 +101,9 @@ def nightly(
         say(night.text)
     for error in night.mail_errors:
         tell(f"yellowbay: mail: {error}")
-    if night.mail_errors:
+    for error in night.retention_errors:
+        tell(f"yellowbay: retention: {error}")
+    if night.mail_errors or night.retention_errors:
         raise typer.Exit(COULD_NOT_FINISH)
 
 

@@ -64,6 +64,7 @@ def examine(session: Session) -> Health:
             _mail(session),
             _feeds(session),
             *_disk(session),
+            _retention(session),
         )
     )
 
@@ -134,6 +135,21 @@ def _feeds(session: Session) -> Finding:
     return Finding("feeds", not names, text, {"late": names})
 
 
+def _retention(session: Session) -> Finding:
+    """What is kept. Not well when nights fall behind, or have no right to move drops."""
+    from service.retention import sentences, state
+
+    found = state(session)
+    text, well = "; ".join(sentences(found)), True
+    if found["drops"]["overdue"] or found["sites"]["overdue"]:
+        text, well = text + "; the nights fall behind: `yellowbay retention --run`", False
+    folder = session.bay.path(session.bay.settings.drops.folder)
+    moves = found["drops"]["after_days"] is not None
+    if moves and folder.is_dir() and not os.access(folder, os.W_OK):
+        text, well = text + f"; {folder} cannot be written, so drops cannot be moved", False
+    return Finding("retention", well, text, found)
+
+
 def _disk(session: Session) -> list[Finding]:
     bay = session.bay
     settings = bay.settings
@@ -143,6 +159,8 @@ def _disk(session: Session) -> list[Finding]:
     }
     if bay.database_url.startswith("sqlite:///"):
         folders["database"] = Path(bay.database_url.removeprefix("sqlite:///")).parent
+    if settings.retention.archive_drops_after_days is not None:
+        folders["archive"] = bay.path(settings.retention.archive)
     if settings.mail.host is None:
         folders["mail"] = bay.path(settings.mail.folder)
     return [_folder(name, folder) for name, folder in folders.items()]

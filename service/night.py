@@ -17,6 +17,7 @@ from typing import TYPE_CHECKING, Any
 
 from service import clock
 from service.lock import pass_lock
+from service.retention import Retained, at_the_end_of_a_night, run_retention
 from spc.records import passes
 from spc.records.sessions import reading
 from spc.records.stamps import from_us, to_us
@@ -43,6 +44,7 @@ class Night:
     document: dict[str, Any]
     text: str
     mail_errors: tuple[str, ...] = field(default=())
+    retention_errors: tuple[str, ...] = field(default=())
 
     def as_json(self) -> dict[str, Any]:
         """The document of `nightly --json`."""
@@ -97,7 +99,11 @@ def run_night(
             "sent": delivery.sent,
             "failed": delivery.failed,
         }
-        return Night(document, written.text, delivery.errors)
+        retained = at_the_end_of_a_night(session, as_of, stop, progress)
+        if retained is None:
+            return Night(document, written.text, delivery.errors)
+        document["retention"] = retained.as_json()
+        return Night(document, written.text, delivery.errors, retained.failed)
 
 
 def _judge(
@@ -198,6 +204,14 @@ def take_in_drops(session: Session, as_of: datetime, progress: Progress = _silen
     """Only the first step of the pass, under the same lock."""
     with pass_lock(session.engine, 600.0, waiting=_tell_waiting):
         return _take_in(session, as_of, _never, progress)
+
+
+def run_retention_alone(
+    session: Session, as_of: datetime, progress: Progress = _silent
+) -> Retained:
+    """Only the last step of the pass, under the same lock and without its limit of time."""
+    with pass_lock(session.engine, 600.0, waiting=_tell_waiting):
+        return run_retention(session, as_of, minutes=None, progress=progress)
 
 
 def send_mail(session: Session, stop: Callable[[], bool] = _never) -> None:

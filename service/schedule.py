@@ -131,6 +131,8 @@ class Server:
         _LOG.info("the night is done", extra={"result": night.text.splitlines()[0]})
         for reason in night.mail_errors:
             _LOG.warning("mail waits or was refused", extra={"reason": reason})
+        for reason in night.retention_errors:
+            _LOG.warning("not archived or summed up", extra={"reason": reason})
 
     def _mail(self) -> None:
         from service.failures import explain

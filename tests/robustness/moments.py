@@ -1,8 +1,8 @@
 """Killing a pass at a chosen moment, and counting how many moments it has.
 
-A moment is a statement sent to the database, a commit, a file opened for writing or moved into
-place, or a command of the mail dialogue: between any two of them a kill finds the same state on
-disk. Choosing moments by number hits the short ones (a commit, a rename) as often as the long
+A moment is a statement sent to the database, a commit, a file opened for writing, moved into place
+or removed, or a command of the mail dialogue: between any two of them a kill finds the same state
+on disk. Choosing moments by number hits the short ones (a commit, a rename) as often as the long
 ones, which a timer hardly ever would. The timer is used as well (`test_crash`, slow).
 """
 
@@ -79,13 +79,16 @@ def at_each_moment(call: Callable[[], None]) -> None:
     def watch(name: str, args: tuple[Any, ...]) -> None:
         # smtplib.send: connection and text; open: path, mode, flags.
         writes = name == "open" and isinstance(args[1], str) and "w" in args[1]
-        if writes or name in ("os.rename", "smtplib.connect", "smtplib.send"):
+        if writes or name in ("os.rename", "os.remove", "smtplib.connect", "smtplib.send"):
             call()
 
     sys.addaudithook(watch)
 
 
-def killed_at(bay: SmallBay, number: int, moment: int) -> bool:
+Work = Callable[[SmallBay, int], None]
+
+
+def killed_at(bay: SmallBay, number: int, moment: int, run: Work = one_pass) -> bool:
     """Run a pass that kills itself at a moment; whether it got so far."""
 
     def work() -> None:
@@ -98,12 +101,12 @@ def killed_at(bay: SmallBay, number: int, moment: int) -> bool:
                 os.kill(os.getpid(), signal.SIGKILL)
 
         at_each_moment(strike)
-        one_pass(bay, number)
+        run(bay, number)
 
     return fork_and_kill(work, None)
 
 
-def moments_of(bay: SmallBay, number: int) -> int:
+def moments_of(bay: SmallBay, number: int, run: Work = one_pass) -> int:
     """Run a pass to its end in a child; how many moments it had."""
     counter = multiprocessing.get_context("fork").Value("i", 0)
 
@@ -112,7 +115,7 @@ def moments_of(bay: SmallBay, number: int) -> int:
             counter.value += 1
 
         at_each_moment(note)
-        one_pass(bay, number)
+        run(bay, number)
 
     assert not fork_and_kill(work, None)
     return int(counter.value)

@@ -15,7 +15,7 @@ import pytest
 ROOT = Path(__file__).resolve().parents[2]
 
 
-@pytest.mark.parametrize("name", ["test_crash.py", "test_mail.py"])
+@pytest.mark.parametrize("name", ["test_crash.py", "test_mail.py", "test_retention.py"])
 def test_forking_tests_pass(name: str) -> None:
     file = str(ROOT / "tests" / "robustness" / name)
     command = [sys.executable, "-m", "pytest", "-n", "0", "-m", "forks and not slow", file]
