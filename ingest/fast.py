@@ -107,7 +107,10 @@ def _read(
             invalid_row_handler=irregular.skip,
         ),
         convert_options=pacsv.ConvertOptions(
-            column_types=types, null_values=[], strings_can_be_null=False
+            column_types=types,
+            null_values=[],
+            strings_can_be_null=False,
+            check_utf8=False,  # the text was brought to UTF-8 before
         ),
     )
 
