@@ -87,6 +87,7 @@ def investigation_page(view: InvestigationPage, href: str = "excursions/x.html")
         "live": live,
         "streams_sentence": _streams_sentence(view),
         "pictures": _pictures(view),
+        "sites_gone": view.sites_gone,
         "lots_sentence": text("sentence.end", body=_capital(lots(found))),
         "action_plan": view.action_plan,
         "advices": _advices(view, clock),
@@ -132,7 +133,8 @@ def _capital(words: str) -> str:
 
 def _contents(values: dict[str, Any]) -> list[tuple[str, str]]:
     """Anchors and names of the sections that the page has."""
-    there = {"maps": bool(values["pictures"]), "behind": bool(values["behind_table"])}
+    maps = bool(values["pictures"] or values["sites_gone"])
+    there = {"maps": maps, "behind": bool(values["behind_table"])}
     names = ("streams", "cause", "maps", "lots", "do", "history", "behind")
     return [(n, text(f"investigation.{n}")) for n in names if there.get(n, True)]
 

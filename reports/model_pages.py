@@ -143,6 +143,7 @@ class InvestigationPage:
     trim: TrimAdvice | None = None
     cd_change: Magnitude | None = None
     merged_into: int | None = None
+    sites_gone: bool = False  # of wafers that the maps would show (retention)
 
 
 # ---- the monthly review and the index -----------------------------------------------------------
@@ -276,6 +277,7 @@ class ReviewPage:
     excursions: tuple[MonthExcursion, ...] = ()
     goal: float | None = None
     xlsx_href: str | None = None
+    notes: tuple[str, ...] = ()  # what the figures lack, and why
 
 
 @dataclass(frozen=True)

@@ -63,6 +63,7 @@ def review_page(view: ReviewPage, href: str = "reviews/x.html") -> str:
         "decisions": [decision_sentence(item) for item in view.decisions],
         "changes": [change_sentence(item) for item in view.changes],
         "gaps": [gap_sentence(gap) for gap in view.gaps],
+        "notes": view.notes,
         "excursions": [_excursion(item, clock, up) for item in view.excursions],
         "overview": capability_table(tuple(wholes), "overview", text("caption.overview"), view),
         "parts": [_part(row, view, i) for i, row in enumerate(wholes)],

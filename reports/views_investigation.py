@@ -15,7 +15,7 @@ from sqlalchemy import select
 from config.control_plan import Characteristic
 from reports import model, model_pages
 from reports.views import Reader, excursion_of, investigation_href
-from reports.views_maps import map_of, overlay_of
+from reports.views_maps import map_of, overlay_of, sites_gone
 from spc.records import actions, findings
 from spc.records.contexts import ContextStore, chunks
 from spc.records.findings import Excursion
@@ -51,6 +51,7 @@ def investigation_view(reader: Reader, known: Excursion) -> model_pages.Investig
         n_quiet_not_shown=hidden,
         wafer_map=map_of(reader, view),
         overlay=overlay_of(reader, view),
+        sites_gone=sites_gone(reader, view),
         effects=_effects(document, view),
         ruled_out=_ruled_out(document, view),
         experiment=_experiment(document, view),

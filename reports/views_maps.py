@@ -96,6 +96,18 @@ def overlay_of(reader: Reader, view: model.Excursion) -> model.OverlayVectors | 
     )
 
 
+def sites_gone(reader: Reader, view: model.Excursion) -> bool:
+    """Whether wafers that the maps would show have lost their site values (retention)."""
+    ids = {reader.stream_id(s.characteristic, s.context) for s in view.streams} - {None}
+    keys = _wafers(reader, view, sorted(i for i in ids if i is not None)[:_MOST_STREAMS])
+    m = measurements.c
+    for part in chunks(sorted({key[0] for key in keys})):
+        query = select(m.lot, m.layer, m.wafer).where(m.lot.in_(part), m.site_values.is_(None))
+        if any((r.lot, r.layer, r.wafer) in keys for r in reader.connection.execute(query)):
+            return True
+    return False
+
+
 def _vectors(table: pd.DataFrame) -> tuple[model.OverlayVector, ...]:
     places = np.array([(x, y) for _, x, y in table.index], float).reshape(-1, 2)
     values = table[["overlay_x", "overlay_y"]].to_numpy(float)

@@ -50,6 +50,7 @@ def review_view(reader: Reader, review: MonthReview) -> model_pages.ReviewPage:
         excursions=_excursions(reader, review),
         goal=GOAL,
         xlsx_href=workbook_href(review.month).rpartition("/")[2],
+        notes=review.notes,
     )
 
 

@@ -161,3 +161,16 @@ def test_modules_stay_small() -> None:
     folder = Path(reports.__file__).parent
     long = [p.name for p in folder.glob("*.py") if len(p.read_text("utf-8").splitlines()) > 400]
     assert long == []
+
+
+def test_a_page_says_which_site_values_are_gone() -> None:
+    from reports.investigation import investigation_page
+
+    view = samples_pages.investigation()
+    bare = replace(view, wafer_map=None, overlay=None, sites_gone=True)
+    for one, said in ((bare, True), (replace(view, wafer_map=None, overlay=None), False)):
+        page = investigation_page(one)
+        assert ("taken away by the retention rule" in page) is said
+        assert ('<section id="maps">' in page) is said
+    review = replace(samples_pages.review(), notes=("<b>M1</b>, 2026-03: sums alone",))
+    assert "&lt;b&gt;M1&lt;/b&gt;, 2026-03: sums alone" in review_page(review)

@@ -181,6 +181,8 @@ def test_what_the_pass_the_command_and_health_say(undisturbed: Undisturbed, tmp_
     assert bay.json("retention", "--run")["done"]["archived"] == 0
     rows = bay.json("capability", "--month", "2026-10")
     assert {row["site_values"] for row in rows} == {"kept"}
+    [page] = (bay.root / "reports" / "reviews").glob("*.html")
+    assert "taken away by the retention rule" in page.read_text("utf-8")
 
 
 def test_a_slip_of_the_clock_takes_nothing_away(undisturbed: Undisturbed, tmp_path: Path) -> None:
