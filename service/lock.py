@@ -1,7 +1,8 @@
 """One pass at a time, across processes and (with PostgreSQL) across machines.
 
 SQLite: a file lock beside the database, which the system drops when its holder dies.
-PostgreSQL: a session advisory lock, which the server drops when the connection dies.
+PostgreSQL: a session advisory lock, which the server drops when the connection dies. Workers that
+only take files in share it: any number of them at once, but none beside a whole pass.
 """
 
 from __future__ import annotations
@@ -26,13 +27,18 @@ class BusyError(Exception):
 
 @contextmanager
 def pass_lock(
-    engine: Engine, wait_seconds: float, *, waiting: Callable[[], None] = lambda: None
+    engine: Engine,
+    wait_seconds: float,
+    *,
+    shared: bool = False,
+    waiting: Callable[[], None] = lambda: None,
 ) -> Iterator[None]:
     """Hold the lock of the pass.
 
     Parameters
     ----------
     wait_seconds : how long to wait for another pass to end.
+    shared : let others that share it in as well. SQLite has one writer anyway: there it is for one.
     waiting : called once when there is something to wait for.
 
     Raises
@@ -40,8 +46,8 @@ def pass_lock(
     BusyError
         When the other pass does not end in time.
     """
-    holder = _advisory if engine.dialect.name == "postgresql" else _file
-    with holder(engine) as take:
+    on_server = engine.dialect.name == "postgresql"
+    with _advisory(engine, "_shared" if shared else "") if on_server else _file(engine) as take:
         deadline = time.monotonic() + wait_seconds
         told = False
         while not take():
@@ -74,17 +80,17 @@ def _file(engine: Engine) -> Iterator[Callable[[], bool]]:
 
 
 @contextmanager
-def _advisory(engine: Engine) -> Iterator[Callable[[], bool]]:
+def _advisory(engine: Engine, kind: str) -> Iterator[Callable[[], bool]]:
     # Autocommit: a lock held for an hour must not hold a transaction open for an hour.
     with engine.connect().execution_options(isolation_level="AUTOCOMMIT") as connection:
 
         def take() -> bool:
-            asked = text("SELECT pg_try_advisory_lock(:key)")
+            asked = text(f"SELECT pg_try_advisory_lock{kind}(:key)")  # nosec B608
             return bool(connection.execute(asked, {"key": _ADVISORY_KEY}).scalar())
 
         try:
             yield take
         finally:
             if not connection.invalidated:
-                asked = text("SELECT pg_advisory_unlock(:key)")
+                asked = text(f"SELECT pg_advisory_unlock{kind}(:key)")  # nosec B608
                 connection.execute(asked, {"key": _ADVISORY_KEY})

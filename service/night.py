@@ -201,8 +201,8 @@ def _make_good(session: Session, stamp: int, progress: Progress) -> None:
 
 
 def take_in_drops(session: Session, as_of: datetime, progress: Progress = _silent) -> IngestReport:
-    """Only the first step of the pass, under the same lock."""
-    with pass_lock(session.engine, 600.0, waiting=_tell_waiting):
+    """Only the first step of the pass; on PostgreSQL several workers share it, file by file."""
+    with pass_lock(session.engine, 600.0, shared=True, waiting=_tell_waiting):
         return _take_in(session, as_of, _never, progress)
 
 

@@ -13,6 +13,13 @@ from sqlalchemy.engine import make_url
 
 # How long a writer of SQLite waits for another program before it gives up.
 BUSY_SECONDS = 60.0
+# PostgreSQL: both sides ask after this long whether the other is still there. A worker whose
+# machine lost its power gives its files back within two minutes; the systems' default is two hours.
+_IDLE_SECONDS = 60
+_ALIVE = (
+    f"-c tcp_keepalives_idle={_IDLE_SECONDS} -c tcp_keepalives_interval={_IDLE_SECONDS // 4} "
+    "-c tcp_keepalives_count=4"
+)
 PASSWORD_VARIABLE = "YELLOWBAY_DATABASE_PASSWORD"  # nosec B105
 
 
@@ -70,8 +77,11 @@ def _engine(url: str, pool_size: int, timeout: float) -> Engine:
         pool_size=pool_size,
         pool_pre_ping=True,
         connect_args={
-            "options": f"-c statement_timeout={int(timeout * 1000)} -c timezone=UTC",
+            "options": f"-c statement_timeout={int(timeout * 1000)} -c timezone=UTC {_ALIVE}",
             "connect_timeout": 10,
+            "keepalives_idle": _IDLE_SECONDS,
+            "keepalives_interval": _IDLE_SECONDS // 4,
+            "keepalives_count": 4,
         },
     )
 
