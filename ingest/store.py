@@ -64,13 +64,14 @@ class Store:
         drop, content = fetched.drop, fetched.content
         entry = ledger.entry_of(connection, content.digest)
         sighting = ledger.Sighting(drop.path, drop.size, drop.modified_ns, content.digest)
-        before = ledger.sighting_of(connection, drop.path)
-        ledger.record_sighting(connection, sighting, self.clock_us)
         if entry is not None and not self.deserves_a_try(entry):
+            before = ledger.sighting_of(connection, drop.path)
+            ledger.record_sighting(connection, sighting, self.clock_us)
             if drop.path == entry.path or (before and before.content_hash == content.digest):
                 return None
             reason = Reason(None, None, None, f"the same content as {entry.path}")
             return FileReport(drop.path, "duplicate", _kind(entry.kind), reasons=(reason,))
+        ledger.record_sighting(connection, sighting, self.clock_us)
         known = ledger.parameter_units(connection)
         prepared = fetched.prepared
         if prepared is None or prepared.contradicts(known):

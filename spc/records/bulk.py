@@ -36,15 +36,21 @@ def insert_rows(
     """
     from sqlalchemy.exc import DBAPIError
 
+    rows = iter(rows)
+    first = next(rows, None)
+    if first is None:
+        return  # a copy of nothing costs the server three messages all the same
+    rows = chain([first], rows)
     dialect = connection.dialect
-    connection.exec_driver_sql("SELECT 1")  # begins the transaction where there is none yet
+    if not connection.in_transaction():
+        connection.exec_driver_sql("SELECT 1")  # begins one
     names = ", ".join(_quoted(dialect, name) for name in columns)
     target = f"{_quoted(dialect, table.name)} ({names})"
     cursor: Any = connection.connection.cursor()
     errors: Any = dialect.dbapi
     try:
         if dialect.name == "sqlite":
-            _insert_many(cursor, target, len(columns), iter(rows))
+            _insert_many(cursor, target, len(columns), rows)
         else:
             with cursor.copy(f"COPY {target} FROM STDIN (FORMAT BINARY)") as copy:
                 copy.set_types([_postgres_type(table.c[name].type) for name in columns])
@@ -56,6 +62,18 @@ def insert_rows(
         ) from error
     finally:
         cursor.close()
+
+
+def upsert(connection: Connection, table: Table) -> Any:
+    """An insert of the dialect, which can say what to do about a row that is there already."""
+    # The dialects are loaded by the engine that uses them, so this costs nothing.
+    if connection.dialect.name == "postgresql":
+        from sqlalchemy.dialects.postgresql import insert as insert_postgres
+
+        return insert_postgres(table)
+    from sqlalchemy.dialects.sqlite import insert as insert_sqlite
+
+    return insert_sqlite(table)
 
 
 def any_of(

@@ -5,11 +5,10 @@ from __future__ import annotations
 import hashlib
 from collections.abc import Sequence
 from dataclasses import dataclass, field
-from typing import Any
 
 from sqlalchemy import Connection, Table, select
 
-from spc.records.bulk import any_of
+from spc.records.bulk import any_of, upsert
 from spc.records.tables import contexts, layouts
 
 _KEPT = 200_000
@@ -59,7 +58,8 @@ class Interned:
         if sizes is not None:
             for row in new:
                 row["n"] = sizes[place[row[self.column]]]  # type: ignore[assignment]
-        connection.execute(_insert_if_new(connection, self.table), new)
+        insert = upsert(connection, self.table).on_conflict_do_nothing(index_elements=["digest"])
+        connection.execute(insert, new)
         self._find(connection, texts)
 
     def _find(self, connection: Connection, texts: dict[str, str]) -> None:
@@ -78,17 +78,6 @@ class Interned:
     def forget(self) -> None:
         """The transaction was rolled back: what it stored is gone."""
         self._fresh.clear()
-
-
-def _insert_if_new(connection: Connection, table: Table) -> Any:
-    # The dialects are loaded by the engine that uses them, so this costs nothing.
-    if connection.dialect.name == "postgresql":
-        from sqlalchemy.dialects.postgresql import insert as insert_postgres
-
-        return insert_postgres(table).on_conflict_do_nothing(index_elements=["digest"])
-    from sqlalchemy.dialects.sqlite import insert as insert_sqlite
-
-    return insert_sqlite(table).on_conflict_do_nothing(index_elements=["digest"])
 
 
 @dataclass

@@ -7,9 +7,9 @@ from contextlib import contextmanager
 from dataclasses import dataclass
 from typing import Any
 
-from sqlalchemy import Connection, Engine, delete, func, insert, select, text, update
+from sqlalchemy import Connection, Engine, case, delete, func, insert, select, text, update
 
-from spc.records.bulk import insert_rows
+from spc.records.bulk import insert_rows, upsert
 from spc.records.tables import files, parameters, rejects, sightings
 
 # Keys of PostgreSQL advisory locks: one for storing (one writer at a time, so that what a writer
@@ -99,20 +99,22 @@ def record_sighting(connection: Connection, sighting: Sighting, seen_us: int) ->
 
     `seen_us` stays the clock at which this content was first seen there.
     """
-    mine = sightings.c.path == sighting.path
-    same = mine & (sightings.c.content_hash == sighting.content_hash)
-    before = connection.scalar(select(sightings.c.seen_us).where(same))
-    connection.execute(delete(sightings).where(mine))
-    connection.execute(
-        insert(sightings),
-        {
-            "path": sighting.path,
-            "bytes": sighting.bytes,
-            "modified_ns": sighting.modified_ns,
-            "content_hash": sighting.content_hash,
-            "seen_us": seen_us if before is None else before,
-        },
+    new = upsert(connection, sightings).values(
+        path=sighting.path,
+        bytes=sighting.bytes,
+        modified_ns=sighting.modified_ns,
+        content_hash=sighting.content_hash,
+        seen_us=seen_us,
     )
+    given = new.excluded
+    same = sightings.c.content_hash == given.content_hash
+    changed = {
+        "bytes": given.bytes,
+        "modified_ns": given.modified_ns,
+        "content_hash": given.content_hash,
+        "seen_us": case((same, sightings.c.seen_us), else_=given.seen_us),
+    }
+    connection.execute(new.on_conflict_do_update(index_elements=["path"], set_=changed))
 
 
 def record_rejects(
