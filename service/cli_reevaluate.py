@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING, Annotated, Any
 import typer
 
 from service.context import (
+    COULD_NOT_FINISH,
     WRONG_USAGE,
     CommandError,
     ConfigOption,
@@ -78,7 +79,7 @@ def _wanted(session: Session, names: list[str], since: str | None) -> Wanted:
 def _run(session: Session, wanted: Wanted, wait: float, show: Any) -> Report:
     from service.lock import pass_lock
     from spc.monitoring.reevaluation import OvertakenError, reevaluate
-    from spc.monitoring.reevaluation_engines import EngineError, NotConfiguredError, runner_for
+    from spc.monitoring.reevaluation_engines import EngineError, runner_for
     from spc.monitoring.reevaluation_tasks import VersionsDifferError
 
     try:
@@ -87,10 +88,16 @@ def _run(session: Session, wanted: Wanted, wait: float, show: Any) -> Report:
             runner_for(session.bay) as runner,
         ):
             return reevaluate(session.engine, session.bay, wanted, runner, show)
-    except NotConfiguredError as error:
-        raise CommandError(str(error), WRONG_USAGE) from error
     except (EngineError, OvertakenError, VersionsDifferError) as error:
-        raise CommandError(str(error)) from error
+        raise told(error) from error
+
+
+def told(error: Exception) -> CommandError:
+    """What a person is told of a run that did not come to its end."""
+    from spc.monitoring.reevaluation_engines import NotConfiguredError
+
+    wrong = isinstance(error, NotConfiguredError)
+    return CommandError(str(error), WRONG_USAGE if wrong else COULD_NOT_FINISH)
 
 
 def _document(session: Session, report: Report) -> dict[str, Any]:

@@ -164,7 +164,7 @@ class OnCluster:
             for i, item in enumerate(items)
         ]
         try:
-            for future in as_completed(futures):
+            for future in as_completed(futures, loop=self._client.loop):
                 yield future.result()
                 future.release()
         except KilledWorker as error:

@@ -44,6 +44,7 @@ BAY = bay_with(
         "unit": "nm",
         "where": {"layer": "M1"},
         "stream_by": ("tool", "module"),
+        "statistics": ("mean", "within-wafer", "map-distance"),
         "baseline_points": 8,
     },
     {
@@ -51,6 +52,7 @@ BAY = bay_with(
         "parameter": "overlay",
         "unit": "nm",
         "stream_by": ("tool",),
+        "statistics": ("translation-x", "field-scale-x", "residual"),
         "baseline_points": 8,
     },
 )
@@ -58,10 +60,10 @@ PLAN = BAY.plan
 
 
 def readings(seed: int) -> tuple[list[Wafer], list[Step]]:
-    """Five cups, of which C1 goes on longest and shifts, an overlay stream, a log of two steps."""
+    """Four cups, of which C1 goes on longest and shifts, an overlay stream, a log of two steps."""
     rng = np.random.default_rng(seed)
     wafers = lots_of(rng, 12, wafers=2) + lots_of(rng, 6, first=12, wafers=2, shift=15.0)
-    for cup in range(2, 6):
+    for cup in range(2, 5):
         wafers += lots_of(rng, 12, module=f"C{cup}", wafers=2)
     steps = [
         Step(w.lot, w.wafer, w.processed + (hours(d) - hours(0)), {**c, "layer": "M1"})
@@ -150,8 +152,8 @@ def test_the_same_bits_as_the_nightly_passes(passed: Engine) -> None:
     before = state(passed)
     report = run(passed, bay_on(passed))
     assert_same(state(passed), before)
-    assert len(before["points"]) == report.points > 390
-    assert (report.partitions, report.streams) == (PARTS, 6)
+    assert len(before["points"]) == report.points > 180
+    assert (report.partitions, report.streams) == (PARTS, 5)
     assert report.signals == report.signals_before > 0
     assert report.new_baselines == 0
     assert report.as_of_us == to_us(hours(END))
@@ -177,7 +179,7 @@ def test_a_changed_plan_ends_like_a_pass_with_it(passed: Engine, changes: dict[s
     assert evaluated_anew(passed, bay) == report.points
     assert_same(state(passed), found)
     of_first = {row[1] for row in found["points"] if row[0] == repr("M1 thickness")}
-    assert len(of_first) == (1 if "where" in changes else 5), "streams it no longer takes are gone"
+    assert len(of_first) == (1 if "where" in changes else 4), "streams it no longer takes are gone"
 
 
 def evaluated_anew(engine: Engine, bay: Bay) -> int:
@@ -192,7 +194,7 @@ def test_the_next_pass_hears_of_it_once(passed: Engine) -> None:
     assert evaluate(passed, bay, hours(END)).touched == {}
     run(passed, bay)
     first, second = (evaluate(passed, bay, hours(END)).touched for _ in range(2))
-    assert len(first) == 6
+    assert len(first) == 5
     assert second == {}
 
 
@@ -201,7 +203,7 @@ def test_history_that_no_pass_has_seen(tmp_path: Path) -> None:
     add(engine, *readings(2))
     report = run(engine, bay_on(engine), Wanted(clock_us=to_us(hours(END))))
     found = state(engine)
-    assert report.new_baselines == 6
+    assert report.new_baselines == 5
     assert evaluate(engine, bay_on(engine), hours(END)).points_evaluated == 0
     assert evaluated_anew(engine, bay_on(engine)) == report.points
     assert_same(state(engine), found)
@@ -227,11 +229,11 @@ def test_limits_by_hand_are_heeded(passed: Engine) -> None:
 
 def test_a_run_that_was_stopped_goes_on_where_it_was(passed: Engine) -> None:
     bay = bay_on(passed, with_changes(rules=("beyond-2s",), baseline_points=9))
-    for stop in (2, 1):
+    for stop in (1, 1):
         with pytest.raises(KeyboardInterrupt):
             run(passed, bay, stop=stop)
     report = run(passed, bay)
-    assert (report.partitions, report.done_before) == (PARTS, 3)
+    assert (report.partitions, report.done_before) == (PARTS, 2)
     stopped = state(passed)
     again = run(passed, bay)
     assert (again.partitions, again.done_before) == (PARTS, 0)
@@ -301,7 +303,7 @@ def test_a_run_taken_over_says_so(passed: Engine) -> None:
     class TakenOver(InThisProcess):
         def each(self, task: Callable[[Any], Any], items: Sequence[Any]) -> Iterator[Any]:
             for number, item in enumerate(items):
-                if task is evaluate_share and number == 2:
+                if task is evaluate_share and number == 1:
                     evaluate(passed, bay, hours(END))
                 yield task(item)
 
@@ -327,4 +329,3 @@ def test_other_code_on_a_worker_is_refused(passed: Engine) -> None:
     other = replace(share.job, versions={**versions(), "numpy": "1.0"})
     with pytest.raises(VersionsDifferError, match=r"numpy .* \(wanted 1\.0\).*constraints\.txt"):
         evaluate_share(replace(share, job=other))
-    run(passed, bay_on(passed))
