@@ -116,6 +116,7 @@ layouts = Table(
     Column("n", Integer, nullable=False),
 )
 
+# PostgreSQL holds its three references by triggers, a statement at a time: see migration 0004.
 measurements = Table(
     "measurements",
     metadata,
