@@ -146,11 +146,14 @@ def _lots_of(case: Case, level: Level, begin: float) -> int:
 
 
 def _suspects(
-    case: Case, effect: Effect, names: _Names, value: float, lead: FamilySize
+    case: Case, effect: Effect, names: _Names, value: float | None, lead: FamilySize
 ) -> list[dict[str, Any]]:
     # The engine sizes spreads and maps in normal scores; their change is told in the unit of the
-    # magnitude, in proportion.
-    scale = value / lead.value if kind_of(lead.statistic) != "mean" and lead.value else 1.0
+    # magnitude, in proportion. Where that is not known (no wafer in the window lies before the
+    # effect) neither is theirs.
+    scale = 1.0
+    if kind_of(lead.statistic) != "mean" and lead.value:
+        scale = np.nan if value is None else value / lead.value
     out: list[dict[str, Any]] = []
     seen: set[tuple[str, str]] = set()
     for one in effect.suspects:
