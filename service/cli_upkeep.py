@@ -29,7 +29,13 @@ def register(app: typer.Typer) -> None:
     app.command()(audit)
 
 
-def health(config: ConfigOption = None, as_json: JsonOption = False) -> None:
+def health(
+    config: ConfigOption = None,
+    strict: Annotated[
+        bool, typer.Option("--strict", help="End with status 1 when something needs a hand.")
+    ] = False,
+    as_json: JsonOption = False,
+) -> None:
     """Say whether the service is well: last night, mail, lock, schema, disk, feeds."""
     from service.health import examine
 
@@ -39,6 +45,8 @@ def health(config: ConfigOption = None, as_json: JsonOption = False) -> None:
     else:
         for line in report.lines():
             say(line)
+    if strict and not report.well:
+        raise typer.Exit(COULD_NOT_FINISH)
 
 
 def backup(
