@@ -21,7 +21,7 @@ import pytest
 from sqlalchemy import Connection, Engine, text
 from sqlalchemy.engine import make_url
 
-from config.load import load_bay
+from config.load import Bay, load_bay
 from spc.monitoring.evaluation import evaluate
 from spc.monitoring.reevaluation import Report, Wanted, _job, reevaluate
 from spc.monitoring.reevaluation_engines import EngineError, InThisProcess, Processes, runner_for
@@ -278,3 +278,44 @@ def test_the_command_line_tells_what_it_did(one_process: Any, tmp_path: Path) ->
     status, _, told = bay.here("reevaluate", "--characteristic", "M7")
     assert status == 2
     assert "one of: M1 thickness, M1 overlay" in told
+
+
+@pytest.mark.slow
+@pytest.mark.postgres
+def test_with_tls_only_those_who_hold_a_certificate_are_let_in(
+    engine_there: Engine, one_process: Any, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    import trustme
+
+    def certificate(authority: Any, name: str) -> dict[str, Path]:
+        files = {key: tmp_path / f"{name}-{key}.pem" for key in ("ca", "cert", "key")}
+        issued = authority.issue_cert("127.0.0.1")
+        authority.cert_pem.write_to_path(files["ca"])
+        issued.cert_chain_pems[0].write_to_path(files["cert"])
+        issued.private_key_pem.write_to_path(files["key"])
+        return files
+
+    def settings(name: str, scheduler: str, files: dict[str, Path]) -> Bay:
+        lines = [f'{key}_file = "{file}"' for key, file in files.items()]
+        extra = "\n".join([f'scheduler = "{scheduler}"', *lines, ""])
+        url = make_url(engine_there.url).set(password=None)
+        there = url.render_as_string(hide_password=False)
+        return load_bay(bay_at(tmp_path / name, extra, there).config)
+
+    ours, theirs = trustme.CA(), trustme.CA()
+    mine = certificate(ours, "ours")
+    words = ("--tls-ca-file", mine["ca"], "--tls-cert", mine["cert"], "--tls-key", mine["key"])
+    cluster = Cluster(tmp_path, 1, tls=[str(word) for word in words])
+    try:
+        with runner_for(settings("bay", cluster.address, mine)) as runner:
+            bay = settings("bay", cluster.address, mine)
+            found = reevaluate(engine_there, bay, clock(), runner, silent)
+        assert found.digest == one_process[1].digest
+        monkeypatch.setattr("spc.monitoring.reevaluation_engines.CONNECT_SECONDS", 3.0)
+        plain = cluster.address.replace("tls://", "tcp://")
+        intruder = {**certificate(theirs, "theirs"), "ca": mine["ca"]}
+        for bay in (settings("plain", plain, {}), settings("other", cluster.address, intruder)):
+            with pytest.raises(EngineError, match="not to be reached"), runner_for(bay):
+                pass
+    finally:
+        cluster.close()
