@@ -123,7 +123,7 @@ def fit_effect(
     center = sums(family, model.tells * x, n_families)
     terms = model.terms(Cross(i_raw, cross, center, points), tau2)
     net = np.maximum(terms.info, 1e-300)
-    amplitude, y, total = _amplitudes(
+    amplitude, y, value, total = _amplitudes(
         evidence, noise, level_cells, family, x, terms, model, residuals
     )  # fmt: skip
     gain = terms.log_bayes(sums(family, y * x, n_families), total)
@@ -132,7 +132,7 @@ def fit_effect(
     probability = 1.0 / (1.0 + np.exp(-odds))
     shrink = net / (net + 1.0 / tau2)
     cells = level_cells[on]
-    series = _series_sizes(evidence, noise, cells, x[on], info[cells], share[cells], y[on])
+    series = _series_sizes(evidence, noise, cells, x[on], value[on])
     explained = _explained(
         evidence, noise, series, cells, x[on], families, amplitude, probability * shrink
     )
@@ -147,9 +147,10 @@ def fit_effect(
 def _amplitudes(
     evidence: Evidence, noise: Noise, cells: IntArray, family: IntArray, x: FloatArray,
     terms: Terms, model: OffsetModel, residuals: Residuals,
-) -> tuple[FloatArray, FloatArray, Normal]:  # fmt: skip
-    """Return the amplitudes (F,), the whitened residuals of the cells and what their normal level
-    is off by. Wild values are brought in around the fit, until the amplitudes settle."""
+) -> tuple[FloatArray, FloatArray, FloatArray, Normal]:  # fmt: skip
+    """Return the amplitudes (F,), the residuals of the cells, whitened and plain, and what their
+    normal level is off by. Wild values are brought in around the fit, until the amplitudes
+    settle."""
     groups = np.zeros(len(noise.group_factor), dtype=bool)
     groups[noise.group[cells]] = True
     near = np.flatnonzero(groups[noise.group])
@@ -162,7 +163,8 @@ def _amplitudes(
     n_families = len(model.phi)
     amplitude, held = np.zeros(n_families), np.zeros(len(near))
     for _ in range(_PASSES):
-        whole = part.whiten(held + part.clip(rest - held))
+        value = held + part.clip(rest - held)
+        whole = part.whiten(value)
         change = sums(evidence.series[near], whole * monitored - before, len(base))
         y = whole[inner]
         total = model.total(sums(family, y, n_families), base + change)
@@ -171,22 +173,30 @@ def _amplitudes(
         held[inner] = amplitude[family] * x
         if np.all(np.abs(amplitude - last) ** 2 * terms.info < _SETTLED**2):
             break
-    return amplitude, y, total
+    return amplitude, y, value[inner], total
 
 
 def _series_sizes(
-    evidence: Evidence, noise: Noise, cells: IntArray, x: FloatArray, info: FloatArray,
-    share: FloatArray, y: FloatArray,
-) -> tuple[IntArray, FloatArray, FloatArray, FloatArray, IntArray]:  # fmt: skip
-    """Return series codes, own amplitude, its standard error, points, and each cell's position."""
+    evidence: Evidence, noise: Noise, cells: IntArray, x: FloatArray, value: FloatArray
+) -> tuple[IntArray, FloatArray, FloatArray, FloatArray, IntArray]:
+    """Return series codes, own amplitude, its standard error, points, and each cell's position.
+
+    Each series by itself, its points weighted by their whole variance: against the other streams
+    of its lots it would be told from the noise that they do not share, which is nearly none.
+    """
     series, at = np.unique(evidence.series[cells], return_inverse=True)
-    points = sums(at, share)
-    i = np.maximum(sums(at, info * x**2), 1e-300)
-    value = sums(at, y * x) / i
+    _, first, point = np.unique(noise.point[cells], return_index=True, return_inverse=True)
+    weight = noise.weight[cells]
+    whole = sums(point, weight)
+    mean, form = sums(point, weight * value) / whole, sums(point, weight * x) / whole
+    precision = 1.0 / (noise.lot[cells][first] + 1.0 / whole)
+    owner = at[first]
+    i = np.maximum(sums(owner, precision * form**2), 1e-300)
+    points = sums(owner, np.ones(len(first)))
     inflation = ar1_inflation(points, noise.phi[series])
-    mean_x = sums(at, info * x) / np.maximum(sums(at, info * x**2), 1e-300)
+    mean_x = sums(owner, precision * form) / i
     se = np.sqrt(inflation / i + noise.center[series] * mean_x**2)
-    return series, value, se, points, at
+    return series, sums(owner, precision * form * mean) / i, se, points, at
 
 
 def _explained(

@@ -166,7 +166,7 @@ class Search:
             if len(group) < 2:
                 continue
             best = self.state.best(self.left(group), False, self._mask(group))
-            if best is None or best.score < sum(f.score for f in group) - _MERGE_SLACK:
+            if best is None or best.score < sum(self._in_turn(group)) - _MERGE_SLACK:
                 continue
             if any(_overlap(f, best) == 0.0 for f in group):
                 continue
@@ -174,6 +174,23 @@ class Search:
             keep = [f for f in self.found if all(f is not g for g in group)]
             self.found = [*keep, replace(best, previous=min(earlier, default=None))]
             self.refit()
+
+    def _in_turn(self, group: Sequence[Found]) -> list[float]:
+        """Scores of effects taken one after the other, the strongest first, each on what those
+        before it leave. They add up to what the group explains (chain rule), which scores that
+        take all the others for granted do not: where lots share their noise, each of several
+        streams that moved together stands out only once the others are explained away."""
+        residual, rest, scores = self.left(group), list(group), []
+        while rest:
+            looks = [self._at(f.candidate, residual) for f in rest]
+            score = [-np.inf if look is None else look.score for look in looks]
+            best = int(np.argmax(score))
+            scores.append(score[best])
+            look = looks[best]
+            if look is not None:
+                residual[look.fit.cells] -= look.fit.explained
+            del rest[best]
+        return scores
 
     def _absorb(self) -> None:
         """Count consequences into their cause: a statistic over wafers of mixed context (the

@@ -44,6 +44,22 @@ def test_a_resist_batch_on_all_tracks_is_one_effect() -> None:
     assert effect.p_adjusted < 1e-6
 
 
+@pytest.mark.parametrize("seed", [9, 10])
+def test_streams_that_share_the_noise_of_their_lots_stay_one_effect(seed: int) -> None:
+    """Beside each other such streams are told apart by next to nothing: an effect on all of them
+    must neither be cut into streams nor leave a part of itself behind."""
+    fault = Fault({"resist_batch": "B7"}, {FILM: -2.5}, start=17.5)
+    evidence = replace(BAY, shared=0.95).with_faults(fault).simulate(seed)
+    (effect,) = attribute(evidence, OPTIONS, NOW * DAY)
+    assert effect.level == Level(("resist_batch",), ("B7",))
+    family = effect.sizes[effect.leading].family
+    sizes = [s for s in effect.series if evidence.family[s.series] == family]
+    away = np.array([(s.value + 2.5 * 1.265) / s.se for s in sizes])
+    assert len(away) >= 9
+    assert np.abs(away).max() < 4.0
+    assert np.mean(away**2) < 2.0
+
+
 @pytest.mark.parametrize("seed", [3, 5])
 def test_wafers_of_one_lot_at_different_times_are_not_told_apart_by_an_onset(seed: int) -> None:
     """A window that cut a lot in two would take the lot's common part for an effect."""
