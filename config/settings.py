@@ -285,7 +285,10 @@ class ComputeSettings(Strict):
         default=0, description="Processes on this machine; 0 for one a core."
     )
     partition_measurements: int = Field(
-        default=20_000, ge=1, description="Wafer measurements a partition, about; 1 GB at most."
+        default=20_000,
+        ge=1,
+        description="Wafer measurements a partition, about. A worker then needs some 0.2 GB with a "
+        "few sites a wafer, 0.5 GB with fifty.",
     )
     ca_file: Path | None = Field(default=None, description="tls:// only: whom to trust.")
     cert_file: Path | None = Field(default=None, description="tls:// only: our certificate.")

@@ -175,9 +175,11 @@ def _named(numbers: NDArray, names: Mapping[int, str]) -> NDArray:
 
 def _add(digest: hashlib._Hash, values: NDArray) -> None:
     if values.dtype == object:
-        for one in values.tolist():
-            raw = one if isinstance(one, bytes) else str(one).encode()
-            digest.update(b"%d:" % len(raw) + raw)
+        plain = values.tolist()
+        if plain and isinstance(plain[0], bytes):
+            digest.update(json.dumps([len(one) for one in plain]).encode() + b"".join(plain))
+        else:
+            digest.update(json.dumps(plain).encode())
         return
     if values.dtype.kind == "f":
         values = np.where(np.isnan(values), np.nan, values)  # one NaN is as good as another

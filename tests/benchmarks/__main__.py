@@ -5,7 +5,7 @@ from __future__ import annotations
 import runpy
 import sys
 
-NAMES = ("rules", "components", "ingest", "evaluation", "attribution")
+NAMES = ("rules", "components", "ingest", "evaluation", "attribution", "reevaluation")
 
 
 def main() -> None:

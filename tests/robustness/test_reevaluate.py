@@ -140,8 +140,13 @@ def engine_there(url: str) -> Iterator[Engine]:
 
 
 @contextmanager
-def run_held(engine: Engine, epoch: int, workers: int) -> Iterator[Connection]:
-    """Hold the row of the run, until so many workers are about to write and wait for it."""
+def run_held(
+    engine: Engine, epoch: int, workers: int, over: Callable[[], bool]
+) -> Iterator[Connection]:
+    """Hold the row of the run, until so many workers are about to write and wait for it.
+
+    `over` says whether the coordinator has ended, which it must not.
+    """
     waiting = text(
         "SELECT count(*) FROM pg_stat_activity WHERE datname = current_database() "
         "AND wait_event_type = 'Lock'"
@@ -154,10 +159,11 @@ def run_held(engine: Engine, epoch: int, workers: int) -> Iterator[Connection]:
             if connection.execute(held, {"epoch": epoch}).all():
                 return True
             connection.rollback()
+            assert not over(), "the coordinator ended by itself"
             return False
 
         wait_for(taken, every=0.005)
-        wait_for(lambda: (other.scalar(waiting) or 0) >= workers)
+        wait_for(lambda: over() or (other.scalar(waiting) or 0) >= workers)
         yield connection
         connection.rollback()
 
@@ -186,7 +192,7 @@ def test_a_cluster_has_the_same_bits_though_workers_and_coordinator_are_killed(
     try:
         words = [*command(), "reevaluate", "--json", "--config", str(bay.config)]
         first = subprocess.Popen(words, stdout=subprocess.PIPE, stderr=subprocess.PIPE)
-        with run_held(engine_there, 1, workers):
+        with run_held(engine_there, 1, workers, lambda: first.poll() is not None):
             first.kill()
             out, told = first.communicate()
         wait_for(lambda: parts_done(engine_there) >= workers)
@@ -194,7 +200,7 @@ def test_a_cluster_has_the_same_bits_though_workers_and_coordinator_are_killed(
         with runner_for(settings) as runner, ThreadPoolExecutor(1) as aside:
             assert runner.workers == workers
             run = aside.submit(reevaluate, engine_there, settings, clock(), runner, silent)
-            with run_held(engine_there, 2, workers):
+            with run_held(engine_there, 2, workers, run.done):
                 cluster.kill(0)
             found = run.result()
         assert (found.engine, found.partitions) == ("dask", PARTS)
