@@ -10,6 +10,7 @@ from __future__ import annotations
 
 import hashlib
 import re
+from concurrent.futures import Future
 from dataclasses import dataclass, replace
 from email.headerregistry import Address
 from email.message import EmailMessage
@@ -123,24 +124,30 @@ def _one_line(words: str) -> str:
 
 
 class _Pictures:
-    """PNGs of cards, each drawn once for all mails of the night."""
+    """PNGs of cards, each drawn once for all mails of the night, and beside their making."""
 
     def __init__(self, edition: Edition) -> None:
         self._edition = edition
-        self._drawn: dict[int, bytes] = {}
+        self._drawn: dict[int, Future[bytes]] = {}
+
+    def begin(self, card: ExcursionCard) -> None:
+        """Begin to draw the picture of a card, where there is something to draw."""
+        number = card.excursion.id
+        if number in self._drawn:
+            return
+        if card.chart and card.chart.points:
+            spec = figures.control_chart(card.chart, self._edition, figures.MAIL)
+        elif card.wafer_map and card.wafer_map.sites:
+            spec = figures.wafer_map(card.wafer_map, 170)
+        else:
+            return
+        self._drawn[number] = render.drawer().submit(render.png, spec)
 
     def of(self, card: ExcursionCard) -> bytes | None:
         """The picture of a card, or None where there is nothing to draw."""
-        number = card.excursion.id
-        if number not in self._drawn:
-            if card.chart and card.chart.points:
-                spec = figures.control_chart(card.chart, self._edition, figures.MAIL)
-            elif card.wafer_map and card.wafer_map.sites:
-                spec = figures.wafer_map(card.wafer_map, 170)
-            else:
-                return None
-            self._drawn[number] = render.png(spec)
-        return self._drawn[number]
+        self.begin(card)
+        drawn = self._drawn.get(card.excursion.id)
+        return None if drawn is None else drawn.result()
 
 
 def _message(
@@ -170,6 +177,8 @@ def _build(
     images: dict[str, bytes] = {}
     written = []
     clock = clock_of(view)
+    for card in cards[:n_pictures]:
+        pictures.begin(card)
     for i, card in enumerate(cards[:n_cards]):
         found = _card(card, view, clock)
         picture = pictures.of(card) if i < n_pictures else None

@@ -60,8 +60,8 @@ class Figure:
 
     name: str
     label: str
-    wide: Markup
-    narrow: Markup
+    wide: render.Picture
+    narrow: render.Picture | None
     events: tuple[tuple[str, str], ...] = ()
     key: str = ""
     note: str = ""
@@ -69,11 +69,8 @@ class Figure:
 
 def drawn(name: str, label: str, wide: Spec, narrow: Spec | None = None) -> Figure:
     """A figure from its specs; without a narrow one the wide one serves both."""
-    broad = Markup(render.svg(wide, f"{name}-w", label))  # nosec B704
-    if narrow is None:
-        return Figure(name, label, broad, Markup(""))
-    small = Markup(render.svg(narrow, f"{name}-n", label))  # nosec B704
-    return Figure(name, label, broad, small)
+    small = None if narrow is None else render.Picture(narrow, f"{name}-n", label)
+    return Figure(name, label, render.Picture(wide, f"{name}-w", label), small)
 
 
 @dataclass(frozen=True)

@@ -4,10 +4,12 @@ from __future__ import annotations
 
 import html
 import json
+import os
 import re
 import struct
 import zlib
 from collections.abc import Callable, Iterator, Mapping
+from concurrent.futures import ThreadPoolExecutor
 from functools import cache
 from typing import Any
 
@@ -83,6 +85,26 @@ def svg(spec: Spec, name: str, label: str) -> str:
         f'aria-label="{html.escape(label)}"'
     )
     return opening + ">" + rest
+
+
+class Picture:
+    """An SVG on its way into a page: drawn beside the work, and waited for by the template."""
+
+    def __init__(self, spec: Spec, name: str, label: str) -> None:
+        self._svg = drawer().submit(svg, spec, name, label)
+
+    def __html__(self) -> str:
+        """What the template puts in."""
+        return self._svg.result()
+
+
+@cache
+def drawer() -> ThreadPoolExecutor:
+    """Draws while the next figure is made ready; one, for the renderer draws one at a time."""
+    return ThreadPoolExecutor(1, thread_name_prefix="drawing")
+
+
+os.register_at_fork(after_in_child=drawer.cache_clear)  # threads do not come along
 
 
 _WASTE = re.compile(
