@@ -198,18 +198,6 @@ def test_the_next_pass_hears_of_it_once(passed: Engine) -> None:
     assert second == {}
 
 
-def test_history_that_no_pass_has_seen(tmp_path: Path) -> None:
-    engine = open_database(f"sqlite:///{tmp_path / 'new.db'}")
-    add(engine, *readings(2))
-    report = run(engine, bay_on(engine), Wanted(clock_us=to_us(hours(END))))
-    found = state(engine)
-    assert report.new_baselines == 5
-    assert evaluate(engine, bay_on(engine), hours(END)).points_evaluated == 0
-    assert evaluated_anew(engine, bay_on(engine)) == report.points
-    assert_same(state(engine), found)
-    engine.dispose()
-
-
 def test_limits_by_hand_are_heeded(passed: Engine) -> None:
     bay, anna = bay_on(passed), Hand("Anna", hours(END))
     with passed.begin() as connection:
