@@ -13,6 +13,7 @@ from concurrent.futures import ThreadPoolExecutor
 from functools import cache
 from typing import Any
 
+from reports.bundle import bundled
 from reports.style import light, role_variables
 
 Spec = Mapping[str, Any]
@@ -144,7 +145,8 @@ def live_script() -> str:
 
     # the stub of the package wants a snippet; the package does not
     make: Callable[..., str] = vl_convert.javascript_bundle
-    return make(vl_version=_VL_VERSION).replace("</script", "<\\/script")
+    script = bundled(lambda: make(vl_version=_VL_VERSION), f"vega-lite-{_VL_VERSION}")
+    return script.replace("</script", "<\\/script")
 
 
 def live_json(value: object) -> str:
