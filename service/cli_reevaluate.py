@@ -134,6 +134,6 @@ def _lines(report: Report) -> list[str]:
         lines.append(f"{report.done_before} partitions were done by a run that was stopped.")
     if report.left_to_nightly:
         names = ", ".join(report.left_to_nightly)
-        lines.append(f"Streams silent since are as they were; the next pass looks at: {names}.")
+        lines.append(f"Streams silent since then are left as they were, in: {names}.")
     lines += report.notes
     return [*lines, "Excursions follow at the next pass."]

@@ -208,7 +208,7 @@ def _connected(bay: Bay) -> Any:
             "`dask scheduler`, or take compute.scheduler out to use the cores of this machine"
         ) from error
     try:
-        client.wait_for_workers(1, timeout=CONNECT_SECONDS)
+        client.wait_for_workers(1, timeout=2 * CONNECT_SECONDS)
     except TimeoutError as error:
         client.close()
         raise EngineError(
