@@ -93,6 +93,10 @@ COMMANDS = {
         "service.cli_upkeep",
         "Verify that the record of hand actions is whole and unchanged.",
     ),
+    "retention": (
+        "service.cli_retention",
+        "Say what is archived, summed up and due; do it now; find an archived drop.",
+    ),
 }
 
 
