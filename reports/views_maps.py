@@ -13,8 +13,9 @@ from config.control_plan import Characteristic
 from config.values import unit_factor
 from reports import model
 from spc.records.contexts import chunks
+from spc.records.site_maps import site_maps
 from spc.records.stamps import to_us
-from spc.records.tables import layouts, measurements, wafer_results
+from spc.records.tables import measurements, wafer_results
 
 if TYPE_CHECKING:
     from reports.views import Reader
@@ -134,25 +135,10 @@ def _sites(
     keys = _wafers(reader, view, sorted(i for i in ids if i is not None)[:_MOST_STREAMS])
     if not keys:
         return None
-    m = measurements.c
-    rows: list[Any] = []
-    for part in chunks(sorted({key[0] for key in keys})):
-        query = (
-            select(m.lot, m.layer, m.wafer, m.parameter, m.unit, m.site_values, layouts.c.sites)
-            .join(layouts, layouts.c.id == m.layout_id)
-            .where(
-                m.lot.in_(part),
-                m.parameter.in_(parameters),
-                m.measured_us <= to_us(reader.as_of),
-                m.site_values.is_not(None),
-            )
-            .order_by(m.measured_us, m.id)
-        )
-        rows += reader.connection.execute(query).all()
-    # A wafer measured again: the later reading takes the place of the earlier one.
-    latest = {(r.lot, r.layer, r.wafer, r.parameter, r.sites): r for r in rows}
+    lots = {key[0] for key in keys}
     frames = []
-    for (lot, layer, wafer, _, _), row in latest.items():
+    for row in site_maps(reader.connection, lots, parameters, to_us(reader.as_of)):
+        lot, layer, wafer = row.lot, row.layer, row.wafer
         after = keys.get((lot, layer, wafer))
         frame = None if after is None else _frame(row, plan.unit)
         if frame is not None:

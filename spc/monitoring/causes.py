@@ -12,6 +12,7 @@ from spc.monitoring import effect_payload, watch
 from spc.monitoring.book import DAY_US, EFFECT_SHARE, QUIET_DAYS, Book, stream_keys
 from spc.monitoring.effect_payload import affected_rows
 from spc.monitoring.evidence import Case, build_case
+from spc.monitoring.map_form import form_of
 from spc.records import findings
 from spc.records.findings import Excursion
 from spc.records.stamps import to_us
@@ -75,18 +76,19 @@ class _Causes:
         payload = effect_payload.payload_of(
             self._book.connection, self._case, effect, self._book.now_us
         )
+        form = form_of(self._book.connection, self._case, effect, rows)
         same = self._same(effect, payload, known)
         if same is None:
             before = self._book.before_us
             if before is not None and not (rows["measured_us"] > before).any():
                 return False
             identity = f"effect:{'+'.join(effect.level.factors)}:{'+'.join(effect.level.names)}"
-            number = self._book.open("act", effect.form, identity, payload)
+            number = self._book.open("act", form, identity, payload)
             self._merge_loose(number, payload)
             return True
         self._book.touched.add(same.id)
         if same.status != "closed":
-            self._book.update(same, "act", effect.form, payload)
+            self._book.update(same, "act", form, payload)
             self._merge_loose(same.id, payload)
         return True
 

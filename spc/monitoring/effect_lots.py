@@ -50,7 +50,11 @@ def lots_of(
     if suspects:
         factors = tuple(suspects[0]["factor"].split("+"))
         suspicion = Suspicion(
-            factors, _levels(suspects[0]["level"], len(factors)), span.first_us, span.last_us
+            factors,
+            _levels(suspects[0]["level"], len(factors)),
+            span.first_us,
+            span.last_us,
+            own_steps(case, effect),
         )
     else:
         suspicion = Suspicion((), (), span.first_us, span.last_us)
@@ -83,6 +87,14 @@ def lots_of(
         }
         for i, row in enumerate(_rows(frame))
     ]
+
+
+def own_steps(case: Case, effect: Effect) -> frozenset[str]:
+    """The steps that the moved readings belong to, where the log says."""
+    families = {s.family for s in effect.sizes if s.moved} | {effect.sizes[effect.leading].family}
+    mine = np.isin(case.evidence.cell_family, list(families))
+    steps = np.unique(case.factors.own_step[mine].astype(str))
+    return frozenset(str(step) for step in steps if step)
 
 
 def _levels(text: str, n: int) -> tuple[str, ...]:

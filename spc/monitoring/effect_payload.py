@@ -15,7 +15,7 @@ from scipy.special import chdtri
 from sqlalchemy import Connection
 
 from config.control_plan import Characteristic
-from spc.monitoring.effect_lots import WHOLE, Span, finite, lots_of, us
+from spc.monitoring.effect_lots import WHOLE, Span, finite, lots_of, own_steps, us
 from spc.monitoring.events import events_near
 from spc.monitoring.evidence import US, Case, stream_context
 from spc.monitoring.forecast import Line, crossing
@@ -95,12 +95,7 @@ class _Names:
     are said bare (`tool`, not `coat.tool`, for a resist thickness)."""
 
     def __init__(self, case: Case, effect: Effect) -> None:
-        lead = effect.sizes[effect.leading]
-        families = {s.family for s in effect.sizes if s.moved} | {lead.family}
-        of_cell = case.evidence.family[case.evidence.series]
-        mine = np.isin(of_cell, list(families))
-        steps = case.factors.own_step[mine]
-        self._own = {str(step) for step in np.unique(steps.astype(str)) if step}
+        self._own = own_steps(case, effect)
 
     def factor(self, name: str) -> str:
         step, dot, bare = name.rpartition(".")

@@ -26,12 +26,17 @@ MEASURED_FACTORS = frozenset({"gauge"})
 
 @dataclass(frozen=True)
 class Suspicion:
-    """A context and a span of time: `factors` and `levels` as in the contract, split at `+`."""
+    """A context and a span of time: `factors` and `levels` as in the contract, split at `+`.
+
+    `steps` are those whose log rows a bare column speaks of, so that the tool of a coat is not
+    taken for a tool of the same name that developed; empty where they are not known: any step.
+    """
 
     factors: tuple[str, ...]
     levels: tuple[str, ...]
     first_us: int
     last_us: int
+    steps: frozenset[str] = frozenset()
 
     def wanted(self) -> dict[str, str]:
         """{factor: level}."""
@@ -107,7 +112,8 @@ def _processed(connection: Connection, suspicion: Suspicion) -> pd.DataFrame:
     parts += [{f: v} for f, v in suspicion.wanted().items() if "." in f]
     result: pd.DataFrame | None = None
     for part in parts:
-        ids = lot_records.matching_contexts(connection, partial(_row_matches, part))
+        matches = partial(_row_matches, part, suspicion.steps)
+        ids = lot_records.matching_contexts(connection, matches)
         rows = lot_records.processed_between(
             connection, list(ids), suspicion.first_us, suspicion.last_us
         )
@@ -121,10 +127,12 @@ def _processed(connection: Connection, suspicion: Suspicion) -> pd.DataFrame:
     return result.rename(columns={"processed_us": "at_us"})
 
 
-def _row_matches(part: Mapping[str, str], columns: Mapping[str, str]) -> bool:
+def _row_matches(
+    part: Mapping[str, str], steps: frozenset[str], columns: Mapping[str, str]
+) -> bool:
     for factor, level in part.items():
         step, dot, column = factor.rpartition(".")
-        if dot and step_name(columns) != step:
+        if step_name(columns) not in ({step} if dot else steps or {step_name(columns)}):
             return False
         if columns.get(column if dot else factor, "") != level:
             return False

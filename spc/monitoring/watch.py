@@ -131,7 +131,9 @@ def payload_of(connection: Connection, case: Case, loose: Loose, as_of_us: int) 
     if named:
         wanted = {**characteristic.where, **named}
         last = min(as_of_us, int(rows["at_us"].max()))
-        suspicion = Suspicion(tuple(wanted), tuple(wanted.values()), begin, last)
+        cells = np.isin(case.cell_point, rows.index)
+        steps = frozenset(case.factors.own_step[cells].astype(str).tolist()) - {""}
+        suspicion = Suspicion(tuple(wanted), tuple(wanted.values()), begin, last, steps)
         frame = lots_at_risk(connection, suspicion, characteristic.parameters, as_of_us)
         lots = _lots(frame, characteristic.unit)
     return {
