@@ -33,7 +33,8 @@ from tests.monitoring.bench import Step, Wafer, add, hours, lots_of
 from tests.monitoring.test_reevaluation import END, readings
 from tests.monitoring.test_replay import assert_same, state
 from tests.robustness.cluster import Cluster, wait_for
-from tests.robustness.smallbay import SmallBay, command, make
+from tests.robustness.smallbay import PLAN as NIGHTS_PLAN
+from tests.robustness.smallbay import SHIFTED_FROM, SmallBay, command, make
 
 PLAN = """
 [[characteristic]]
@@ -325,3 +326,24 @@ def test_with_tls_only_those_who_hold_a_certificate_are_let_in(
                 pass
     finally:
         cluster.close()
+
+
+@pytest.mark.slow
+def test_the_next_pass_finds_the_excursions_that_it_would_have_found_alone(tmp_path: Path) -> None:
+    """A changed plan, then the same pass with and without a re-evaluation before it."""
+    plan = NIGHTS_PLAN.replace("baseline_points = 10", "baseline_points = 8")
+    alone = make(tmp_path / "alone", nights=SHIFTED_FROM + 1)
+    alone.nightly(SHIFTED_FROM)
+    before = alone.json("excursions")
+    (alone.root / "control_plan.toml").write_text(
+        plan + 'rules = ["beyond-2s", "2of3-beyond-1s"]\n', "utf-8"
+    )
+    other = alone.copy(tmp_path / "other")
+    report = other.json("reevaluate")
+    assert other.json("excursions") == before, "it leaves them alone"
+    assert report["signals"] > report["signals_before"]
+    for bay in (alone, other):
+        bay.nightly(SHIFTED_FROM)
+    assert other.json("excursions") == alone.json("excursions")
+    points = [b.json("points", "--characteristic", "M1 thickness") for b in (alone, other)]
+    assert points[0] == points[1]
