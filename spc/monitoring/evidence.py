@@ -244,9 +244,7 @@ def _evidence(
     at = points["at_us"].to_numpy(np.float64)[row] / US
     numbers = {c.name: i for i, c in enumerate(plan.characteristic)}
     characteristic = np.array([numbers[name_of[int(stream)]] for stream, _ in series], np.int64)
-    family = pd.MultiIndex.from_arrays([characteristic, [name for _, name in series]]).factorize()[
-        0
-    ]
+    kind, family = _families(plan, characteristic, [str(name) for _, name in series])
     last_set = points.groupby("series")["baseline_id"].last()
     set_of = last_set.reindex(range(len(series))).to_numpy(np.int64)
     names = np.array([name for _, name in series], object)
@@ -268,13 +266,25 @@ def _evidence(
         levels=factors.levels,
         factors=factors.names,
         level_names=factors.level_names,
-        family=np.asarray(family, np.int64),
+        family=family,
         characteristic=characteristic,
         statistic=tuple(str(name) for _, name in series),
         var_center=var_center,
         phi=phi,
         t_level=factors.times,
+        kind=kind,
     )
+
+
+def _families(
+    plan: ControlPlan, characteristic: IntArray, statistics: list[str]
+) -> tuple[IntArray, IntArray]:
+    """Kind (statistic of a parameter) and family (of a characteristic) of each series, the
+    families of a kind one after the other."""
+    names = np.array([[plan.characteristic[c].parameter for c in characteristic], statistics])
+    kind = np.unique(names, axis=1, return_inverse=True)[1].ravel()
+    family = np.unique(np.stack([kind, characteristic]), axis=1, return_inverse=True)[1].ravel()
+    return kind.astype(np.int64), family.astype(np.int64)
 
 
 def characteristic_of(case: Case, series: int) -> Characteristic:

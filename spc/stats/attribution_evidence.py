@@ -60,6 +60,8 @@ class Evidence:
     `measured_factors` act when the wafer is measured (their onsets run on `t_measure`).
     `t_level`, shape (n, n_factors), optional: when each factor acted on the cell's wafers, in
     seconds (the coat time behind a CD); not finite means unknown: the default time is taken.
+    `kind`, shape (m,), optional: code of the statistic of a parameter that a series' family belongs
+    to; the family codes of a kind follow each other. Without it every family is of its own kind.
 
     Raises ValueError naming the array where shapes, codes, variances or times do not fit.
     """
@@ -83,6 +85,7 @@ class Evidence:
     phi: FloatArray
     measured_factors: frozenset[str] = frozenset({"gauge"})
     t_level: FloatArray | None = None
+    kind: IntArray | None = None
 
     def __post_init__(self) -> None:
         n, m = len(self.series), len(self.family)
@@ -104,6 +107,11 @@ class Evidence:
             raise ValueError("var_lot, var_center: a variance is negative")
         if np.any(np.abs(self.phi) >= 1.0):
             raise ValueError("phi: an autocorrelation is outside (-1, 1)")
+        if self.kind is not None:
+            _check_codes("kind", self.kind, m, None)
+            kinds = self.family_kind()
+            if np.any(np.bincount(kinds[np.r_[True, kinds[1:] != kinds[:-1]]]) > 1):
+                raise ValueError("kind: the family codes of a kind have to follow each other")
         self._check_levels(n)
 
     def _check_levels(self, n: int) -> None:
@@ -140,6 +148,13 @@ class Evidence:
         """Return the characteristic of each family, shape (n_families,)."""
         out = np.full(self.n_families, -1, dtype=np.int64)
         out[self.family] = self.characteristic
+        return out
+
+    def family_kind(self) -> IntArray:
+        """Return the kind of each family, shape (n_families,)."""
+        out = np.arange(self.n_families)
+        if self.kind is not None:
+            out[self.family] = self.kind
         return out
 
     def is_measured(self, factors: tuple[int, ...]) -> bool:

@@ -21,6 +21,7 @@ from spc.stats.attribution_evidence import (
     IntArray,
     sums,
 )
+from spc.stats.attribution_inclusion import Inclusion
 from spc.stats.attribution_noise import Noise, ar1_inflation
 from spc.stats.attribution_profile import Shape
 from spc.stats.attribution_search import series_scores
@@ -29,7 +30,6 @@ from spc.stats.attribution_windows import (
     Normal,
     OffsetModel,
     Terms,
-    inclusion,
     offset_model,
 )
 
@@ -127,9 +127,7 @@ def fit_effect(
         evidence, noise, level_cells, family, x, terms, model, residuals
     )  # fmt: skip
     gain = terms.log_bayes(sums(family, y * x, n_families), total)
-    log_pi = inclusion(evidence, families, np.array([0]))
-    odds = np.clip(log_pi - np.log1p(-np.exp(log_pi)) + gain, -50.0, 50.0)
-    probability = 1.0 / (1.0 + np.exp(-odds))
+    probability = Inclusion.of(evidence, families, np.array([0])).probability(gain)
     shrink = net / (net + 1.0 / tau2)
     cells = level_cells[on]
     series = _series_sizes(evidence, noise, cells, x[on], value[on])

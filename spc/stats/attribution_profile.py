@@ -23,6 +23,7 @@ from spc.stats.attribution_evidence import (
     IntArray,
     sums,
 )
+from spc.stats.attribution_inclusion import Inclusion
 from spc.stats.attribution_noise import Noise
 from spc.stats.attribution_search import series_scores
 from spc.stats.attribution_windows import (
@@ -30,7 +31,6 @@ from spc.stats.attribution_windows import (
     Cross,
     Normal,
     OffsetModel,
-    inclusion,
     new_cells,
     offset_model,
 )
@@ -117,7 +117,7 @@ class _Look:
     time: FloatArray
     model: OffsetModel
     series_score: FloatArray
-    log_pi: FloatArray
+    prior: Inclusion
     tau2: FloatArray
     lot: IntArray
     new: BoolArray
@@ -141,7 +141,7 @@ class _Look:
             whole=model.tells,
             time=(seconds - events[-1]) / DAY, model=model,
             series_score=series_scores(evidence, y),
-            log_pi=inclusion(evidence, families, np.array([0])),
+            prior=Inclusion.of(evidence, families, np.array([0])),
             tau2=(options.prior_sigmas * noise.sigma[families]) ** 2,
             lot=evidence.lot[cells], new=new_cells(evidence, options)[cells], options=options,
             origin=float(events[-1]),
@@ -150,7 +150,7 @@ class _Look:
 
     def forms(self, bins: IntArray) -> _Forms:
         """Score all windows whose ends are on `bins` (indices of events that begin a bin)."""
-        k, n_families = len(bins), len(self.log_pi)
+        k, n_families = len(bins), len(self.tau2)
         at = np.searchsorted(bins, self.event, side="right") - 1
         key = self.family * k + at
 
@@ -208,14 +208,11 @@ class _Look:
         )  # fmt: skip
 
     def _over_families(self, b: FloatArray) -> FloatArray:
-        shape = (-1,) + (1,) * (b.ndim - 1)
-        pi = self.log_pi.reshape(shape)
-        out: FloatArray = np.logaddexp(np.log1p(-np.exp(pi)), pi + b).sum(0)
-        return out
+        return self.prior.score(b)[0]
 
     def _lots(self, total: Normal) -> tuple[FloatArray, FloatArray]:
         lots, entry = np.unique(self.lot, return_inverse=True)
-        n_families = len(self.log_pi)
+        n_families = len(self.tau2)
         key = self.family * len(lots) + entry
 
         def table(weight: FloatArray) -> FloatArray:

@@ -6,9 +6,9 @@ of sums and its cumulative sums give every onset. With a normal prior N(0, tau^2
 
     log BF_f = S^2 / (2 (I + 1/tau^2)) - log(1 + I tau^2) / 2,
 
-a family takes part with probability pi, and a candidate's score is
+which families take part is unknown (`attribution_inclusion`), and a candidate's score is
 
-    sum_f log(1 - pi + pi BF_f) + log prior(column, level, onset, shape).
+    log sum over what took part + log prior(column, level, onset, shape).
 
 All priors add up to one, so exp(score) has expectation at most 1 when nothing happened, and
 P(best score >= u) <= exp(-u) (Markov). Amplitudes are shared by all series of a level in a family:
@@ -30,6 +30,7 @@ from spc.stats.attribution_evidence import (
     IntArray,
     sums,
 )
+from spc.stats.attribution_inclusion import Inclusion
 from spc.stats.attribution_noise import Noise
 from spc.stats.attribution_windows import (
     Normal,
@@ -37,7 +38,6 @@ from spc.stats.attribution_windows import (
     WindowBuilder,
     Windows,
     graded_bins,
-    inclusion,
     new_cells,
     offset_model,
     suffix_sums,
@@ -63,8 +63,8 @@ class Plan:
     start: IntArray
     family: IntArray
     edges: FloatArray
-    log_pi: FloatArray
-    log_not: FloatArray
+    prior: Inclusion
+    lot_prior: Inclusion
     model: OffsetModel
     windows: tuple[Windows, ...]
     lot_cells: IntArray
@@ -115,8 +115,7 @@ def scan(plan: Plan, y: FloatArray, series_score: FloatArray) -> Best:
                 begin, stop = windows.first, windows.first + windows.prior.shape[1]
                 s = c0[:, begin:stop] - c0[:, begin + windows.width : stop + windows.width]
             b = windows.terms.log_bayes(s, total)
-            b = np.logaddexp(plan.log_not[:, None], plan.log_pi[:, None] + b)
-            table = np.add.reduceat(b, plan.start, axis=0) + windows.prior
+            table = plan.prior.score(b) + windows.prior
             at = table.argmax(1)
             best = table[np.arange(n_levels), at]
             at = at + windows.first
@@ -138,8 +137,7 @@ def _scan_lots(
         return best, at
     s = sums(plan.lot_pair, own[plan.lot_cells], len(plan.lot_owner))
     b = windows.terms.log_bayes(s, total.rows(plan.lot_owner))
-    b = np.logaddexp(plan.log_not[plan.lot_owner], plan.log_pi[plan.lot_owner] + b)
-    value = np.add.reduceat(b, plan.lot_start) + windows.prior
+    value = plan.lot_prior.score(b) + windows.prior
     order = np.lexsort((-value, plan.lot_level))
     levels, first = np.unique(plan.lot_level[order], return_index=True)
     at[levels] = order[first]
@@ -187,7 +185,7 @@ def make_plan(
         evidence, noise, cells, pair, info[cells], share[cells],
         offset_variance[keys // n_families, keys % n_families],
     )  # fmt: skip
-    log_pi = inclusion(evidence, keys % n_families, start)
+    prior = Inclusion.of(evidence, keys % n_families, start)
     builder = WindowBuilder(
         evidence=evidence, noise=noise, options=options, column=column, cells=cells, pair=pair,
         level=level, bins=bins, edges=edges, time=time, info=info[cells], share=share[cells],
@@ -197,8 +195,8 @@ def make_plan(
     windows, lots = builder.build()
     return Plan(
         column=column, cells=cells, pair=pair, bin=bins, time=time, active=active, start=start,
-        family=keys % n_families, edges=edges, log_pi=log_pi, log_not=np.log1p(-np.exp(log_pi)),
-        model=model,
+        family=keys % n_families, edges=edges, prior=prior,
+        lot_prior=prior.entries(lots[2], lots[3]), model=model,
         windows=windows, lot_cells=lots[0], lot_pair=lots[1], lot_owner=lots[2],
         lot_start=lots[3], lot_code=lots[4], lot_level=lots[5],
     )  # fmt: skip

@@ -13,7 +13,6 @@ from spc.stats.attribution_evidence import (
     Evidence,
     FloatArray,
     IntArray,
-    statistic_class,
     sums,
 )
 from spc.stats.attribution_noise import Noise, ar1_inflation
@@ -152,18 +151,6 @@ def new_cells(evidence: Evidence, options: AttributionOptions) -> BoolArray:
     if options.since is None:
         return np.ones(len(evidence.series), dtype=bool)
     return evidence.t_measure > options.since
-
-
-def inclusion(evidence: Evidence, family: IntArray, start: IntArray) -> FloatArray:
-    """Return the log prior probability that a family moves when its level does, shape (P,).
-
-    About one and a half families are expected to move, means twice as often as others.
-    """
-    names = evidence.family_statistic()
-    weight = np.array([1.0 if statistic_class(n) == "mean" else 0.5 for n in names])[family]
-    total = np.add.reduceat(weight, start)
-    size = np.diff(np.append(start, len(family)))
-    return np.log(np.minimum(0.5, 1.5 * weight / np.repeat(total, size)))
 
 
 def graded_bins(
