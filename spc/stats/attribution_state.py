@@ -253,10 +253,15 @@ class State:
         return min(twins, key=lambda f: (self._rank(f.candidate.column), -f.score))
 
     def _same_thing(self, a: Found, b: Found) -> bool:
-        """Whether the columns of two levels split all cells of the moved families alike."""
+        """Whether two levels hold the same cells of the moved families all through, before the
+        effect too: nothing can tell the only reticle of a product from its recipe."""
         moved = a.fit.telling()
         use = np.isin(self.evidence.cell_family, moved)
-        return split_alike(a.candidate.column.codes[use], b.candidate.column.codes[use])
+        one, two = a.candidate, b.candidate
+        if split_alike(one.column.codes[use], two.column.codes[use]):
+            return True
+        cells = [np.flatnonzero(use & c.column.cells(c.level)) for c in (one, two)]
+        return jaccard(*cells) >= ALIAS
 
     def _rank(self, column: Column) -> int:
         return next((i for i, c in enumerate(self.columns) if c is column), len(self.columns))
