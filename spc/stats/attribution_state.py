@@ -36,6 +36,7 @@ from spc.stats.attribution_search import Plan, make_plan, scan, series_scores
 
 ALIAS = 0.97
 _KEEP = 8
+_FEW = 3
 _CLOSE = 5.0
 _TIE = 2.0
 _REFINE = 2
@@ -203,13 +204,18 @@ class State:
         best = self._preferred(found)
         if best.candidate.column.factors == (WHOLE,):
             return self._instead(best, self.columns, y, residual)
-        if best.profile.shape.lot >= 0:
-            # One lot has one level of everything, and what spans many lots was good on the others:
-            # the machine comes first, then the caller's order.
+        if best.profile.shape.lot >= 0 or self._few(best):
+            # A lot or two have one level of everything, and what spans many lots was good on the
+            # others: the machine comes first, then the caller's order.
             ranked = sorted(self.columns, key=lambda c: not is_machine(c.factors))
             at = next((i for i, c in enumerate(ranked) if c is best.candidate.column), len(ranked))
             return self._instead(best, tuple(ranked[:at]), y, residual)
         return best
+
+    def _few(self, found: Found) -> bool:
+        """Whether an effect that is over was seen on no more than a few lots."""
+        over = np.isfinite(found.profile.shape.end)
+        return bool(over and np.unique(self.evidence.lot[found.fit.cells]).size <= _FEW)
 
     def _instead(
         self, found: Found, columns: tuple[Column, ...], y: FloatArray, residual: FloatArray
