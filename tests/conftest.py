@@ -13,10 +13,13 @@ from typing import TYPE_CHECKING, Any
 
 import pytest
 
+from tests import on_postgres
+
 if TYPE_CHECKING:
     from sqlalchemy import Engine
 
-SHARED = Path(__file__).resolve().parents[2] / "shared" / "reference"
+ROOT = Path(__file__).resolve().parents[1]
+SHARED = ROOT.parent / "shared" / "reference"
 
 
 def skip_or_fail(reason: str) -> None:
@@ -39,6 +42,35 @@ def shared_reference() -> Callable[[str], Any]:
     return load
 
 
+# ---- the whole suite on PostgreSQL ---------------------------------------------------------------
+
+
+def pytest_collection_modifyitems(config: pytest.Config, items: list[pytest.Item]) -> None:
+    """Leave out what is about SQLite where the whole suite runs on PostgreSQL."""
+    if not on_postgres.wanted():
+        return
+    out = {item for item in items if item.get_closest_marker("sqlite")}
+    out |= {
+        item
+        for item in items
+        if "engine" in getattr(item, "fixturenames", ()) and "[sqlite" in item.name
+    }
+    config.hook.pytest_deselected(items=list(out))
+    items[:] = [item for item in items if item not in out]
+
+
+@pytest.fixture(scope="session", autouse=True)
+def _all_on_postgres(request: pytest.FixtureRequest) -> None:
+    """Let every SQLite file stand for a database of the server, where the setting asks for it."""
+    if not on_postgres.wanted():
+        return
+    create = request.getfixturevalue("postgres_server")
+    os.environ[on_postgres.SERVER] = create("the_suite")
+    paths = [str(on_postgres.SITE), str(ROOT), os.environ.get("PYTHONPATH", "")]
+    os.environ["PYTHONPATH"] = os.pathsep.join(filter(None, paths))
+    on_postgres.install()
+
+
 # ---- a database: SQLite and PostgreSQL ---------------------------------------------------------
 
 
@@ -48,6 +80,9 @@ def _sqlite_template(tmp_path_factory: pytest.TempPathFactory) -> Path:
     from spc.records.sessions import open_database
 
     file = tmp_path_factory.mktemp("template") / "bay.db"
+    if on_postgres.wanted():
+        file.touch()  # a copy of it stands for a new database with the schema
+        return file
     database = open_database(f"sqlite:///{file}")
     with database.connect() as connection:
         connection.exec_driver_sql("COMMIT")

@@ -105,8 +105,9 @@ def crash_and_recover(tmp_path: Path, kills: int, seed: int) -> None:
     killed = kill_passes(tmp_path, kills, seed)
     intake.take()
     assert state(intake) == undisturbed(intake, tmp_path)
-    assert intake.query("PRAGMA integrity_check") == [("ok",)]
-    assert intake.query("PRAGMA foreign_key_check") == []
+    if engine.dialect.name == "sqlite":
+        assert intake.query("PRAGMA integrity_check") == [("ok",)]
+        assert intake.query("PRAGMA foreign_key_check") == []
     assert killed > 0
     engine.dispose()
 

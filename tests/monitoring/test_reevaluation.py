@@ -31,6 +31,7 @@ from spc.monitoring.reevaluation_tasks import (
 )
 from spc.records.sessions import open_database, reading
 from spc.records.stamps import to_us
+from tests import on_postgres
 from tests.monitoring.bench import Step, Wafer, add, bay_with, hours, lots_of
 from tests.monitoring.test_overlay_points import marked
 from tests.monitoring.test_replay import assert_same, state
@@ -132,17 +133,19 @@ def template(tmp_path_factory: pytest.TempPathFactory, _sqlite_template: Path) -
     evaluate(database, bay_on(database), hours(END - 1))
     add(database, [w for i, w in enumerate(wafers) if i % 7 == 0])
     evaluate(database, bay_on(database), hours(END))
-    with database.connect() as connection:
-        connection.exec_driver_sql("COMMIT")
-        connection.exec_driver_sql("PRAGMA wal_checkpoint(TRUNCATE)")
+    if database.dialect.name == "sqlite":
+        with database.connect() as connection:
+            connection.exec_driver_sql("COMMIT")
+            connection.exec_driver_sql("PRAGMA wal_checkpoint(TRUNCATE)")
     database.dispose()
     return file
 
 
 @pytest.fixture
 def passed(template: Path, tmp_path: Path) -> Iterator[Engine]:
-    """A copy of it, on SQLite."""
+    """A copy of it."""
     shutil.copy(template, tmp_path / "bay.db")
+    on_postgres.copy(template.parent, tmp_path)
     database = open_database(f"sqlite:///{tmp_path / 'bay.db'}")
     yield database
     database.dispose()

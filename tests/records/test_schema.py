@@ -55,6 +55,7 @@ def read(file: Path, query: str) -> list[tuple[object, ...]]:
         return connection.execute(query).fetchall()
 
 
+@pytest.mark.sqlite
 def test_a_copy_is_kept_before_a_migration(
     tmp_path: Path, future: Path, monkeypatch: pytest.MonkeyPatch
 ) -> None:

@@ -26,6 +26,7 @@ import numpy as np
 from sqlalchemy import Engine, LargeBinary, select
 
 from spc.records.retention_tables import metadata
+from tests import on_postgres
 
 FIRST = datetime(2026, 10, 17, 5, 30, tzinfo=UTC)
 NIGHTS = 10
@@ -141,6 +142,7 @@ class SmallBay:
     def copy(self, to: Path) -> SmallBay:
         """The same bay elsewhere, with all it holds."""
         shutil.copytree(self.root, to)
+        on_postgres.copy(self.root, to)
         return SmallBay(to)
 
 

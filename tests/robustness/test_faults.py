@@ -151,6 +151,7 @@ def test_reports_on_a_disk_mounted_read_only(
     assert_recovers(bay, undisturbed)
 
 
+@pytest.mark.sqlite
 def test_the_database_on_a_full_disk(
     template: SmallBay, undisturbed: SmallBay, small_disk: Path, tmp_path: Path
 ) -> None:
@@ -189,6 +190,7 @@ def test_a_mail_folder_that_cannot_be_written_keeps_the_mail_waiting(
 # ---- the database --------------------------------------------------------------------------------
 
 
+@pytest.mark.sqlite
 def test_a_database_locked_by_another_program(
     bay: SmallBay, undisturbed: SmallBay, monkeypatch: pytest.MonkeyPatch
 ) -> None:
@@ -201,6 +203,7 @@ def test_a_database_locked_by_another_program(
     assert_recovers(bay, undisturbed)
 
 
+@pytest.mark.sqlite
 def test_a_database_that_is_none(bay: SmallBay) -> None:
     for file in bay.root.glob("bay.db*"):
         file.unlink()
@@ -208,6 +211,7 @@ def test_a_database_that_is_none(bay: SmallBay) -> None:
     assert "damaged" in night_fails(bay)
 
 
+@pytest.mark.sqlite
 def test_a_damaged_page_in_the_middle(bay: SmallBay) -> None:
     file = bay.root / "bay.db"
     data = bytearray(file.read_bytes())

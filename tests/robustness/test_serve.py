@@ -83,8 +83,9 @@ def test_asked_to_stop_during_a_pass_it_ends_after_the_file_in_hand(
     service.send_signal(signal.SIGTERM)
     assert service.wait(timeout=40) == 0
     engine = open_database(bay.url)
-    with engine.connect() as connection:
-        assert connection.exec_driver_sql("PRAGMA integrity_check").scalar() == "ok"
+    if engine.dialect.name == "sqlite":
+        with engine.connect() as connection:
+            assert connection.exec_driver_sql("PRAGMA integrity_check").scalar() == "ok"
     engine.dispose()
 
 

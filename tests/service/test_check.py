@@ -151,6 +151,7 @@ class TestWarnings:
         assert "nobody gets mail" in first
         assert second.startswith("cd: rules is empty")
 
+    @pytest.mark.sqlite
     def test_expected_more_often_than_measured(self, history: Path) -> None:
         write(history.parent, plan=PLAN.replace("36h", "6h"))
         [said] = check_bay(history).warnings
@@ -164,6 +165,7 @@ class TestWarnings:
         [said] = found.warnings
         assert said.startswith("the history cannot be read:")
 
+    @pytest.mark.sqlite
     def test_schema_of_another_version(self, history: Path) -> None:
         import sqlite3
 
@@ -190,6 +192,7 @@ class TestBudget:
         assert {p.name for p in tmp_path.iterdir()} == {"bay.toml", "control_plan.toml", "drops"}
         assert any("no history yet" in line for line in found.lines)
 
+    @pytest.mark.sqlite
     def test_with_history(self, history: Path) -> None:
         """10 streams x 2 points a night: 20 x 0.03080 with all four rules, 20 x 0.01646 with
         limits known (long-run rates of the set, see tests/monitoring/test_alarm_budget.py)."""
@@ -211,6 +214,7 @@ class TestBudget:
         # 0.5 a night of 20 points: once in 40 points.
         assert all(d["arl0"] >= 40.0 and d["shift"] == 1.0 for d in said["designs"])
 
+    @pytest.mark.sqlite
     def test_lines_for_people(self, history: Path) -> None:
         lines = check_bay(history).lines
         assert lines[0].startswith("The configuration of North bay has no mistakes:")
@@ -220,6 +224,7 @@ class TestBudget:
         [row] = [line for line in lines if line.startswith("the whole bay")]
         assert row.split()[3:] == ["10", "20.0", "0.616", "0.405"]
 
+    @pytest.mark.sqlite
     def test_database_that_is_in_use(self, history: Path) -> None:
         """A writer in the middle of its transaction does not keep the check waiting."""
         engine = open_database(f"sqlite:///{history.parent}/bay.db")
@@ -229,6 +234,7 @@ class TestBudget:
             connection.rollback()
         engine.dispose()
 
+    @pytest.mark.sqlite
     def test_folder_with_odd_characters(self, history: Path) -> None:
         odd = history.parent.parent / "what? 100% #1"
         shutil.copytree(history.parent, odd)
