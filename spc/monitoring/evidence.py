@@ -71,9 +71,11 @@ def build_case(
     points = points[points["stream_id"].isin(streams["stream_id"])].reset_index(drop=True)
     if points.empty:
         return None
-    first = int(points["at_us"].min())
-    wafers = history.wafers_of(connection, points["stream_id"].unique().tolist(), first)
-    rows = limit_records.by_ids(connection, points["baseline_id"].unique().tolist())
+    set_ids = points["baseline_id"].unique().tolist()
+    stream_ids = points["stream_id"].unique().tolist()
+    wafers = history.wafers_of(connection, stream_ids, since_us, set_ids)
+    wafers = wafers[wafers["at_us"] >= points["at_us"].min()].reset_index(drop=True)
+    rows = limit_records.by_ids(connection, set_ids)
     sets = {row.id: limit_set(row) for row in rows}
     series = list(dict.fromkeys(zip(points["stream_id"], points["statistic"], strict=True)))
     code = {key: i for i, key in enumerate(series)}

@@ -9,8 +9,9 @@ import pandas as pd
 from sqlalchemy import Connection, or_, select
 
 from spc.records.contexts import chunks
-from spc.records.tables import points, process_log, streams, wafer_results
+from spc.records.tables import baselines, points, process_log, streams, wafer_results
 
+_WEEK_US = 7 * 86_400_000_000
 _POINT_NAMES = (
     "stream_id",
     "statistic",
@@ -76,15 +77,31 @@ def points_since(connection: Connection, since_us: int) -> pd.DataFrame:
     return frame.sort_values(keys, ignore_index=True)
 
 
-def wafers_of(connection: Connection, stream_ids: Sequence[int], since_us: int) -> pd.DataFrame:
-    """Wafer results of streams from a stamp on."""
-    rows: list[Any] = []
+def wafers_of(
+    connection: Connection, stream_ids: Sequence[int], since_us: int, set_ids: Sequence[int]
+) -> pd.DataFrame:
+    """Wafer results of streams from a stamp on, and those behind the baselines of limit sets.
+
+    With a week on either side, for the wafers of a lot are spread over time. What lies between is
+    not read, or a night would take the longer the older its bay is. Sorted by stream, at_us, lot,
+    layer, wafer.
+    """
+    w, b = wafer_results.c, baselines.c
+    columns = [w[name] for name in _WAFER_NAMES]
+    rows: dict[tuple[Any, ...], tuple[Any, ...]] = {}  # by stream, lot, layer and wafer
     for part in chunks(sorted(set(map(int, stream_ids)))):
-        query = select(*(wafer_results.c[name] for name in _WAFER_NAMES)).where(
-            wafer_results.c.stream_id.in_(part), wafer_results.c.at_us >= since_us
+        recent = select(*columns).where(w.stream_id.in_(part), w.at_us >= since_us - _WEEK_US)
+        rows.update((tuple(row[:4]), tuple(row)) for row in connection.execute(recent))
+    for part in chunks(sorted(set(map(int, set_ids)))):
+        old = select(*columns).where(
+            b.id.in_(part),
+            w.stream_id == b.stream_id,
+            w.at_us.between(b.first_us - _WEEK_US, b.last_us + _WEEK_US),
         )
-        rows += connection.execute(query).all()
-    return pd.DataFrame([tuple(row) for row in rows], columns=list(_WAFER_NAMES))
+        rows.update((tuple(row[:4]), tuple(row)) for row in connection.execute(old))
+    frame = pd.DataFrame(list(rows.values()), columns=list(_WAFER_NAMES))
+    keys = ["stream_id", "at_us", "lot", "layer", "wafer"]
+    return frame.sort_values(keys, ignore_index=True)
 
 
 def step_stamps(
