@@ -19,7 +19,7 @@ from spc.stats.attribution_calibration import Calibration, calibrate
 from spc.stats.attribution_candidates import Candidate, Column, conjunction_within
 from spc.stats.attribution_effects import Effect
 from spc.stats.attribution_evidence import FloatArray, statistic_class
-from spc.stats.attribution_state import Found, State
+from spc.stats.attribution_state import Found, State, common_part
 
 _HOPELESS = -5.0
 _BORNE_OUT = 3.0
@@ -148,7 +148,7 @@ class Search:
             return
         # A cause once named is only given up for one that is clearly better.
         needed = _BETTER if found.fresh else _CLEARLY_BETTER
-        if best.score > found.score + needed and _overlap(best, found) > 0.3:
+        if best.score > found.score + needed and common_part(best, found) > 0.3:
             self.found[i] = replace(best, previous=found.previous)
 
     def _mask(self, effects: Sequence[Found]) -> np.ndarray:
@@ -168,7 +168,7 @@ class Search:
             best = self.state.best(self.left(group), False, self._mask(group))
             if best is None or best.score < sum(self._in_turn(group)) - _MERGE_SLACK:
                 continue
-            if any(_overlap(f, best) == 0.0 for f in group):
+            if any(common_part(f, best) == 0.0 for f in group):
                 continue
             earlier = [f.previous for f in group if f.previous is not None]
             keep = [f for f in self.found if all(f is not g for g in group)]
@@ -244,13 +244,7 @@ class Search:
 
 def _twins(new: Found, old: Found) -> bool:
     """Whether two effects are the same level at the same time."""
-    return new.candidate.key == old.candidate.key and _overlap(new, old) > 0.5
-
-
-def _overlap(a: Found, b: Found) -> float:
-    """Share of the smaller effect's cells that the two have in common."""
-    common = np.intersect1d(a.fit.cells, b.fit.cells, assume_unique=True).size
-    return float(common / max(min(len(a.fit.cells), len(b.fit.cells)), 1))
+    return new.candidate.key == old.candidate.key and common_part(new, old) > 0.5
 
 
 def _onsets_meet(a: Found, b: Found) -> bool:

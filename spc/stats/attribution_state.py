@@ -249,8 +249,15 @@ class State:
         return found
 
     def _preferred(self, found: list[Found]) -> Found:
-        """The best score wins; of levels that are one thing under two names the earlier column."""
+        """The best score wins; of levels that are one thing under two names the earlier column.
+
+        What is still on is preferred to what would have to have ended by itself meanwhile.
+        """
         best = max(found, key=lambda f: f.score)
+        if np.isfinite(best.profile.shape.end):
+            lasting = [f for f in found if not np.isfinite(f.profile.shape.end)]
+            lasting = [f for f in lasting if common_part(best, f) > 0.5]
+            best = max(lasting, key=lambda f: f.score, default=best)
         twins = [
             f
             for f in found
@@ -367,6 +374,12 @@ def jaccard(a: IntArray, b: IntArray) -> float:
     """Return the share of the cells of either set that is in both."""
     common = np.intersect1d(a, b, assume_unique=True).size
     return float(common / max(len(a) + len(b) - common, 1))
+
+
+def common_part(a: Found, b: Found) -> float:
+    """Share of the smaller effect's cells that the two have in common."""
+    common = np.intersect1d(a.fit.cells, b.fit.cells, assume_unique=True).size
+    return float(common / max(min(len(a.fit.cells), len(b.fit.cells)), 1))
 
 
 def _plans(
