@@ -23,11 +23,13 @@ _REASONS = (("gauge",), ("tool",), ("tool", "module"), ("module",))
 
 @dataclass(frozen=True)
 class Seen:
-    """A stream that could fall silent: its columns, and whether it has."""
+    """A stream that could fall silent: its columns, whether it has, and when each gauge last
+    measured it (us)."""
 
     stream_id: int
     columns: dict[str, str]
     silent: bool
+    gauges: dict[str, int]
 
 
 @dataclass(frozen=True)
@@ -51,8 +53,9 @@ class SilentGroup:
 def group_silent(silent: Sequence[SilentStream], seen: Sequence[Seen]) -> list[SilentGroup]:
     """Explain who fell silent by as few reasons as possible.
 
-    A reason explains its silent streams only if none of its streams still reports; of those that
-    do, the one with most silent streams comes first, a gauge before a tool before a module.
+    A reason explains its silent streams only if none of its streams still reports, and a gauge only
+    if it has measured nothing else since; of those that do, the one with most silent streams comes
+    first, a gauge before a tool before a module.
     """
     left = {s.stream_id: s for s in silent}
     groups = []
@@ -83,7 +86,9 @@ def _best_reason(
             key = _key(stream.columns, factors)
             if key is not None and key not in alive:
                 by_level.setdefault(key, []).append(stream)
-        found += [(-len(m), rank, factors, key, m) for key, m in by_level.items()]
+        for key, members in by_level.items():
+            if factors != ("gauge",) or not _still_measures(key[0], members, seen):
+                found.append((-len(members), rank, factors, key, members))
     if not found:
         return None
     found.sort(key=lambda f: (f[0], f[1], f[3]))
@@ -97,13 +102,21 @@ def _best_reason(
     return factors, levels, members, aliases
 
 
+def _still_measures(gauge: str, members: list[SilentStream], seen: Sequence[Seen]) -> bool:
+    """Whether a gauge measured another stream well after the last reading of those it is to have
+    silenced: the newest wafers of all others may by chance have been on other gauges."""
+    patience = min(m.expected_every.total_seconds() for m in members) * 1e6
+    after = max(m.last_measured_us for m in members) + 0.5 * patience
+    return any(s.gauges.get(gauge, 0) > after for s in seen if not s.silent)
+
+
 def seen_streams(
     connection: Connection, plan: ControlPlan, silent: Sequence[SilentStream]
 ) -> list[Seen]:
     """Every stream of the characteristics that expect readings."""
     quiet = {s.stream_id for s in silent}
     return [
-        Seen(one.stream_id, one.columns, one.stream_id in quiet)
+        Seen(one.stream_id, one.columns, one.stream_id in quiet, one.gauges)
         for c in plan.characteristic
         if c.expected_every is not None
         for one in plotted.last_seen(connection, c.name)

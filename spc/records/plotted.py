@@ -52,13 +52,15 @@ def rows(connection: Connection, wanted: Wanted) -> Sequence[Row[Any]]:
 
 @dataclass(frozen=True)
 class LastSeen:
-    """The newest wafer of a stream: when it was measured and processed, and its context."""
+    """The newest wafer of a stream: when it was measured and processed, and its context; and when
+    each gauge last measured one of its newest wafers."""
 
     stream_id: int
     context: dict[str, str]
     measured_us: int
     at_us: int
     columns: dict[str, str]
+    gauges: dict[str, int]
 
 
 def last_seen(connection: Connection, characteristic: str) -> list[LastSeen]:
@@ -80,13 +82,16 @@ def last_seen(connection: Connection, characteristic: str) -> list[LastSeen]:
             .limit(_NEWEST)
             .subquery()
         )
-        row = connection.execute(
+        rows = connection.execute(
             select(newest.c.measured_us, newest.c.at_us, contexts.c.columns)
             .join(contexts, contexts.c.id == newest.c.context_id)
             .order_by(newest.c.measured_us.desc(), newest.c.at_us.desc())
-            .limit(1)
-        ).one_or_none()
-        if row is not None:
+        ).all()
+        gauges: dict[str, int] = {}
+        for one in rows:
+            gauges.setdefault(json.loads(one.columns).get("gauge", ""), one.measured_us)
+        if rows:
+            row = rows[0]
             found.append(
                 LastSeen(
                     stream.id,
@@ -94,6 +99,7 @@ def last_seen(connection: Connection, characteristic: str) -> list[LastSeen]:
                     row.measured_us,
                     row.at_us,
                     json.loads(row.columns),
+                    {name: stamp for name, stamp in gauges.items() if name},
                 )
             )
     return found
