@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from datetime import timedelta
 from typing import Any
 
@@ -49,9 +49,14 @@ class _Causes:
         options = AttributionOptions(alpha=min(1.0, budget * EFFECT_SHARE))
         found = attribute(self._case.evidence, options, self._book.as_of.timestamp())
         explained: pd.Index[int] = pd.Index([], dtype="int64")
-        for effect in found:
+        connection, now_us = self._book.connection, self._book.now_us
+        payloads = [
+            effect_payload.payload_of(connection, self._case, effect, now_us) for effect in found
+        ]
+        same = continued(found, payloads, known, now_us)
+        for i, (effect, payload) in enumerate(zip(found, payloads, strict=True)):
             rows = affected_rows(self._case, effect)
-            if self._keep_effect(effect, rows, known):
+            if self._keep_effect(effect, rows, payload, same.get(i)):
                 explained = explained.union(self._explains(effect, rows))
         return explained
 
@@ -70,14 +75,12 @@ class _Causes:
         inside &= (points["at_us"] >= span.first_us) & (points["at_us"] <= span.last_us)
         return points.index[inside]
 
-    def _keep_effect(self, effect: Effect, rows: pd.DataFrame, known: list[Excursion]) -> bool:
+    def _keep_effect(
+        self, effect: Effect, rows: pd.DataFrame, payload: dict[str, Any], same: Excursion | None
+    ) -> bool:
         """Keep an effect: as the excursion it goes on as, or as a new one if it rests on something
         that this pass is the first to see. Returns whether it is kept."""
-        payload = effect_payload.payload_of(
-            self._book.connection, self._case, effect, self._book.now_us
-        )
         form = form_of(self._book.connection, self._case, effect, rows)
-        same = self._same(effect, payload, known)
         if same is None:
             before = self._book.before_us
             if before is not None and not (rows["measured_us"] > before).any():
@@ -91,24 +94,6 @@ class _Causes:
             self._book.update(same, "act", form, payload)
             self._merge_loose(same.id, payload)
         return True
-
-    def _same(
-        self, effect: Effect, payload: dict[str, Any], known: list[Excursion]
-    ) -> Excursion | None:
-        """The excursion that an effect continues: under its own level while their spans meet, or
-        under another level with most of its streams and an onset that meets."""
-        mine = stream_keys(payload)
-        free = [one for one in known if one.id not in self._book.touched]
-        for one in free:
-            named = _level_of(one.payload["engine"]) == effect.level
-            if named and _spans_meet(payload, one.payload, self._book.now_us):
-                return one
-        for one in free:
-            theirs = stream_keys(one.payload)
-            common = len(mine & theirs) / max(min(len(mine), len(theirs)), 1)
-            if common >= 0.5 and _overlap(payload["onset"], one.payload["onset"]):
-                return one
-        return None
 
     def _merge_loose(self, number: int, payload: dict[str, Any]) -> None:
         """Watched signals that the effect explains become part of it."""
@@ -141,6 +126,49 @@ class _Causes:
                 self._book.update(same, loose.tier, same.pattern, kept)
             elif loose.identity not in closed | merged:
                 self._book.open(loose.tier, pattern, loose.identity, payload)
+
+
+def continued(
+    effects: Sequence[Effect],
+    payloads: Sequence[dict[str, Any]],
+    known: Sequence[Excursion],
+    now_us: int,
+) -> dict[int, Excursion]:
+    """The excursion that each effect continues, by position; each excursion goes on once.
+
+    First under its own level while their spans meet; then under another level with most of its
+    streams and an onset that meets; last what a longer effect on most of its streams has swallowed:
+    what looked over has come back, and was only the beginning.
+    """
+
+    def most_streams(payload: dict[str, Any], one: Excursion) -> bool:
+        mine, theirs = stream_keys(payload), stream_keys(one.payload)
+        return len(mine & theirs) / max(min(len(mine), len(theirs)), 1) >= 0.5
+
+    def by_level(i: int, one: Excursion) -> bool:
+        named = _level_of(one.payload["engine"]) == effects[i].level
+        return named and _spans_meet(payloads[i], one.payload, now_us)
+
+    def by_streams(i: int, one: Excursion) -> bool:
+        meets = _overlap(payloads[i]["onset"], one.payload["onset"])
+        return meets and most_streams(payloads[i], one)
+
+    def swallowed(i: int, one: Excursion) -> bool:
+        end, ends = one.payload.get("end_us"), payloads[i].get("end_us") or now_us
+        over = one.status != "closed" and end is not None and end <= ends
+        begins = payloads[i]["onset"]["earliest_us"] <= one.payload["onset"]["latest_us"]
+        return over and begins and most_streams(payloads[i], one)
+
+    found: dict[int, Excursion] = {}
+    for rule in (by_level, by_streams, swallowed):
+        for i in range(len(effects)):
+            taken = {one.id for one in found.values()}
+            if i not in found:
+                fits = (one for one in known if one.id not in taken and rule(i, one))
+                same = next(fits, None)
+                if same is not None:
+                    found[i] = same
+    return found
 
 
 def _spans_meet(a: dict[str, Any], b: dict[str, Any], now_us: int) -> bool:
