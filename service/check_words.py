@@ -75,9 +75,9 @@ def _sentences(found: AlarmBudget, zone: tzinfo) -> list[str]:
         if total.events > found.budget
         else f"Signals that follow each other on one chart are one thing: {_number(total.events)} "
         f"false excursions a night, within the alarm budget of {found.budget:g}.",
-        "They are watched, not acted on: the causes that the nightly pass finds may be false "
-        f"{found.effects_allowed:g} times a night, of the budget of "
-        f"{found.budget:g}.",
+        "They are watched, not acted on: one look for causes may expect "
+        f"{found.effects_allowed:g} false ones in all that it sees, within the budget of "
+        f"{found.budget:g} a night; new ones a night are fewer, since looks share their data.",
     ]
     residuals = sum(one.chart.residuals for one in found.charts)
     if residuals:

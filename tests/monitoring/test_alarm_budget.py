@@ -295,7 +295,7 @@ class TestBudget:
             found = budget(connection, bay_with(THICKNESS), NOW)
         assert found.points_per_night == pytest.approx(5.0)
         assert found.budget == 0.5
-        assert found.effects_allowed == 0.25
+        assert found.effects_allowed == 0.5
         assert found.false_rate_per_point == pytest.approx(0.05)
         arls = [choice.arl for choice in found.designs]
         assert arls == sorted(arls)

@@ -209,7 +209,7 @@ class TestBudget:
         assert thickness["by_rule"]["beyond-3s"] == pytest.approx(20 * 0.0062087, rel=1e-4)
         assert cd["points_per_night"] == cd["expected_false_signals"] == 0
         assert len(said["streams"]) == 10
-        assert said["false_act_excursions_allowed"] == 0.25
+        assert said["false_act_excursions_allowed"] == 0.5
         assert {d["family"] for d in said["designs"]} == {"limits", "run rules", "EWMA", "CUSUM"}
         # 0.5 a night of 20 points: once in 40 points.
         assert all(d["arl0"] >= 40.0 and d["shift"] == 1.0 for d in said["designs"])
