@@ -9,12 +9,12 @@ from __future__ import annotations
 
 import hashlib
 import struct
-from collections.abc import Callable, Iterator, Sequence
+from collections.abc import Callable, Iterable, Iterator, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
-from sqlalchemy import Connection, Engine, Table, func, insert, select
+from sqlalchemy import Connection, Engine, Table, bindparam, func, insert, select, update
 
 from spc.records.retention_tables import metadata  # of all tables, these included
 from spc.records.sessions import open_database, reading
@@ -57,14 +57,37 @@ def copy_database(
                 )
         for number, table in enumerate(tables):
             progress(f"copying {table.name}", number, len(tables))
-            for rows in _chunks(origin, table):
-                connection.execute(insert(table), rows)
+            _fill(connection, table, _chunks(origin, table))
             _advance_sequence(connection, table)
             here, there = checksum(origin, table), checksum(connection, table)
             if here != there:
                 raise TransferError(f"{table.name} differs after the copy: {here} and {there}")
             copies.append(TableCopy(table.name, here[0], here[1]))
     return tuple(copies)
+
+
+def _fill(connection: Connection, table: Table, chunks: Iterable[Sequence[dict[str, Any]]]) -> None:
+    """Insert rows; a column that names a row of the same table is set when all of them are there,
+    since an excursion may be merged into a later one."""
+    own = [c.name for c in table.columns if any(f.column.table is table for f in c.foreign_keys)]
+    keys = [column.name for column in table.primary_key]
+    later: list[dict[str, Any]] = []
+    for rows in chunks:
+        if own:
+            later += [dict(row) for row in rows if any(row[name] is not None for name in own)]
+            rows = [{**row, **dict.fromkeys(own)} for row in rows]
+        connection.execute(insert(table), rows)
+    if later:
+        where = [table.c[name] == bindparam(f"key_{name}") for name in keys]
+        values = {name: bindparam(f"new_{name}") for name in own}
+        connection.execute(
+            update(table).where(*where).values(values),
+            [
+                {f"key_{name}": row[name] for name in keys}
+                | {f"new_{name}": row[name] for name in own}
+                for row in later
+            ],
+        )
 
 
 def backup(source: Engine, file: Path, progress: Progress = lambda _w, _d, _t: None) -> int:

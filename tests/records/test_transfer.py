@@ -8,9 +8,9 @@ from pathlib import Path
 import pytest
 from sqlalchemy import Engine, select
 
-from spc.records import actions
+from spc.records import actions, findings
 from spc.records.sessions import open_database
-from spc.records.tables import baselines, files, points, streams
+from spc.records.tables import baselines, excursions, files, points, streams
 from spc.records.transfer import TransferError, backup, copy_database
 
 NOW = datetime(2026, 11, 30, tzinfo=UTC)
@@ -71,6 +71,20 @@ def test_a_target_with_rows_is_refused_and_left_alone(engine: Engine, tmp_path: 
     fill(other)
     with pytest.raises(TransferError, match="has rows in"):
         copy_database(engine, other)
+
+
+def test_an_excursion_merged_into_a_later_one_is_copied(engine: Engine, tmp_path: Path) -> None:
+    with engine.begin() as connection:
+        for identity in ("stream:1", "stream:2", "effect:tool:T1"):
+            findings.opened(
+                connection, tier="watch", pattern="shift", identity=identity, as_of=NOW, payload={}
+            )
+        findings.set_merged(connection, 1, 3)
+    backup(engine, tmp_path / "bay.backup")
+    saved = open_database(f"sqlite:///{tmp_path}/bay.backup")
+    with saved.connect() as connection:
+        rows = connection.execute(select(excursions.c.id, excursions.c.merged_into)).all()
+    assert [tuple(row) for row in rows] == [(1, 3), (2, None), (3, None)]
 
 
 def test_numbering_goes_on_after_a_move(engine: Engine, tmp_path: Path) -> None:
