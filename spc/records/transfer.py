@@ -79,7 +79,7 @@ def _fill(connection: Connection, table: Table, chunks: Iterable[Sequence[dict[s
         connection.execute(insert(table), rows)
     if later:
         where = [table.c[name] == bindparam(f"key_{name}") for name in keys]
-        values = {name: bindparam(f"new_{name}") for name in own}
+        values: dict[str, Any] = {name: bindparam(f"new_{name}") for name in own}
         connection.execute(
             update(table).where(*where).values(values),
             [
