@@ -266,7 +266,10 @@ def main() -> None:
     else:
         with postgres() as (url, server):
             found = run(prepare(options.folder, options.nights, url, server))
+            json.dump(found, sys.stdout)
+            sys.stdout.flush()
             keep_a_copy(url, options.folder / "copy.backup")
+        return
     json.dump(found, sys.stdout)
 
 
