@@ -94,7 +94,9 @@ def _columns_of_wafers(
         step = step_name(mine) if "step" in mine else ""
         both = {**contexts.columns(steps), **mine}
         if step:
-            twins = {f"{step}.{k}": v for k, v in mine.items() if k not in ("layer", "product")}
+            # The gauge belongs to the reading, not to the step that it tells of.
+            bare = ("layer", "product", "gauge")
+            twins = {f"{step}.{k}": v for k, v in mine.items() if k not in bare}
             both = {**both, **twins}
         columns.append({k: v for k, v in both.items() if k.rpartition(".")[2] not in _NO_FACTOR})
         own.append(step)

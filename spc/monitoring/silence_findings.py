@@ -147,6 +147,9 @@ def payload_of(
 ) -> dict[str, Any]:
     """What is kept of a silence (see the contract's `excursions`)."""
     last = max(s.last_measured_us for s in group.streams)
+    # A gauge falls silent when it measures no more, a tool with its first wafer not measured.
+    of_gauge = group.factors == ("gauge",)
+    begin = last if of_gauge else max(s.last_at_us for s in group.streams)
     lots = _unmeasured(connection, plan, group, as_of_us)
     suspects = []
     if group.factors:
@@ -165,15 +168,15 @@ def payload_of(
             for s in sorted(group.streams, key=lambda s: (s.characteristic, s.stream_id))
         ],
         "onset": {
-            "estimate_us": last,
-            "earliest_us": last,
-            "latest_us": max(last, min(s.silent_since_us for s in group.streams)),
+            "estimate_us": begin,
+            "earliest_us": begin,
+            "latest_us": max(begin, min(s.silent_since_us for s in group.streams)),
             "lot": lots[0]["lot"] if lots else None,
         },
         "magnitude": {"value": None, "low": None, "high": None, "unit": None, "sigmas": None},
         "suspects": suspects,
         "lots_at_risk": lots,
-        "events": events_near(connection, last, last),
+        "events": events_near(connection, begin, last),
         "forecast": None,
         "end_us": None,
         "silent_hours": round((as_of_us - last) / 3.6e9, 2),
