@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 import os
+import sqlite3
+import time
 from collections.abc import Iterator
 from contextlib import contextmanager
 from pathlib import Path
@@ -89,12 +91,26 @@ def _engine(url: str, pool_size: int, timeout: float) -> Engine:
 def _sqlite_pragmas(connection: Any, _record: Any) -> None:
     connection.isolation_level = None
     cursor = connection.cursor()
-    cursor.execute("PRAGMA journal_mode=WAL")
+    _use_wal(cursor)
     cursor.execute("PRAGMA synchronous=NORMAL")
     cursor.execute("PRAGMA foreign_keys=ON")
     cursor.execute("PRAGMA cache_size=-65536")
     cursor.execute("PRAGMA temp_store=MEMORY")
     cursor.close()
+
+
+def _use_wal(cursor: Any) -> None:
+    """Turn the write-ahead log on. SQLite does not wait for others who turn it on for a new
+    database at the same moment; we do."""
+    for wait in (0.01, 0.02, 0.05, 0.1, 0.2, 0.5, 1.0, 2.0, 5.0):
+        try:
+            cursor.execute("PRAGMA journal_mode=WAL")
+            return
+        except sqlite3.OperationalError as error:
+            if "locked" not in str(error) and "busy" not in str(error):
+                raise
+        time.sleep(wait)
+    cursor.execute("PRAGMA journal_mode=WAL")
 
 
 def _sqlite_begin(connection: Any) -> None:
