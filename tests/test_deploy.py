@@ -16,6 +16,7 @@ from pathlib import Path
 import pytest
 
 from service.cli import COMMANDS
+from tests.conftest import skip_or_fail
 
 ROOT = Path(__file__).resolve().parents[1]
 CONTAINER = (ROOT / "deploy" / "Containerfile").read_text("utf-8")
@@ -117,7 +118,7 @@ def test_the_unit_has_no_privileges(unit: dict[str, str]) -> None:
 
 def analyze(*words: str) -> subprocess.CompletedProcess[str]:
     if shutil.which("systemd-analyze") is None:
-        pytest.skip("systemd-analyze is not on this machine (Debian: apt-get install systemd)")
+        skip_or_fail("systemd-analyze is not on this machine (Debian: apt-get install systemd)")
     command = ["systemd-analyze", *words]
     return subprocess.run(command, capture_output=True, text=True, check=False)
 

@@ -21,6 +21,9 @@ PREFERENCE = ("tool", "module", "reticle", "gauge", "resist_batch", "recipe")
 # A column of which nearly every lot has its own value names lots, not causes.
 _MOST_LEVELS = 400
 _LEAST_LOTS_A_LEVEL = 1.5
+# What a lot is belongs to no step of it; the gauge belongs to the reading, not to the step that it
+# tells of.
+_OF_NO_STEP = frozenset({"layer", "product", "gauge"})
 _NO_FACTOR = frozenset({"step", "lot", "wafer", "site"})
 
 
@@ -94,9 +97,7 @@ def _columns_of_wafers(
         step = step_name(mine) if "step" in mine else ""
         both = {**contexts.columns(steps), **mine}
         if step:
-            # The gauge belongs to the reading, not to the step that it tells of.
-            bare = ("layer", "product", "gauge")
-            twins = {f"{step}.{k}": v for k, v in mine.items() if k not in bare}
+            twins = {f"{step}.{k}": v for k, v in mine.items() if k not in _OF_NO_STEP}
             both = {**both, **twins}
         columns.append({k: v for k, v in both.items() if k.rpartition(".")[2] not in _NO_FACTOR})
         own.append(step)
