@@ -12,6 +12,8 @@ from reports.sentences import rule_words, rules_words
 from reports.style import light
 from reports.texts import plural, shown, text
 
+_BOLD = 0.56  # mean width of a bold letter, in sizes of the type
+
 
 def word_above(alt: Any, frame: Frame, at: float, word: str, role: str) -> Any:
     """A word above the plot, at a place in time."""
@@ -75,7 +77,8 @@ def broken_rules(alt: Any, frame: Frame, places: Sequence[float]) -> list[Any]:
         free = (y + k * step * sign for k in range(6) for sign in ((-1, 1) if above else (1, -1)))
         y = next((c for c in free if c > 4 and all(abs(c - o) >= step for o in used)), y)
         used.append(y)
-        words = {"t": places[i], "w": " + ".join(rule_words(rule) for rule in rules[:2])}
+        room = {-9: at, 9: 1.0 - at}.get(side, 2.0 * min(at, 1.0 - at)) * frame.size.width - 9
+        words = {"t": places[i], "w": _fitting(rules, room / (_BOLD * frame.size.font))}
         align = "right" if side < 0 else "left" if side else "center"
         look = {"align": align, "dx": side, "y": y, "fontSize": frame.size.font, "aria": False}
         base = alt.rows([words])
@@ -87,6 +90,16 @@ def broken_rules(alt: Any, frame: Frame, places: Sequence[float]) -> list[Any]:
                 )
             )
     return charts
+
+
+def _fitting(rules: Sequence[str], letters: float) -> str:
+    """Two rules in words, one, or one in short, whichever there is room for."""
+    forms = (
+        " + ".join(rule_words(rule) for rule in rules[:2]),
+        rule_words(rules[0]),
+        rule_words(rules[0], short=True),
+    )
+    return next((form for form in forms if len(form) <= letters), forms[-1])
 
 
 def event_marks(alt: Any, frame: Frame) -> list[Any]:

@@ -34,11 +34,15 @@ _RULES = (
 )
 
 
-def rule_words(rule: str) -> str:
-    """A rule in words: `2of3-beyond-2s` is `2 of 3 beyond 2 sigma on one side`."""
+def rule_words(rule: str, *, short: bool = False) -> str:
+    """A rule in words: `2of3-beyond-2s` is `2 of 3 beyond 2 sigma on one side`.
+
+    `short` leaves out what goes without saying where there is little room.
+    """
     for pattern, key in _RULES:
         if match := pattern.fullmatch(rule):
-            return text(key, **match.groupdict())
+            brief = f"{key}-short"
+            return text(brief if short and has(brief) else key, **match.groupdict())
     return text(f"rule.{rule}") if has(f"rule.{rule}") else rule.replace("-", " ")
 
 

@@ -122,3 +122,8 @@ def test_hostile_names_cannot_turn_a_sentence_round() -> None:
     said = sentence(samples.excursion(streams=streams), CLOCK)
     assert "\u202e" not in said
     assert "U+202E" in said
+
+
+def test_a_rule_is_said_in_short_where_there_is_little_room() -> None:
+    assert rule_words("2of3-beyond-2s", short=True) == "2 of 3 beyond 2 sigma"
+    assert rule_words("beyond-3s", short=True) == "beyond 3 sigma"
